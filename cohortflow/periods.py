@@ -36,8 +36,8 @@ class Calendar:
     """How dates fall into periods.
 
     Parameters
-    ----------
-    kind : "day", "week", "month", "quarter", "year", "step" (plain integers) or "own" (rows of a calendar file)
+    ----
+    kind : "day", "week", "month", "quarter", "year", "step" (plain integers) or "own" (a calendar file)
     week_starts : first day of the week
     fiscal_year_start : month (1..12) in which the fiscal year begins; quarters and years follow it
     own : for kind "own": (label, first day, last day) rows in order, without gaps
@@ -64,7 +64,7 @@ class Calendar:
         if self.kind == "own":
             _check_own(self.own)
 
-    # ---- dates to ordinals -------------------------------------------------------------------------
+    # ---- dates to ordinals ----
     def ordinals(self, days: np.ndarray) -> np.ndarray:
         """Ordinal of the period that each day (datetime64[D], NaT allowed -> CallError) falls in; int64.
 
@@ -110,7 +110,7 @@ class Calendar:
         """Number of days of a period."""
         return (self.end(ordinal) - self.start(ordinal)).days + 1
 
-    # ---- labels --------------------------------------------------------------------------------------
+    # ---- labels ----
     def label(self, ordinal: int) -> str:
         """2026-09-30, 2026-W39, 2026-09, 2026-Q3, 2026, or the plain integer of a step."""
         if self.kind == "step":
@@ -159,7 +159,7 @@ class Calendar:
         except ValueError:
             return None
 
-    # ---- place in the year -----------------------------------------------------------------------------
+    # ---- place in the year ----
     @property
     def per_year(self) -> float:
         """Periods in a year (NaN for steps)."""
@@ -174,7 +174,7 @@ class Calendar:
         return max(1, round(self.per_year)) if self.kind == "own" else _CYCLE.get(self.kind, 1)
 
     def position(self, ordinal: int) -> int:
-        """Place in the season's cycle, 0 .. cycle-1 (January, first quarter, first week, first weekday = 0)."""
+        """Place in the season's cycle, 0 .. cycle-1 (January, first quarter, first week = 0)."""
         if self.cycle == 1 or self.kind == "own":
             return int(ordinal) % self.cycle
         if self.kind == "week":
@@ -187,14 +187,16 @@ class Calendar:
         """Fiscal year that a period ends in: "2026" or, when it begins within a calendar year, "2026/27"."""
         last = self.end(ordinal)
         first_year = last.year - (last.month < self.fiscal_year_start)
-        return str(first_year) if self.fiscal_year_start == 1 else f"{first_year}/{(first_year + 1) % 100:02d}"
+        if self.fiscal_year_start == 1:
+            return str(first_year)
+        return f"{first_year}/{(first_year + 1) % 100:02d}"
 
     def fiscal_quarter(self, ordinal: int) -> str:
         """Fiscal quarter that a period ends in, for instance "2026/27 Q2"."""
         quarter = (self.end(ordinal).month - self.fiscal_year_start) % 12 // 3 + 1
         return f"{self.fiscal_year(ordinal)} Q{quarter}"
 
-    # ---- inner ---------------------------------------------------------------------------------------------
+    # ---- inner ----
     @cached_property
     def _week_origin(self) -> int:
         """Days from 1970-01-01 (a Thursday) to a day on which the week starts."""

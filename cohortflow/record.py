@@ -1,4 +1,4 @@
-"""The manners that every result shares: `.to_frame()`, `.to_dict()`, a short repr, an escaped HTML display."""
+"""The manners that every result shares: `.to_frame()`, `.to_dict()`, a short repr, a safe HTML display."""
 
 from __future__ import annotations
 
