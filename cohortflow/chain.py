@@ -16,7 +16,7 @@ import numpy as np
 import pandas as pd
 
 from cohortflow.errors import CallError, NotIdentified, listed
-from cohortflow.markov import check_stochastic
+from cohortflow.markov.arguments import ROW_TOLERANCE
 from cohortflow.periods import Calendar
 from cohortflow.record import Record, frozen_array
 from cohortflow.states import States
@@ -177,9 +177,7 @@ class Chain(Record):
     period: Calendar
     kind: ClassVar[str] = "chain"
 
-    def __init__(
-        self, states: States, matrix: Any, *, period: str | Calendar = "month"
-    ) -> None:
+    def __init__(self, states: States, matrix: Any, *, period: str | Calendar = "month") -> None:
         values = matrix.to_numpy(dtype=float) if isinstance(matrix, pd.DataFrame) else matrix
         object.__setattr__(self, "states", states)
         object.__setattr__(self, "matrix", frozen_array(values))
@@ -189,12 +187,15 @@ class Chain(Record):
     def _check(self) -> None:
         size = len(self.states)
         if self.matrix.shape != (size, size):
-            raise CallError(
-                f"The matrix of {size} states must be {size} x {size}; it is {self.matrix.shape}."
-            )
+            raise CallError(f"The matrix of {size} states must be {size} x {size}; it is {self.matrix.shape}.")
         known = ~np.isnan(self.matrix).any(axis=1)
         filled = np.where(known[:, None], self.matrix, np.eye(size))
-        check_stochastic(filled, names=self.states.names)
+        for name, row in zip(self.states.names, filled, strict=True):
+            if not (row.min() >= 0 and abs(row.sum() - 1) <= ROW_TOLERANCE):
+                raise CallError(
+                    f'The row of "{name}" is not a probability row: smallest entry {row.min():.6g}, sum '
+                    f"{row.sum():.12g}. Entries must be at least 0 and each row must sum to 1."
+                )
         for row, column in np.argwhere((filled > 0) & ~self.states.allowed & known[:, None]):
             a, b = self.states.names[row], self.states.names[column]
             why = "an exit is absorbing" if a in self.states.exits else "the move is declared impossible"

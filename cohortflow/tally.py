@@ -73,7 +73,8 @@ class Meta:
     """What the tables mean; two tallies add only when their `definitions` agree.
 
     first, last : ordinals of the first and the last complete period of the window
-    segment_columns : (name, role) with role segment | attribute | arm; segments : one tuple of values a code
+    segment_columns : (name, role) with role segment | attribute | arm
+    segments : one tuple of values a code, sorted, so that a code means the same however it was counted
     definitions : hash of states, rules, calendar, period, gap rule (whatever makes counts comparable)
     bucket_bits, sample_level : see the module text;  weight_scale, amount_scale : integers per unit
     tables : names of the tables that this source could fill (bare counts fill `moves` only)
