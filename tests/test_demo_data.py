@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from cohortflow.study import read_study
 from demo_data import members as scheme
 from demo_data.generate import generate, write
 
@@ -56,6 +57,13 @@ def test_the_columns_are_those_that_the_study_file_names(clean):
     spec = STUDY["input"]
     named = [spec[key] for key in ("event_id", "customer", "time", "event", "amount")]
     assert list(clean.columns) == [*named, *spec["segments"], *spec["attributes"], spec["arm"]]
+
+
+def test_the_study_file_is_accepted_and_names_the_states_of_the_generator():
+    study = read_study(DEMO / "veg_box.toml")
+    assert study.states.names == scheme.STATES
+    assert (study.states.exits, study.states.away) == (("cancelled", "card_lapsed"), ("paused",))
+    assert study.warm_up == 2  # the longest window of a rule: two silent months
 
 
 def test_tables_of_true_rates_are_probability_rows():
@@ -140,8 +148,8 @@ def test_boxes_follow_the_states(clean):
     counts = np.zeros(walk.shape, dtype=int)
     np.add.at(counts, (np.searchsorted(numbers, boxes["member"].to_numpy()), month.to_numpy()), 1)
     assert (counts[np.isin(walk, [scheme.QUIET, scheme.CARD_LAPSED, scheme.NOT_YET])] == 0).all()
-    # Wrong for a weekly member: two of four boxes skipped, 6 x .025^2 = .004, and more in months of resuming (one
-    # or two weeks may be over); for a fortnightly one: both boxes skipped, .0006, or one, with the first over.
+    # Wrong for a weekly member: two of four boxes skipped, 6 x .025^2 = .004, and more in months of resuming
+    # (a week or two may be over); for a fortnightly one: both boxes skipped, .0006, or one after the first.
     assert (counts[walk == scheme.WEEKLY] >= 3).mean() > 0.99
     assert np.isin(counts[walk == scheme.FORTNIGHTLY], [1, 2]).mean() > 0.995
     # Boxes in the month of cancelling stop with it: none in the months after.
