@@ -1,6 +1,7 @@
 """The study file: read, checked against its schema, frozen into a Study.
 
-schema.py     the records          source.py     typed keys, and refusals that name file, line, table and key
+parts.py      the tables as records  whole.py      the Study they make together
+source.py     typed keys, and refusals that name file, line, table and key
 reading.py    the whole file       rules.py      `when` of the states, contradictions
 extract.py    [input], [events]    forecast.py   [totals] [model] [joiners] [value] [budget] [people]
 plans.py      scenarios, overlays  side_files.py calendar, planned joiners, budget
@@ -9,8 +10,7 @@ overrides.py  --set                data_file.py  a study made from a bare data f
 
 from cohortflow.study.data_file import default_study
 from cohortflow.study.overrides import apply_overrides
-from cohortflow.study.reading import read_study
-from cohortflow.study.schema import (
+from cohortflow.study.parts import (
     Adjustment,
     BudgetRow,
     ChangeSpec,
@@ -24,9 +24,10 @@ from cohortflow.study.schema import (
     PlannedJoiners,
     ScenarioSpec,
     StateRule,
-    Study,
     ValueSpec,
 )
+from cohortflow.study.reading import read_study
+from cohortflow.study.whole import Study
 
 __all__ = [
     "Adjustment",

@@ -11,8 +11,8 @@ from cohortflow.errors import CallError, InputError, listed, nearest
 from cohortflow.periods import Calendar
 from cohortflow.study.overrides import apply_overrides
 from cohortflow.study.reading import study_from
-from cohortflow.study.schema import Study
 from cohortflow.study.source import Source
+from cohortflow.study.whole import Study
 
 if TYPE_CHECKING:
     import pandas as pd

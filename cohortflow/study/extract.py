@@ -9,7 +9,7 @@ from collections.abc import Iterable, Sequence
 from cohortflow.errors import listed, nearest
 from cohortflow.record import frozen_mapping
 from cohortflow.states import States
-from cohortflow.study.schema import LAYOUTS, ON_GAP, OTHERS, EventSpec, InputSpec, StateRule
+from cohortflow.study.parts import LAYOUTS, ON_GAP, OTHERS, EventSpec, InputSpec, StateRule
 from cohortflow.study.source import REQUIRED, Table
 
 _COMMON = (

@@ -10,7 +10,7 @@ from cohortflow.errors import listed
 from cohortflow.periods import Calendar
 from cohortflow.record import frozen_mapping
 from cohortflow.states import ALL_LIVE, States
-from cohortflow.study.schema import (
+from cohortflow.study.parts import (
     JOINER_KINDS,
     JOINER_METHODS,
     MODELS,

@@ -6,7 +6,7 @@ from typing import Any
 
 from cohortflow.states import ALL_LIVE
 from cohortflow.study.forecast import Ground, amounts_by_state, later_than_base, move_of, repeated
-from cohortflow.study.schema import Adjustment, ChangeSpec, ScenarioSpec
+from cohortflow.study.parts import Adjustment, ChangeSpec, ScenarioSpec
 from cohortflow.study.source import Table
 
 SCENARIO_KEYS = (

@@ -15,10 +15,11 @@ from cohortflow.record import frozen_mapping
 from cohortflow.states import ALL_LIVE, ROLES, States
 from cohortflow.study import extract, forecast, plans
 from cohortflow.study.overrides import apply_overrides
+from cohortflow.study.parts import InputSpec, StateRule
 from cohortflow.study.rules import read_rules
-from cohortflow.study.schema import InputSpec, StateRule, Study
 from cohortflow.study.side_files import read_calendar
 from cohortflow.study.source import Source, Table, nearest_given, shown_value
+from cohortflow.study.whole import Study
 
 STUDY_KEYS = (
     "title",

@@ -7,7 +7,7 @@ from dataclasses import replace
 from typing import Any
 
 from cohortflow.errors import listed
-from cohortflow.study.schema import CONDITIONS, Condition, StateRule
+from cohortflow.study.parts import CONDITIONS, Condition, StateRule
 from cohortflow.study.source import Table, shown_value
 
 WHEN_KEYS = (*CONDITIONS, "of", "among", "within", "all")
