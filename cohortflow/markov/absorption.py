@@ -2,7 +2,7 @@ r"""How long until exit, which exit, and who is still there: chains with declare
 
 States that are not exits are `inside`; Q holds the moves among them, R the moves to exits.
 
-    N = (I - Q)^{-1}                          expected periods spent in column, from row (the first one counted)
+    N = (I - Q)^{-1}                          expected periods in column, from row (the first one counts)
     tau = N 1                                 mean periods until exit
     var = N s,  s_i = sum_k p_ik (tau_k - (tau_i - 1))^2    variance, tau of an exit read as 0
     B = N R                                   probability of each exit
@@ -23,7 +23,15 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from cohortflow.errors import CallError
-from cohortflow.markov.arguments import Array, Flags, check_states, check_steps, check_stochastic, read_only
+from cohortflow.markov.arguments import (
+    Array,
+    Flags,
+    check_states,
+    check_steps,
+    check_stochastic,
+    grid,
+    read_only,
+)
 from cohortflow.markov.elimination import eliminate
 from cohortflow.markov.passage import scatter
 from cohortflow.markov.powers import first_time
@@ -82,7 +90,7 @@ class Absorption:
         return self.quantile(0.5)
 
     def quantile(self, share: float) -> Array:
-        """(m,) first whole number of periods by which at least `share` has left; inf where that many never do.
+        """(m,) whole periods by which at least `share` has left; inf where that many never do.
 
         Shares equal to within 1e-12 count as reached.
 
@@ -107,7 +115,7 @@ class Absorption:
         >>> absorb([[0.5, 0.5], [0.0, 1.0]], exits=[1]).retention(2)[:, 0]
         array([1.  , 0.5 , 0.25])
         """
-        within = self.matrix[np.ix_(self.inside, self.inside)]
+        within = self.matrix[grid(self.inside, self.inside)]
         curve = np.ones((check_steps(steps) + 1, len(within)))
         for n in range(1, len(curve)):
             curve[n] = within @ curve[n - 1]
@@ -119,9 +127,9 @@ class Absorption:
         >>> absorb([[0.5, 0.5], [0.0, 1.0]], exits=[1]).distribution(3)[:, 0, 0]
         array([0.5  , 0.25 , 0.125])
         """
-        within = self.matrix[np.ix_(self.inside, self.inside)]
+        within = self.matrix[grid(self.inside, self.inside)]
         law = np.empty((check_steps(steps, least=1), len(self.inside), len(self.exits)))
-        law[0] = self.matrix[np.ix_(self.inside, self.exits)]
+        law[0] = self.matrix[grid(self.inside, self.exits)]
         for n in range(1, len(law)):
             law[n] = within @ law[n - 1]
         return law
@@ -145,8 +153,8 @@ def absorb(P: ArrayLike, exits: Iterable[int]) -> Absorption:
         onward = np.flatnonzero((matrix[state] > 0) & (np.arange(len(matrix)) != state))
         if onward.size:
             raise CallError(
-                f"state {state} is named as an exit but has moves to {onward.tolist()}: an exit is never left; "
-                "give returners a state of their own (away), or drop it from the exits"
+                f"state {state} is named as an exit but has moves to {onward.tolist()}: an exit is "
+                "never left; give returners a state of their own (away), or drop it from the exits"
             )
     return _solve(matrix, inside, out)
 
@@ -160,22 +168,22 @@ def _solve(matrix: Array, inside: tuple[int, ...], exits: tuple[int, ...]) -> Ab
     visits, chance = np.zeros_like(matrix), np.zeros((len(matrix), len(exits)))
     mean, spread = np.where(certain, 0.0, math.inf), np.where(certain, 0.0, math.nan)
     if passing:
-        block = np.ix_(passing, passing)
+        block = grid(passing, passing)
         steps = eliminate(matrix[block], np.delete(matrix[passing], passing, axis=1).sum(axis=1))
         visits[block] = steps.inverse()
-        chance[passing] = steps.solve(matrix[np.ix_(passing, exits)])
+        chance[passing] = steps.solve(matrix[grid(passing, exits)])
     for group in stuck:
-        visits[np.ix_(leads_to(moves, group), group)] = math.inf
+        visits[grid(np.flatnonzero(leads_to(moves, group)), group)] = math.inf
     leaving = [s for s in passing if certain[s]]
-    mean[leaving] = visits[np.ix_(leaving, leaving)].sum(axis=1)
+    mean[leaving] = visits[grid(leaving, leaving)].sum(axis=1)
     ahead = np.where(certain, mean, 0.0)
     around = scatter(matrix[leaving], ahead, ahead[leaving] - 1.0)
-    spread[leaving] = visits[np.ix_(leaving, leaving)] @ around
+    spread[leaving] = visits[grid(leaving, leaving)] @ around
     rows = list(inside)
     return Absorption(
         inside=inside,
         exits=exits,
-        visits=read_only(visits[np.ix_(rows, rows)]),
+        visits=read_only(visits[grid(rows, rows)]),
         mean_time=read_only(mean[rows]),
         variance_time=read_only(spread[rows]),
         exit_probability=read_only(chance[rows]),
@@ -194,6 +202,6 @@ def _caution(state: int, stuck: tuple[tuple[int, ...], ...], moves: Flags, ever:
     return Caution(
         state,
         "may_not_exit",
-        f"{where}: only {ever:.6g} ever leave, so the mean time to exit is infinite and its spread undefined; "
-        "declare the group an exit, or find the missing departures",
+        f"{where}: only {ever:.6g} ever leave, so the mean time to exit is infinite and its spread "
+        "undefined; declare the group an exit, or find the missing departures",
     )

@@ -63,8 +63,9 @@ def check_start(start: ArrayLike, states: int) -> Array:
     law = check_vector(start, states, name="start")
     if (law < 0).any() or abs(law.sum() - 1.0) > ROW_TOLERANCE:
         raise CallError(
-            f"start must be a law: no negative entry, sum 1; smallest entry {law.min():.6g}, sum {law.sum():.12g}. "
-            "Divide the opening counts by their total, or name one state by its index"
+            f"start must be a law, not negative and of sum 1; its smallest entry is {law.min():.6g} "
+            f"and its sum {law.sum():.12g}. Divide the opening counts by their total, "
+            "or name one state by its index"
         )
     return law
 
@@ -111,6 +112,15 @@ def check_steps(steps: int, *, name: str = "steps", least: int = 0) -> int:
     return int(steps)
 
 
+def grid(rows: Iterable[int], columns: Iterable[int]) -> Any:
+    """The index of a block of a matrix: these rows by these columns.
+
+    >>> np.arange(9).reshape(3, 3)[grid([0, 2], [1])].tolist()
+    [[1], [7]]
+    """
+    return np.ix_(np.array(list(rows), dtype=int), np.array(list(columns), dtype=int))
+
+
 def read_only(values: ArrayLike) -> Any:
     """An array that a frozen record can carry: nobody can write into it."""
     array = np.array(values)
@@ -121,13 +131,18 @@ def read_only(values: ArrayLike) -> Any:
 def _square(values: ArrayLike, name: str) -> Array:
     matrix = np.array(values, dtype=float)
     if matrix.ndim != 2 or matrix.shape[0] != matrix.shape[1] or matrix.size == 0:
-        raise CallError(f"{name} has shape {matrix.shape}; it must be a square matrix, row = from, column = to")
+        raise CallError(
+            f"{name} has shape {matrix.shape}; it must be a square matrix, row = from, column = to"
+        )
     for row in np.flatnonzero(~np.isfinite(matrix).all(axis=1)):
         raise CallError(
-            f"row {row} of {name} holds {matrix[row][~np.isfinite(matrix[row])][0]}: nothing is known about moves out of "
-            f"state {row}; give the row a prior, or leave out that state and every start that can reach it"
+            f"row {row} of {name} holds {matrix[row][~np.isfinite(matrix[row])][0]}: nothing is "
+            f"known about moves out of state {row}; give the row a prior, or leave out "
+            "that state and every start that can reach it"
         )
     for row in np.flatnonzero((matrix < 0).any(axis=1)):
         column = int(matrix[row].argmin())
-        raise CallError(f"{name}[{row}, {column}] is {matrix[row, column]:.6g}; a probability is never negative")
+        raise CallError(
+            f"{name}[{row}, {column}] is {matrix[row, column]:.6g}; a probability is never negative"
+        )
     return matrix

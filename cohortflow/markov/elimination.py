@@ -5,12 +5,12 @@ S_k = sum_{j<k} q_kj + e_k (moves on to states still in, plus the way out):
 
     q_ij <- q_ij + q_ik q_kj / S_k,     e_i <- e_i + q_ik e_k / S_k        (i, j < k; k = m-1, ..., 0)
 
-which factors  D - Q = U L  (D = row totals of moves and ways out), U unit upper, L lower triangular, both with
-non-positive off-diagonals. The diagonal 1 - q_kk is never formed, nothing is subtracted, and each entry of the
-inverse has a small relative error, even for couplings of 1e-12.
+which factors  D - Q = U L  (D: row totals of moves and ways out), U unit upper, L lower triangular, neither
+with a positive off-diagonal. The diagonal 1 - q_kk is never formed, nothing is subtracted, and each entry
+of the inverse has a small relative error, even for couplings of 1e-12.
 
-Source: Grassmann, Taksar & Heyman (1985), Operations Research 33(5); O'Cinneide (1993), Numerische Mathematik 65;
-Alfa, Xue & Ye (2002), Mathematics of Computation 71 (the case with a way out).
+Source: Grassmann, Taksar & Heyman (1985), Operations Research 33(5); O'Cinneide (1993), Numerische
+Mathematik 65; Alfa, Xue & Ye (2002), Mathematics of Computation 71 (the case with a way out).
 """
 
 from __future__ import annotations
@@ -23,14 +23,15 @@ from scipy.linalg import solve_triangular
 from cohortflow.markov.arguments import Array
 
 _LARGE = 1e150
-_PANEL = 32
+_PANEL = 16
 
 
 @dataclass(frozen=True, eq=False)
 class Elimination:
     """The factors of D - Q = U L for m states; every solve expects right-hand sides that are not negative.
 
-    >>> step = eliminate(np.array([[0.5, 0.2, 0.1], [0.3, 0.4, 0.1], [0.0, 0.6, 0.3]]), np.array([0.2, 0.2, 0.1]))
+    >>> moves = np.array([[0.5, 0.2, 0.1], [0.3, 0.4, 0.1], [0.0, 0.6, 0.3]])
+    >>> step = eliminate(moves, np.array([0.2, 0.2, 0.1]))
     >>> step.solve(np.ones(3)).round(6)            # mean periods until the way out is taken
     array([5.333333, 5.333333, 6.      ])
     """

@@ -8,7 +8,8 @@ T_ij = number of steps until the first arrival at j, at least 1; on the diagonal
 
 Solved by elimination without subtraction; infinite where arrival is not certain.
 
-Source: Kemeny & Snell (1960), Finite Markov Chains, ch. 4; Grinstead & Snell (1997), Introduction to Probability, ch. 11.
+Source: Kemeny & Snell (1960), Finite Markov Chains, ch. 4; Grinstead & Snell (1997), Introduction to
+Probability, ch. 11.
 """
 
 from __future__ import annotations
@@ -19,13 +20,13 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from cohortflow.errors import CallError
-from cohortflow.markov.arguments import Array, Flags, check_states, check_steps, check_stochastic
+from cohortflow.markov.arguments import Array, Flags, check_states, check_steps, check_stochastic, grid
 from cohortflow.markov.elimination import eliminate
 from cohortflow.markov.structure import leads_to, sure
 
 
 def mean_first_passage(P: ArrayLike) -> Array:
-    """m, shape (K, K), in periods: mean time from row to the first arrival at column; diagonal: mean return time.
+    """m, shape (K, K), in periods: mean time from row to first arrival at column; diagonal: mean return time.
 
     inf where the arrival is not certain.
 
@@ -58,10 +59,10 @@ def mean_time_to(P: ArrayLike, targets: Iterable[int]) -> Array:
     chosen = check_states(targets, len(matrix), name="targets")
     certain = sure(matrix > 0, chosen)
     times = np.where(certain, 0.0, np.inf)
-    out = [s for s in np.flatnonzero(certain) if s not in chosen]
+    out = [s for s in np.flatnonzero(certain).tolist() if s not in chosen]
     if out:
-        entering = matrix[np.ix_(out, chosen)].sum(axis=1)
-        times[out] = eliminate(matrix[np.ix_(out, out)], entering).solve(np.ones(len(out)))
+        entering = matrix[grid(out, chosen)].sum(axis=1)
+        times[out] = eliminate(matrix[grid(out, out)], entering).solve(np.ones(len(out)))
     return times
 
 
@@ -83,7 +84,7 @@ def first_passage_law(P: ArrayLike, target: int, *, steps: int) -> Array:
 
 
 def reach_probability(P: ArrayLike) -> Array:
-    """Probability, shape (K, K), of ever arriving at column from row, at step 1 or later; diagonal: of a return.
+    """Probability (K, K) of ever arriving at column from row, at step 1 or later; diagonal: of a return.
 
     >>> reach_probability([[0.5, 0.25, 0.25], [0.0, 1.0, 0.0], [0.0, 0.5, 0.5]])
     array([[0.5, 1. , 0.5],
@@ -95,7 +96,9 @@ def reach_probability(P: ArrayLike) -> Array:
     for target in range(len(matrix)):
         at_once = _hit(matrix, np.arange(len(matrix)) == target, np.zeros(len(matrix), dtype=bool))
         found[:, target] = at_once
-        found[target, target] = 1.0 if sure(matrix > 0, [target])[_next(matrix, target)].all() else matrix[target] @ at_once
+        found[target, target] = (
+            1.0 if sure(matrix > 0, [target])[_next(matrix, target)].all() else matrix[target] @ at_once
+        )
     return found
 
 
@@ -119,7 +122,7 @@ def hit_before(P: ArrayLike, first: Iterable[int], second: Iterable[int]) -> Arr
 
 
 def scatter(rows: Array, ahead: Array, centre: Array) -> Array:
-    """sum_k p_ik (ahead_k - centre_i)^2: variance, from one step to the next, of the time still to go; nothing cancels.
+    """sum_k p_ik (ahead_k - centre_i)^2: what one step adds to the variance of the time to go.
 
     >>> scatter(np.array([[0.5, 0.25, 0.25]]), np.array([0.0, 2.0, 4.0]), np.array([1.5]))
     array([2.75])
@@ -133,10 +136,10 @@ def _passages(matrix: Array) -> tuple[Array, Array]:
     for target in range(len(matrix)):
         certain = sure(moves, [target])
         out = np.flatnonzero(certain & (np.arange(len(matrix)) != target))
-        # `ahead` is the time still to go, 0 at the target itself; states that are not certain to arrive play no part
+        # `ahead` is the time still to go, 0 at the target; states that are not certain to arrive play no part
         ahead, spread = np.zeros(len(matrix)), np.zeros(len(matrix))
         if out.size:
-            steps = eliminate(matrix[np.ix_(out, out)], matrix[out, target])
+            steps = eliminate(matrix[grid(out, out)], matrix[out, target])
             ahead[out] = steps.solve(np.ones(out.size))
             spread[out] = steps.solve(scatter(matrix[out], ahead, ahead[out] - 1.0))
         means[out, target], variances[out, target] = ahead[out], spread[out]
@@ -162,6 +165,6 @@ def _hit(matrix: Array, wanted: Flags, other: Flags) -> Array:
     out = np.flatnonzero(hopeful & failing & ~wanted)
     if out.size:
         settled = np.setdiff1d(np.arange(len(matrix)), out)
-        leaving = matrix[np.ix_(out, settled)]
-        found[out] = eliminate(matrix[np.ix_(out, out)], leaving.sum(axis=1)).solve(leaving @ found[settled])
+        leaving = matrix[grid(out, settled)]
+        found[out] = eliminate(matrix[grid(out, out)], leaving.sum(axis=1)).solve(leaving @ found[settled])
     return found

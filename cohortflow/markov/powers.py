@@ -1,7 +1,7 @@
 """How long until something becomes true of a law: doubling the step, then halving it.
 
-P, P^2, P^4, ... are kept stochastic by dividing each row by its sum after every squaring, so that errors do not
-double with the step; a time of 10^12 periods takes 40 products.
+P, P^2, P^4, ... are kept stochastic by dividing each row by its sum after every squaring, so that errors
+do not double with the step; a time of 10^12 periods takes 40 products.
 """
 
 from __future__ import annotations

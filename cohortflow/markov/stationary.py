@@ -6,8 +6,9 @@ r"""Where a chain settles: stationary laws, limits, time averages, and how far t
     Z = D + A                        fundamental matrix, (I - P + 1 pi')^{-1} for one closed class
     K = tr Z                         Kemeny constant: sum_j pi_j m_ij + 1, the same for every start i
 
-Source: Grassmann, Taksar & Heyman (1985), Operations Research 33(5); Kemeny & Snell (1960), Finite Markov Chains,
-ch. 4-5; Meyer (1975), SIAM Review 17(3) (group inverse); Hunter (1982), Linear Algebra Appl. 45 (g-inverses).
+Source: Grassmann, Taksar & Heyman (1985), Operations Research 33(5); Kemeny & Snell (1960), Finite Markov
+Chains, ch. 4-5; Meyer (1975), SIAM Review 17(3) (group inverse); Hunter (1982), Linear Algebra Appl. 45
+(g-inverses).
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from cohortflow.errors import CallError, NotIdentified
-from cohortflow.markov.arguments import Array, check_start, check_stochastic
+from cohortflow.markov.arguments import Array, check_start, check_stochastic, grid
 from cohortflow.markov.elimination import eliminate
 from cohortflow.markov.powers import first_time
 from cohortflow.markov.structure import Structure, structure_of
@@ -28,7 +29,7 @@ _FINEST = 1e-12
 
 
 def stationary(P: ArrayLike) -> Array:
-    """The stationary law, shape (K,), of a chain with one closed class (periodic or not); 0 on transient states.
+    """The stationary law, shape (K,), of a chain with one closed class, periodic or not; 0 if transient.
 
     Each entry is accurate relative to its own size, also where classes are almost uncoupled.
     Raises NotIdentified when there are several closed classes.
@@ -39,8 +40,8 @@ def stationary(P: ArrayLike) -> Array:
     laws = stationary_laws(P)
     if len(laws) > 1:
         raise NotIdentified(
-            f"there are {len(laws)} closed classes, so no single stationary law: the long-run mix depends on the start; "
-            "ask stationary_laws for one law a class, or limit_from_start with a start"
+            f"there are {len(laws)} closed classes, so no single stationary law: the long-run mix depends on "
+            "the start; ask stationary_laws for one law a class, or limit_from_start with a start"
         )
     return laws[0]
 
@@ -125,8 +126,9 @@ def limit_from_start(P: ArrayLike, start: ArrayLike) -> Array:
 def deviation_matrix(P: ArrayLike) -> Array:
     """D = (I - P)^#, shape (K, K): extra expected time in column, over the long run's share, from row.
 
-    Built block by block. In a closed class D = (I - 1 pi') G (I - 1 pi'), with G the inverse of I - P without one
-    state; between transient states D = N = (I - Q)^{-1}; from them to a class D = N (R D_class - A).
+    Built block by block. In a closed class D = (I - 1 pi') G (I - 1 pi'), with G the inverse of I - P
+    without one state; between transient states D = N = (I - Q)^{-1}; from them to a class D = N (R
+    D_class - A).
 
     >>> deviation_matrix([[0.5, 0.5, 0.0], [0.25, 0.75, 0.0], [0.0, 0.5, 0.5]]).round(6)
     array([[ 0.888889, -0.888889,  0.      ],
@@ -162,8 +164,9 @@ def kemeny_constant(P: ArrayLike) -> float:
     parts = structure_of(matrix)
     if len(parts.closed) > 1:
         raise NotIdentified(
-            f"there are {len(parts.closed)} closed classes: from one of them the states of another are never met, "
-            "so the mean time to a state drawn from the long-run mix is not finite; take one class at a time"
+            f"there are {len(parts.closed)} closed classes: from one of them the states of another are "
+            "never met, so the mean time to a state drawn from the long-run mix is not finite; "
+            "take one class at a time"
         )
     return float(np.trace(_deviation(matrix, parts)) + 1.0)
 
@@ -183,8 +186,9 @@ def second_eigenvalue_modulus(P: ArrayLike) -> float:
 def periods_to_settle(P: ArrayLike, start: ArrayLike, *, tolerance: float = 0.01) -> float:
     """First t from which start P^t stays within `tolerance` of its limit, in total variation.
 
-    Total variation 1/2 sum |difference| never grows along a chain, so the first time is also the last. Infinite
-    (math.inf) when the mix cycles for ever: `limit_from_start` then says why. tolerance: 1e-12 to 1.
+    Total variation 1/2 sum |difference| never grows along a chain, so the first time is also the last.
+    Infinite (math.inf) when the mix cycles for ever: `limit_from_start` then says why. tolerance: 1e-12
+    to 1.
 
     >>> periods_to_settle([[0.9, 0.1], [0.3, 0.7]], 0, tolerance=0.01)
     7.0
@@ -204,7 +208,7 @@ def periods_to_settle(P: ArrayLike, start: ArrayLike, *, tolerance: float = 0.01
 def _laws(matrix: Array, parts: Structure) -> Array:
     laws = np.zeros((len(parts.closed), len(matrix)))
     for law, group in zip(laws, parts.closed, strict=True):
-        law[list(group)] = _class_law(matrix[np.ix_(group, group)])
+        law[list(group)] = _class_law(matrix[grid(group, group)])
     return laws
 
 
@@ -218,8 +222,8 @@ def _ends(matrix: Array, parts: Structure) -> Array:
         ends[list(group), column] = 1.0
     if parts.transient:
         out = list(parts.transient)
-        entering = np.column_stack([matrix[np.ix_(out, group)].sum(axis=1) for group in parts.closed])
-        ends[out] = eliminate(matrix[np.ix_(out, out)], entering.sum(axis=1)).solve(entering)
+        entering = np.column_stack([matrix[grid(out, group)].sum(axis=1) for group in parts.closed])
+        ends[out] = eliminate(matrix[grid(out, out)], entering.sum(axis=1)).solve(entering)
     return ends
 
 
@@ -229,7 +233,7 @@ def _average(matrix: Array, parts: Structure | None = None) -> Array:
 
 
 def _cycle(matrix: Array, start: Array, parts: Structure) -> Array:
-    reached = parts.reachable[start > 0].any(axis=0)
+    reached = np.any(parts.reachable[start > 0], axis=0).tolist()
     length = math.lcm(*(d for d, group in zip(parts.periods, parts.closed, strict=True) if reached[group[0]]))
     laws = np.empty((length, len(matrix)))
     laws[0] = start @ _average(np.linalg.matrix_power(matrix, length))
@@ -254,15 +258,15 @@ def _deviation(matrix: Array, parts: Structure) -> Array:
     away = list(parts.transient)
     if away:
         leaving = np.delete(matrix[away], away, axis=1).sum(axis=1)
-        steps = eliminate(matrix[np.ix_(away, away)], leaving)
-        out[np.ix_(away, away)] = steps.inverse()
+        steps = eliminate(matrix[grid(away, away)], leaving)
+        out[grid(away, away)] = steps.inverse()
     for column, group in enumerate(parts.closed):
-        inside = np.ix_(group, group)
+        inside = grid(group, group)
         law = laws[column, list(group)]
         out[inside] = _class_deviation(matrix[inside], law)
         if away:
-            pull = matrix[np.ix_(away, group)] @ out[inside] - np.outer(ends[away, column], law)
-            out[np.ix_(away, group)] = out[np.ix_(away, away)] @ pull
+            pull = matrix[grid(away, group)] @ out[inside] - np.outer(ends[away, column], law)
+            out[grid(away, group)] = out[grid(away, away)] @ pull
     return out
 
 
@@ -271,6 +275,6 @@ def _class_deviation(block: Array, law: Array) -> Array:
     rest = [i for i in range(len(block)) if i != pivot]
     inverse = np.zeros_like(block)
     if rest:
-        inverse[np.ix_(rest, rest)] = eliminate(block[np.ix_(rest, rest)], block[rest, pivot]).inverse()
+        inverse[grid(rest, rest)] = eliminate(block[grid(rest, rest)], block[rest, pivot]).inverse()
     centred = inverse - law @ inverse
     return centred - np.outer(centred.sum(axis=1), law)

@@ -1,6 +1,7 @@
 """Which states lead where: classes, closed classes, periods, and what the limit theorem allows.
 
-Source: Kemeny & Snell (1960), Finite Markov Chains, ch. 2; Seneta (1981), Non-negative Matrices and Markov Chains, ch. 1.
+Source: Kemeny & Snell (1960), Finite Markov Chains, ch. 2; Seneta (1981), Non-negative Matrices and
+Markov Chains, ch. 1.
 """
 
 from __future__ import annotations
@@ -8,13 +9,14 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.sparse.csgraph import connected_components
 
 from cohortflow.errors import CallError
-from cohortflow.markov.arguments import Array, Flags, check_states, check_stochastic, read_only
+from cohortflow.markov.arguments import Array, Flags, check_states, check_stochastic, grid, read_only
 
 
 @dataclass(frozen=True, eq=False)
@@ -28,7 +30,7 @@ class Structure:
     reachable   (K, K) flags: column can be reached from row in none or more steps
     verdict     "unique_limit"       one closed class, of period 1: every start ends in the same mix
                 "depends_on_start"   several closed classes, all of period 1: a limit, but one for each start
-                "no_limit"           some closed class is periodic: the mix there cycles; only a time average exists
+                "no_limit"           some closed class is periodic: the mix cycles; only a time average exists
     """
 
     classes: tuple[tuple[int, ...], ...]
@@ -79,7 +81,7 @@ def structure_of(matrix: Array) -> Structure:
     )
 
 
-def reachability(moves: NDArray[np.generic]) -> Flags:
+def reachability(moves: NDArray[Any]) -> Flags:
     """Flags (K, K): column can be reached from row in none or more steps; `moves` is read as zero or not.
 
     >>> reachability(np.array([[0, 1, 0], [0, 0, 1], [0, 0, 1]])).astype(int)
@@ -93,7 +95,7 @@ def reachability(moves: NDArray[np.generic]) -> Flags:
     return reached > 0
 
 
-def communicating_classes(moves: NDArray[np.generic]) -> tuple[tuple[int, ...], ...]:
+def communicating_classes(moves: NDArray[Any]) -> tuple[tuple[int, ...], ...]:
     """Classes of states that reach each other, each sorted, in order of their smallest member.
 
     >>> communicating_classes(np.array([[0, 1, 0], [0, 0, 1], [0, 1, 0]]))
@@ -103,7 +105,7 @@ def communicating_classes(moves: NDArray[np.generic]) -> tuple[tuple[int, ...], 
     return tuple(sorted(tuple(np.flatnonzero(label == c).tolist()) for c in range(count)))
 
 
-def is_closed(moves: NDArray[np.generic], members: Iterable[int]) -> bool:
+def is_closed(moves: NDArray[Any], members: Iterable[int]) -> bool:
     """Whether no move leads out of the set.
 
     >>> is_closed(np.array([[0, 1, 0], [0, 0, 1], [0, 1, 0]]), (1, 2))
@@ -111,35 +113,35 @@ def is_closed(moves: NDArray[np.generic], members: Iterable[int]) -> bool:
     """
     inside = np.zeros(len(moves), dtype=bool)
     inside[list(members)] = True
-    return not (moves > 0)[np.ix_(inside, ~inside)].any()
+    return not (moves > 0)[inside][:, ~inside].any()
 
 
-def period(moves: NDArray[np.generic], members: Iterable[int]) -> int:
+def period(moves: NDArray[Any], members: Iterable[int]) -> int:
     """Period of a communicating class: greatest common divisor of the lengths of its round trips; 0 if none.
 
     >>> period(np.array([[0, 1, 0], [0, 0, 1], [1, 0, 0]]), (0, 1, 2))
     3
     """
-    inside = (moves > 0)[np.ix_(tuple(members), tuple(members))]
+    inside = (moves > 0)[grid(tuple(members), tuple(members))]
     level = _levels(inside)
     origin, target = np.nonzero(inside)
     return int(np.gcd.reduce(level[origin] + 1 - level[target], initial=0))
 
 
-def cyclic_groups(moves: NDArray[np.generic], members: Iterable[int]) -> tuple[tuple[int, ...], ...]:
-    """The d groups of a class of period d, in the order in which they are visited; the first holds the smallest state.
+def cyclic_groups(moves: NDArray[Any], members: Iterable[int]) -> tuple[tuple[int, ...], ...]:
+    """The d groups of a class of period d, in the order of visits; the first holds the smallest state.
 
     >>> cyclic_groups(np.array([[0, 1, 1], [1, 0, 0], [1, 0, 0]]), (0, 1, 2))
     ((0,), (1, 2))
     """
     chosen = np.array(sorted(members))
-    level = _levels((moves > 0)[np.ix_(chosen, chosen)])
+    level = _levels((moves > 0)[grid(chosen, chosen)])
     length = max(1, period(moves, chosen.tolist()))
     return tuple(tuple(chosen[level % length == phase].tolist()) for phase in range(length))
 
 
-def leads_to(moves: NDArray[np.generic], targets: Iterable[int], *, barred: Iterable[int] = ()) -> Flags:
-    """Flags (K,): a path leads from the state to a target in none or more steps, not starting in a barred state.
+def leads_to(moves: NDArray[Any], targets: Iterable[int], *, barred: Iterable[int] = ()) -> Flags:
+    """Flags (K,): a path leads from the state to a target in none or more steps, never out of a barred state.
 
     >>> leads_to(np.array([[0, 1, 0], [0, 0, 1], [0, 0, 1]]), [1])
     array([ True,  True, False])
@@ -166,7 +168,7 @@ def surely_reaches(P: ArrayLike, targets: Iterable[int]) -> Flags:
     return sure(matrix > 0, check_states(targets, len(matrix), name="targets"))
 
 
-def sure(moves: NDArray[np.generic], targets: Iterable[int]) -> Flags:
+def sure(moves: NDArray[Any], targets: Iterable[int]) -> Flags:
     """`surely_reaches` for flags of moves: no path leads to where the targets are out of reach."""
     targets = tuple(targets)
     lost = ~leads_to(moves, targets)
@@ -180,7 +182,9 @@ def _levels(inside: Flags) -> NDArray[np.int64]:
     while (level < 0).any():
         found = inside[level == depth].any(axis=0) & (level < 0)
         if not found.any():
-            raise CallError("the states do not all reach each other; a period belongs to one communicating class")
+            raise CallError(
+                "the states do not all reach each other; a period belongs to one communicating class"
+            )
         depth += 1
         level[found] = depth
     return level
