@@ -46,6 +46,7 @@ class Study:
     `as_of` is the last day the extract can be trusted (None: for steps, the extract's last one).
     `origin_of["study.level"]`: where a setting came from: "study file", "option", "environment", "default".
 
+    >>> from cohortflow.study import Condition
     >>> silent = Condition("silent_for", ("bought",), k=3)
     >>> rules = (StateRule("left", "exit", ((silent,),)), StateRule("buying"))
     >>> study = Study(States(["left", "buying"], exits=["left"]), rules=rules)
