@@ -1,5 +1,14 @@
 """Chain or Schedule -> futures: the mix period by period, where it settles, how long customers stay."""
 
 from cohortflow.projector.accept import as_schedule as as_schedule
+from cohortflow.projector.exits import ExitTimes as ExitTimes
+from cohortflow.projector.exits import time_to_exit as time_to_exit
+from cohortflow.projector.joiners import Joiners as Joiners
+from cohortflow.projector.joiners import planned_numbers as planned_numbers
+from cohortflow.projector.longrun import LongRun as LongRun
+from cohortflow.projector.longrun import long_run as long_run
 from cohortflow.projector.mix import cohort_shares as cohort_shares
 from cohortflow.projector.mix import step_counts as step_counts
+from cohortflow.projector.project import Projection as Projection
+from cohortflow.projector.project import project as project
+from cohortflow.projector.rollforward import rollforward_actual as rollforward_actual

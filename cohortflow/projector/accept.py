@@ -12,7 +12,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from cohortflow.chain import Chain, Draws, Schedule
+from cohortflow.chain import Draws, Schedule
 from cohortflow.errors import CallError, NotIdentified, listed
 from cohortflow.periods import Calendar
 from cohortflow.states import States
@@ -63,7 +63,9 @@ def covariance_of(model: Any, covariance: Any = None) -> Any:
     return ask(covariance or "customer")
 
 
-def draws_of(model: Any, draws: Draws | int | None, rng: np.random.Generator, covariance: Any) -> Draws | None:
+def draws_of(
+    model: Any, draws: Draws | int | None, rng: np.random.Generator, covariance: Any
+) -> Draws | None:
     """Draws as given, or that many drawn from a Fit; None when the model has no counts behind it."""
     if isinstance(draws, Draws):
         return draws
@@ -188,7 +190,9 @@ def weights_of(states: States, totals: Mapping[str, Any] | None) -> dict[str, Ar
             raise CallError(f'The total "{name}" has the name of a state or of a fixed total; rename it.')
         exits = [m for m in members if m in states.exits]
         if exits:
-            raise CallError(f'The total "{name}" adds up customers who are there; {listed(exits)} is an exit.')
+            raise CallError(
+                f'The total "{name}" adds up customers who are there; {listed(exits)} is an exit.'
+            )
         out[name] = states.mask(members).astype(float)
     return out
 

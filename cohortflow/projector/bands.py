@@ -100,7 +100,10 @@ def moments(
     size = len(schedule.states)
     fold = np.vstack([c.collapse(size) for c in schedule.components])
     mean, C = start @ laws[0], _lot(start, laws[0])
-    J, walked = np.zeros_like(C), {} if joiners is None else {k: np.zeros((0, len(fold))) for k in joiners.inflows}
+    J, walked = (
+        np.zeros_like(C),
+        {} if joiners is None else {k: np.zeros((0, len(fold))) for k in joiners.inflows},
+    )
     rows = [(mean, C, J)]
     for h in range(periods):
         P = block_diag(*(filled(c.matrix(first_step + h)) for c in schedule.components))
@@ -193,7 +196,11 @@ def _expected(counts: Array, laws: Array) -> Array:
 def _moved(counts: Array, laws: Array, rng: np.random.Generator) -> Array:
     """Whole customers by multinomial lot, fractions as expected; (D, a) through (D or 1, a, b)."""
     whole = np.floor(counts + 1e-9)
-    out = _expected(counts - whole, laws) if (counts != whole).any() else np.zeros((len(counts), laws.shape[-1]))
+    out = (
+        _expected(counts - whole, laws)
+        if (counts != whole).any()
+        else np.zeros((len(counts), laws.shape[-1]))
+    )
     for row in range(counts.shape[1]):
         law = laws[:, row]
         where = np.flatnonzero(law.any(axis=0))

@@ -123,6 +123,14 @@ class Joiners(Record):
         """(K,) expected customers by state a period, averaged over the last full cycle of seasons (or all)."""
         return self.expected()[-min(self.periods, self.calendar.cycle) :].mean(axis=0)
 
+    def relative_error(self) -> float:
+        """Variance of the long-run rate over its square: what the periods ahead share, not what averages out."""
+        if self.periods < 2 or not self.expected().any():
+            return 0.0
+        pairs = self.periods * (self.periods - 1)
+        shared = sum((i.extra.sum() - np.trace(i.extra)) / pairs for i in self.inflows.values())
+        return float(max(shared, 0.0) / self.expected().sum(axis=1).mean() ** 2)
+
     def draw(self, size: int, rng: np.random.Generator) -> Array:
         """(size, H, K) customers of both kinds."""
         return sum((i.draw(size, rng) for i in self.inflows.values()), np.zeros(1))
@@ -135,7 +143,9 @@ class Joiners(Record):
                 "Forecast them as far."
             )
         kept = {
-            kind: Inflow(i.mean[:periods], i.extra[:periods, :periods], i.mix[:periods], i.concentration, i.note)
+            kind: Inflow(
+                i.mean[:periods], i.extra[:periods, :periods], i.mix[:periods], i.concentration, i.note
+            )
             for kind, i in self.inflows.items()
         }
         return Joiners(self.states, self.calendar, self.base, self.method, kept)
@@ -144,7 +154,10 @@ class Joiners(Record):
         """period, periods_ahead, kind, state, customers, std_error (of customers, all sources)."""
         frames = []
         for kind, inflow in self.inflows.items():
-            spread = np.einsum("hkk->hk", inflow.state_noise()) + inflow.mix**2 * np.diag(inflow.covariance)[:, None]
+            spread = (
+                np.einsum("hkk->hk", inflow.state_noise())
+                + inflow.mix**2 * np.diag(inflow.covariance)[:, None]
+            )
             ahead, state = np.nonzero(inflow.mix > 0)
             frames.append(
                 pd.DataFrame(

@@ -36,9 +36,7 @@ class Walk:
     undefined: Flags
 
 
-def step_counts(
-    model: Any, start: Any, periods: int, inflow: Any = None, *, first_step: int = 0
-) -> Array:
+def step_counts(model: Any, start: Any, periods: int, inflow: Any = None, *, first_step: int = 0) -> Array:
     """Expected customers by state after 0, 1, ..., `periods` periods, shape (periods + 1, K).
 
     start : counts by state; inflow : (periods, K) expected joiners of each period, or (K,) the same each period
@@ -57,9 +55,7 @@ def step_counts(
     return walk(as_schedule(model), start, periods, inflow, first_step=first_step).counts
 
 
-def walk(
-    schedule: Schedule, start: Any, periods: int, inflow: Any = None, *, first_step: int = 0
-) -> Walk:
+def walk(schedule: Schedule, start: Any, periods: int, inflow: Any = None, *, first_step: int = 0) -> Walk:
     """Expected counts, moves and inflow of each period (see Walk)."""
     counts = as_counts(start, schedule.states)
     return _walk(schedule, schedule.expand(counts), as_periods(periods), inflow, first_step)
@@ -99,7 +95,9 @@ def cohort_shares(
     steps = as_periods(periods)
     law = as_counts(entry, schedule.states, name="entry")
     if abs(law.sum() - 1.0) > 1e-9:
-        raise CallError(f"entry is a law over the states and must add up to 1; it adds up to {law.sum():.12g}.")
+        raise CallError(
+            f"entry is a law over the states and must add up to 1; it adds up to {law.sum():.12g}."
+        )
     opening = schedule.expand(law, joining=joining)
     return _walk(schedule, opening, steps, None, first_step).counts
 

@@ -1,6 +1,6 @@
 """Opening to closing by cause, state by state, for forecasts and for what has been counted.
 
-    closing = opening + joined + returned - lost + moved_in - moved_out [+ unobserved_in - unobserved_out]
+closing = opening + joined + returned - lost + moved_in - moved_out [+ unobserved_in - unobserved_out]
 """
 
 from __future__ import annotations
@@ -96,8 +96,16 @@ def table(
         for line, leaving, values in _causes(states, lines, members):
             blocks.append(
                 pd.DataFrame(
-                    {"segment": segment, "period": list(labels), "kind": kind, "state": name, "line": line,
-                     "exit": leaving, "customers": values, "order": np.arange(len(values))}
+                    {
+                        "segment": segment,
+                        "period": list(labels),
+                        "kind": kind,
+                        "state": name,
+                        "line": line,
+                        "exit": leaving,
+                        "customers": values,
+                        "order": np.arange(len(values)),
+                    }
                 )  # fmt: skip
             )
     frame = pd.concat(blocks, ignore_index=True)
@@ -109,12 +117,16 @@ def _causes(states: States, lines: Lines, members: list[int]) -> list[tuple[str,
     inside = states.mask([states.names[m] for m in members])
     others = ~inside & ~states.exit_mask
     out = [("opening", "", lines.opening[:, members].sum(axis=1))]
-    out += [(line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line != "unobserved_in"]
+    out += [
+        (line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line != "unobserved_in"
+    ]
     for name in states.exits:
         out.append(("lost", name, lines.flows[:, members, states.index(name)].sum(axis=1)))
     out.append(("moved_in", "", lines.flows[:, others][:, :, members].sum(axis=(1, 2))))
     out.append(("moved_out", "", lines.flows[:, members][:, :, others].sum(axis=(1, 2))))
-    out += [(line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line == "unobserved_in"]
+    out += [
+        (line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line == "unobserved_in"
+    ]
     out += [(line, "", v[:, members].sum(axis=1)) for line, v in lines.outflow.items()]
     out.append(("closing", "", lines.closing[:, members].sum(axis=1)))
     return out
