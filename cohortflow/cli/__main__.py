@@ -1,0 +1,5 @@
+"""`python -m cohortflow.cli` is `cohortflow`."""
+
+from cohortflow.cli import main
+
+main()

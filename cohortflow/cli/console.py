@@ -1,0 +1,37 @@
+"""Where things are written: results on stdout, messages on stderr, progress only on a terminal."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import click
+
+
+@dataclass(frozen=True)
+class Console:
+    """`quiet` keeps messages back; refusals are told in any case (see faults.py)."""
+
+    quiet: bool = False
+
+    def result(self, text: str) -> None:
+        """A result, unchanged, on stdout."""
+        click.echo(text, nl=False)
+
+    def say(self, text: str) -> None:
+        """A message on stderr."""
+        if not self.quiet:
+            click.echo(text, err=True)
+
+    @property
+    def progress(self) -> Callable[[str], None]:
+        """Told what is being done now; silent unless stderr is a terminal."""
+        return self._step if sys.stderr.isatty() and not self.quiet else _nothing
+
+    def _step(self, what: str) -> None:
+        click.echo(f"{what} ...", err=True)
+
+
+def _nothing(what: str) -> None:
+    return None
