@@ -22,7 +22,7 @@ from cohortflow.report.text import clean, neutral, width, wrap
 
 WIDTH = 80
 GAP = "  "
-NARROWEST = 8
+NARROWEST, TALLEST, HEAD_ROOM = 8, 3, 14
 
 
 @dataclass(frozen=True)
@@ -85,7 +85,7 @@ def _least(cells: list[list[str]], column: int, is_text: bool) -> int:
     natural = max(width(row[column]) for row in cells)
     body = max((width(row[column]) for row in cells[1:]), default=0)
     head = max((width(word) for word in cells[0][column].split()), default=0)
-    return min(natural, NARROWEST) if is_text else max(body, head)
+    return min(natural, NARROWEST) if is_text else max(body, min(head, HEAD_ROOM))
 
 
 def _block_lines(
@@ -103,7 +103,7 @@ def _block_lines(
 def _widths(cells: list[list[str]], block: list[int], texts: Sequence[int], columns: int) -> list[int]:
     """Natural widths, taken back to the least ones, widest first, until the block fits."""
     least = [_least(cells, i, i in texts) for i in block]
-    widths = [max(width(row[i]) for row in cells) for i in block]
+    widths = [min(max(width(row[i]) for row in cells), columns) for i in block]
     room = columns - len(GAP) * (len(block) - 1)
     while sum(widths) > room:
         spare = [w - m for w, m in zip(widths, least, strict=True)]
@@ -115,7 +115,7 @@ def _widths(cells: list[list[str]], block: list[int], texts: Sequence[int], colu
 
 
 def _row_lines(row: list[str], widths: list[int], is_text: list[bool]) -> list[str]:
-    wrapped = [wrap(cell, max(w, 1)) for cell, w in zip(row, widths, strict=True)]
+    wrapped = [wrap(cell, max(w, 1), TALLEST) for cell, w in zip(row, widths, strict=True)]
     height = max(len(lines) for lines in wrapped)
     out = []
     for k in range(height):

@@ -10,6 +10,7 @@ import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.ticker import MaxNLocator
 
+from cohortflow.errors import CallError
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
     BODY, FUTURE, INK, MARGIN, MODEL, MODEL_BAND, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
@@ -24,6 +25,7 @@ TARGETS = {
     "time_average": "the average over the cycle, because the mix never stops moving",
     "remaining_mix": "the mix of those remaining",
 }
+SETTLED = 0.01
 PANEL_HIGH, HEAD_HIGH, FOOT_HIGH, PANEL_WIDE, LABEL_WIDE = 1.0, 0.36, 0.34, 2.75, 0.78
 
 
@@ -42,10 +44,13 @@ def settling_chart(
     """Share of each state among those who have not left, period by period, and the share it settles at.
 
     approach : Projection or a frame with periods_ahead, state, share;  long_run : LongRun or its frame.
-    The upright line marks the periods to settle when the approach is drawn that far.
+    The upright line marks the periods to settle when the approach is drawn that far. Raises CallError when the
+    long run has no mix to settle at.
     """
     rows = frame_of(approach, ["periods_ahead", "state", "share"], segment=segment)
-    goal = settled(frame_of(long_run, ["measure", "state", "value", "low", "high"], segment=segment))
+    goal = settled(frame_of(long_run, ["measure", "state", "value", "low", "high"], segment=segment), rows)
+    if not len(goal.rows):
+        raise CallError("There is no settled mix to draw: the long run says why (its notes and reasons).")
     names = [str(n) for n in goal.rows["state"] if (rows["state"] == n).any()]
     columns = max(1, min(3, int((width - 2 * MARGIN) // PANEL_WIDE), len(names)))
     one = PANEL_HIGH + HEAD_HIGH + FOOT_HIGH
@@ -65,12 +70,35 @@ def settling_chart(
     return figure
 
 
-def settled(long_run: pd.DataFrame) -> Settled:
-    """Which of the long-run mixes the shares approach, the first of TARGETS that is there."""
-    measure = next((m for m in TARGETS if (long_run["measure"] == m).any()), "settled_mix")
-    rows = long_run[long_run["measure"] == measure]
-    when = long_run.loc[long_run["measure"] == "periods_to_settle", "value"]
-    return Settled(measure, rows, float(when.iloc[0]) if len(when) else float("nan"))
+def settled(long_run: pd.DataFrame, approach: pd.DataFrame | None = None) -> Settled:
+    """Which of the long-run mixes the shares approach, the first of TARGETS that says something.
+
+    With seasons each state has one figure a place in the year: their mean is taken, without an interval. The
+    periods to settle are those of the approach: the first after which the mix stays within one percentage point
+    (half the sum of absolute differences) of the goal; NaN when it is not drawn that far.
+    """
+    rows = long_run[long_run["from"].isin(["", "start"])] if "from" in long_run else long_run
+    exits_only = not (long_run["measure"] == "closed_group").any()
+    measures = [m for m in TARGETS if not (exits_only and m in ("limit_from_start", "time_average"))]
+    known = rows[rows["value"].notna()]
+    measure = next((m for m in measures if (known["measure"] == m).any()), "")
+    own = known[known["measure"] == measure]
+    goal = own.groupby("state", sort=False, as_index=False).agg(
+        value=("value", "mean"), low=("low", "first"), high=("high", "first"), places=("value", "size")
+    )
+    goal.loc[goal["places"] > 1, ["low", "high"]] = np.nan
+    return Settled(measure, goal, float("nan") if approach is None else _settles(approach, goal))
+
+
+def _settles(approach: pd.DataFrame, goal: pd.DataFrame) -> float:
+    shares = approach[approach["state"].isin(goal["state"])]
+    wide = shares.pivot_table(index="periods_ahead", columns="state", values="share")
+    target = goal.set_index("state")["value"].reindex(wide.columns)
+    off = 0.5 * (wide - target).abs().sum(axis=1) > SETTLED
+    late = wide.index[off.to_numpy()]
+    if not len(late):
+        return 0.0
+    return float(late.max()) + 1 if late.max() < wide.index.max() else float("nan")
 
 
 def _panel(axes: Axes, own: pd.DataFrame, goal: Settled, name: str, step: float) -> None:
@@ -117,7 +145,8 @@ def _farthest(rows: pd.DataFrame, goal: Settled, names: list[str]) -> tuple[str,
 def _title(rows: pd.DataFrame, goal: Settled, names: list[str], kind: str) -> str:
     far = _farthest(rows, goal, names)
     if missing(goal.periods):
-        time = ""
+        last = int(rows["periods_ahead"].max())
+        time = f"; settling takes more than {duration(last, kind, 0)}"
     elif goal.periods == 0:
         time = "; the mix has settled already"
     else:

@@ -1,0 +1,216 @@
+"""The words of the report: what codes mean, what the long run means, cautions, definitions, sources.
+
+Everything is said for a reader who never heard of a Markov chain, and so that one who has cannot object.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from types import MappingProxyType
+
+from cohortflow.report.rounding import unit
+from cohortflow.report.text import label, upper_first
+
+REASONS: Mapping[str, str] = MappingProxyType(
+    {
+        "bad_date": "date not readable",
+        "bad_amount": "amount not readable",
+        "bad_number": "number not readable",
+        "id_missing": "customer id missing",
+        "id_placeholder": "customer id is a placeholder",
+        "unknown_event": "event named nowhere in the study",
+        "unknown_state": "state named nowhere in the study",
+        "ignored_event": "event that the study ignores",
+        "after_as_of": "after the last day that counts",
+        "after_exit": "after the customer had left",
+        "before_log_start": "before the log was complete",
+        "incomplete_period": "in the incomplete last period",
+        "impossible_move": "a move declared impossible",
+        "identical_row": "same as another row in every column",
+        "repeated_row": "same as another row in every column",
+        "older_version": "an older version of a row",
+    }
+)
+OUTCOMES: Mapping[str, str] = MappingProxyType(
+    {"read": "rows read", "used": "used", "rejected": "rejected", "duplicate": "dropped as duplicates",
+     "set_aside": "set aside"}  # fmt: skip
+)
+VERDICTS: Mapping[str, tuple[str, str]] = MappingProxyType(
+    {
+        "unique_limit": (
+            "There is one long-run mix, whatever the start.",
+            "If the rates stayed as they are for ever, the mix of states would come closer and closer to one and the "
+            "same mix, no matter where customers are today: every state that is not left behind can be reached from "
+            "every other, and nothing forces a fixed rhythm.",
+        ),
+        "depends_on_start": (
+            "Where it settles depends on where customers start.",
+            "There are several groups of states that nobody leaves once inside. Each customer ends up in one of them; "
+            "the long-run mix therefore depends on today's mix, and the chances of ending in each group are given.",
+        ),
+        "no_limit": (
+            "The mix never settles: it goes round in a fixed cycle.",
+            "Some states can be revisited only after multiples of a fixed number of periods, so the mix keeps "
+            "repeating a cycle instead of settling. What exists is the average over a cycle, and that is printed.",
+        ),
+        "exits_only": (
+            "Without joiners everybody leaves in the end.",
+            "From every state some way leads to an exit, and nobody comes back from an exit within the same stay. So "
+            "without new joiners the base runs down to nothing; what can be said is how fast, in which mix, and by "
+            "which exit. With a steady stream of joiners the base settles where as many leave as come.",
+        ),
+        "unique_cycle": (
+            "There is one long-run mix for each place in the year, whatever the start.",
+            "The rates repeat every year. If they stayed so for ever, the mix at each place in the year would come "
+            "closer and closer to one and the same mix, no matter where customers are today.",
+        ),
+    }
+)  # fmt: skip
+EXPLAIN: Mapping[str, str] = MappingProxyType(
+    {
+        "interval": "An interval is the range of rates that the counts allow: over many studies made like this one, "
+                    "about as many intervals as the stated level would hold the true rate. It speaks of chance in the "
+                    "counts, not of mistakes in the data or of a world that changes.",
+        "band": "A band is the range in which the number of customers should end, at the stated level, if the world "
+                "goes on as it did in the periods counted. It holds the parts that are listed beside it and no others.",
+        "settled_base": "The settled base is the size at which, with the assumed number of joiners every period and "
+                        "today's rates, as many customers leave as join. It is a direction, not a forecast.",
+        "remaining_mix": "Follow today's customers only, and look at those still here after a long time: their mix of "
+                         "states stops changing even while their number falls. That is the mix of those remaining; "
+                         "its retention is the share of them that is still here one period later.",
+        "periods_to_settle": "Periods to settle is how long it takes until the mix is within one percentage point of "
+                             "where it settles. Beyond the horizon it is arithmetic, not forecast.",
+        "retention": "Observed retention follows those who joined and counts who is still here at each age. The "
+                     "model's curve is what the fitted rates imply. Where they part, the rates are not the same "
+                     "for customers of different age or kind.",
+        "exit_time": "Expected time until leaving counts whole periods from the end of a period in that state, the "
+                     "period of leaving included. Half of the customers have left by the median.",
+        "rollforward": "The roll-forward goes from the opening base to the closing base by cause; every column adds up.",
+    }
+)  # fmt: skip
+CAUTIONS = (
+    "This is a projection, not a promise. It says what follows if customers go on moving between states at the rates "
+    "counted in the past and if as many join as assumed. A price change, a campaign, a competitor or a change of the "
+    "data breaks that.",
+    "A band holds chance and the uncertainty of the rates as stated beside it. It does not hold mistakes in the "
+    "extract, in the rules of the states, or changes that the past does not contain.",
+    "The long run is a direction. Where it settles is arithmetic on today's rates, usually far beyond any horizon "
+    "that was tested.",
+    "Nothing here is accounting, tax, legal or investment advice. Figures that go into accounts, budgets or contracts "
+    "are for qualified people to judge, with the accounting rules that apply.",
+    "The counts saved with a run describe groups of people and sample paths of single customers without names or ids. "
+    "They are pseudonymous personal data: keep them as you keep the extract, and ask your data protection adviser "
+    "before passing them on.",
+)
+DEFINITIONS: tuple[tuple[str, str, str], ...] = (
+    ("Customer at the end of a period", "One customer has one state at the end of each period, given by the first rule "
+     "of the study that holds. Only rows up to that moment are used.", "count of customers"),
+    ("Live, away, left", "Live customers count as the base. Away customers (paused, in grace) are not live now but have "
+     "not left. An exit ends a stay; who comes back after an exit starts a new stay and is counted as returned.", ""),
+    ("Rate of a move", "Share of the customers in a state at the end of a period who are in the other state at the end "
+     "of the next.", "moves from i to j / customers in i who could be followed for one more period"),
+    ("Churn by an exit", "Share of the opening base that left by that exit within the period. Who joined and left "
+     "within one period is not in it, but on a line of its own.", "lost by the exit / opening customers"),
+    ("Retention of joiners", "Share of those who joined together who have not left after so many periods.",
+     "product over ages of (1 - left at that age / followed to that age)"),
+    ("All live customers", "Sum of the live states.", "customers in live and entry states, without away and exits"),
+    ("Opening to closing", "Opening + joined + returned - lost + moved in - moved out, and what could not be observed, "
+     "gives closing, in every period.", "counts of customers"),
+    ("Settled base", "Base at which joining and leaving balance.",
+     "joiners a period x expected periods spent in each state before leaving"),
+    ("Mix of those remaining", "Long-run mix of the customers who have not left, without joiners.",
+     "left eigenvector of the rates between states that are not exits, scaled to 1"),
+    ("Expected time until leaving", "Mean number of periods until an exit, from a state.",
+     "row sums of (I - Q)^-1, Q = rates between states that are not exits"),
+)  # fmt: skip
+SOURCES: tuple[tuple[str, str], ...] = (
+    ("Rates as shares of counted moves", "Anderson, T. W. & Goodman, L. A. (1957), Annals of Mathematical Statistics 28, "
+     "89-110."),
+    ("Intervals of rates", "Wilson, E. B. (1927), Journal of the American Statistical Association 22, 209-212; whole "
+     "rows: Goodman, L. A. (1965), Technometrics 7, 247-254; compared by Brown, L. D., Cai, T. T. & DasGupta, A. (2001), "
+     "Statistical Science 16, 101-133."),
+    ("Errors that allow for repeated looks at one customer", "Liang, K.-Y. & Zeger, S. L. (1986), Biometrika 73, 13-22."),
+    ("Absorbing chains, time to exit, limits", "Kemeny, J. G. & Snell, J. L. (1960), Finite Markov Chains."),
+    ("Long-run mix without subtractions", "Grassmann, W. K., Taksar, M. I. & Heyman, D. P. (1985), Operations Research "
+     "33, 1107-1116."),
+    ("Mix of those remaining", "Darroch, J. N. & Seneta, E. (1965), Journal of Applied Probability 2, 88-100."),
+    ("Bases with joiners", "Bartholomew, D. J. (1982), Stochastic Models for Social Processes, 3rd edition; Pollard, "
+     "J. H. (1966), Biometrika 53, 397-415."),
+    ("Observed retention", "Kaplan, E. L. & Meier, P. (1958), Journal of the American Statistical Association 53, "
+     "457-481."),
+)  # fmt: skip
+MODELS: Mapping[str, str] = MappingProxyType(
+    {
+        "plain": "one set of rates for every period and every customer in a state",
+        "recent": "rates that weigh recent periods more",
+        "seasonal": "rates for each position in the year",
+        "tenure": "rates that differ with the time since joining",
+        "time_in_state": "rates that differ with the time spent in the state",
+        "segment": "rates for each segment, drawn towards the common ones",
+        "second_order": "rates that also look at the state before",
+        "mover_stayer": "a share of customers that never moves, the rest by common rates",
+        "mixture": "several hidden kinds of customers, each with its own rates",
+    }
+)
+JOINERS: Mapping[str, str] = MappingProxyType(
+    {
+        "none": "nobody joins",
+        "constant": "as many join each period as on average in the periods counted",
+        "last_year": "as many join as in the same period a year earlier",
+        "smoothing": "joiners follow their own smoothed trend",
+        "planned": "joiners as planned in the study's file",
+    }
+)
+NOTES: Mapping[str, str] = MappingProxyType(
+    {
+        "no_data": "Nobody was ever seen leaving or staying in {state}: its rates are not known, and whatever passes "
+                   "through it is left out.",
+        "rows_without_data": "What can pass through {state} is not projected: no departure from it was counted.",
+        "few_at_risk": "Fewer than 30 departures from {state} were counted: its rates are little more than a hint.",
+        "undeclared_absorbing": "Nobody was seen moving out of {state}, though it is not declared an exit: either the "
+                                "period counted is too short or its rule is wrong.",
+        "no_buckets": "The source gave bare counts, so intervals cannot allow for repeated looks at one customer and "
+                      "may be too narrow.",
+        "one_period_only": "Departures from {state} were seen in one period only, so nothing is known about how its "
+                           "rates differ between periods.",
+        "never_exits": "From {state} no way leads to an exit: time until leaving is without end.",
+        "may_not_exit": "From {state} some customers may never leave, so the mean time until leaving is without end.",
+        "impossible_move": "A move declared impossible was seen from {state}; it was set aside.",
+    }
+)  # fmt: skip
+
+
+def said(code: str) -> str:
+    """A code in words, or the code itself with spaces.
+
+    >>> said("after_as_of"), said("some_new_code")
+    ('after the last day that counts', 'some new code')
+    """
+    return REASONS.get(code) or OUTCOMES.get(code) or code.replace("_", " ")
+
+
+def note(code: str) -> str:
+    """A note of a record ("no_data:quiet") as a sentence.
+
+    >>> note("few_at_risk:quiet")
+    'Fewer than 30 departures from quiet were counted: its rates are little more than a hint.'
+    """
+    kind, _, state = code.partition(":")
+    if kind in NOTES:
+        return NOTES[kind].replace("{state}", label(state) or "a state")
+    return upper_first(f"{kind.replace('_', ' ')}{f': {label(state)}' if state else ''}.")
+
+
+def verdict(code: str) -> tuple[str, str]:
+    """The limit theorem's verdict: in one sentence, and why.
+
+    >>> verdict("no_limit")[0]
+    'The mix never settles: it goes round in a fixed cycle.'
+    """
+    return VERDICTS.get(code, (upper_first(code.replace("_", " ")) + ".", ""))
+
+
+def a_period(kind: str) -> str:
+    """ "a month", "an own period": one period with its article."""
+    word = unit(kind, 1)
+    return f"{'an' if word[0] in 'aeiou' else 'a'} {word}"
