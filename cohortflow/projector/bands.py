@@ -142,6 +142,13 @@ def drawn_means(
     return np.stack(out, axis=1)
 
 
+def quantile_band(values: Array, level: float) -> Array:
+    """(2, ...) quantiles over draws (axis 0) around the median; NaN where any draw is."""
+    bad = np.isnan(values).any(axis=0)
+    out = np.quantile(np.where(bad, 0.0, values), [(1 - level) / 2, (1 + level) / 2], axis=0)
+    return np.where(bad, np.nan, out)
+
+
 def _lot(counts: Array, laws: Array) -> Array:
     """Covariance of customers thrown by the rows of `laws`: sum_i n_i (diag p_i - p_i p_i')."""
     return np.diag(counts @ laws) - (laws * counts[:, None]).T @ laws

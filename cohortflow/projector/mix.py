@@ -58,10 +58,11 @@ def step_counts(model: Any, start: Any, periods: int, inflow: Any = None, *, fir
 def walk(schedule: Schedule, start: Any, periods: int, inflow: Any = None, *, first_step: int = 0) -> Walk:
     """Expected counts, moves and inflow of each period (see Walk)."""
     counts = as_counts(start, schedule.states)
-    return _walk(schedule, schedule.expand(counts), as_periods(periods), inflow, first_step)
+    return walk_on(schedule, schedule.expand(counts), as_periods(periods), inflow, first_step)
 
 
-def _walk(schedule: Schedule, opening: list[Array], periods: int, inflow: Any, first_step: int) -> Walk:
+def walk_on(schedule: Schedule, opening: list[Array], periods: int, inflow: Any, first_step: int) -> Walk:
+    """`walk` from counts over the expanded states, one (m,) array a component."""
     size = len(schedule.states)
     arriving = as_inflow(inflow, periods, size)
     at, flows = np.zeros((periods + 1, size)), np.zeros((periods, size, size))
@@ -99,7 +100,7 @@ def cohort_shares(
             f"entry is a law over the states and must add up to 1; it adds up to {law.sum():.12g}."
         )
     opening = schedule.expand(law, joining=joining)
-    return _walk(schedule, opening, steps, None, first_step).counts
+    return walk_on(schedule, opening, steps, None, first_step).counts
 
 
 def as_inflow(inflow: Any, periods: int, size: int) -> Array:

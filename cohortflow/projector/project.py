@@ -14,7 +14,7 @@ from cohortflow.chain import Draws, Schedule
 from cohortflow.errors import CallError
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
-from cohortflow.projector.bands import check_parts, drawn_means, moments, simulate
+from cohortflow.projector.bands import check_parts, drawn_means, moments, quantile_band, simulate
 from cohortflow.projector.joiners import Joiners, nobody, period_label, planned_numbers
 from cohortflow.projector.mix import Walk, walk
 from cohortflow.projector.rollforward import forecast_lines
@@ -95,7 +95,7 @@ class Projection(Record):
         steps = self.periods + 1
         rows = {
             "segment": self.segment,
-            "period": self._labels() * len(self.quantities),
+            "period": self.labels * len(self.quantities),
             "periods_ahead": np.tile(np.arange(steps), len(self.quantities)),
             "quantity": np.repeat(np.array(self.quantities, dtype=object), steps),
         }
@@ -106,12 +106,12 @@ class Projection(Record):
     def rollforward(self) -> pd.DataFrame:
         """The table `rollforward`, forecast rows: closing = opening + joined + returned - lost + moved in - out."""
         return forecast_lines(
-            self.schedule.states, self.walk, self.joiners, self._labels()[1:], segment=self.segment
+            self.schedule.states, self.walk, self.joiners, self.labels[1:], segment=self.segment
         )
 
     def headline(self) -> str:
         live = self.expected("all_live")
-        low, high = np.quantile(self.paths("all_live")[:, -1], self._tails())
+        low, high = quantile_band(self.paths("all_live")[:, -1], self.level)
         return (
             f"projection of {self.periods} periods ({self.schedule.calendar.kind}): all_live {live[0]:,.0f} to "
             f"{live[-1]:,.0f}, {self.level:.0%} band {low:,.0f} to {high:,.0f}"
@@ -133,10 +133,9 @@ class Projection(Record):
             return self.weights[quantity]
         return np.eye(len(self.schedule.states))[self.schedule.states.index(quantity)]
 
-    def _tails(self) -> list[float]:
-        return [(1 - self.level) / 2, (1 + self.level) / 2]
-
-    def _labels(self) -> list[str | None]:
+    @property
+    def labels(self) -> list[str | None]:
+        """Labels of the base period and the H ahead; None outside a calendar."""
         return [period_label(self.schedule.calendar, self.base_period, h) for h in range(self.periods + 1)]
 
     def _rows(self, quantity: str) -> pd.DataFrame:
@@ -144,13 +143,13 @@ class Projection(Record):
         gone = quantity in self.schedule.states.exits
         whole = np.ones(len(base)) if gone else base.astype(float)
         value, paths = self.expected(quantity), self.paths(quantity)
-        low, high = band(paths, self._tails())
+        low, high = quantile_band(paths, self.level)
         share = ratio(value, nan_product(self.mean, whole))
-        share_low, share_high = band(ratio(paths, self.simulated @ whole), self._tails())
+        share_low, share_high = quantile_band(ratio(paths, self.simulated @ whole), self.level)
         return pd.DataFrame(
             {
                 "segment": self.segment,
-                "period": self._labels(),
+                "period": self.labels,
                 "periods_ahead": np.arange(self.periods + 1),
                 "state": quantity,
                 "customers": value,
@@ -257,13 +256,6 @@ def as_joiners(joiners: Any, schedule: Schedule, base: int | None, periods: int)
             )
         return joiners.cut(periods)
     return planned_numbers(schedule.states, joiners, periods=periods, calendar=schedule.calendar, base=base)
-
-
-def band(values: Array, tails: Sequence[float]) -> Array:
-    """(2, ...) quantiles over draws (axis 0); NaN where the values are."""
-    bad = np.isnan(values).any(axis=0)
-    out = np.quantile(np.where(bad, 0.0, values), tails, axis=0)
-    return np.where(bad, np.nan, out)
 
 
 def ratio(part: Array, whole: Array) -> Array:
