@@ -1,0 +1,101 @@
+"""The history room against the oracle: random logs, both layouts, and the laws of counting."""
+
+from __future__ import annotations
+
+import tempfile
+from dataclasses import replace
+from pathlib import Path
+
+import pandas as pd
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+
+import cohortflow as cf
+from cohortflow.tally import KEYS, VALUES
+from tests.oracle import tell
+from tests.random_logs import FIRST_DAY, histories, logs, studies, write
+
+COMPARED = ("moves", "starts", "memos", "contexts", "ages", "steps", "amounts")
+SETTINGS = settings(
+    max_examples=60,
+    deadline=None,
+    suppress_health_check=[HealthCheck.too_slow, HealthCheck.data_too_large, HealthCheck.large_base_example],
+)
+
+
+@st.composite
+def cases(draw):
+    study = draw(studies())
+    return study, draw(logs(study))
+
+
+def read(study, rows):
+    with tempfile.TemporaryDirectory() as folder:
+        write(rows, Path(folder) / "log.csv")
+        history = cf.read(replace(study, path=Path(folder) / "study.toml"))
+        return history, cf.count(history)
+
+
+def accounting(history):
+    frame = history.check.to_frame()
+    frame = frame[(frame["file"] != "all") & (frame["outcome"] != "read")]
+    sums = frame.groupby(["outcome", "reason"], dropna=False)["rows"].sum()
+    return {(o, r or ""): n for (o, r), n in sums.items() if n}
+
+
+def same_tables(tally, expected):
+    for name in COMPARED:
+        columns = [*KEYS[name], *VALUES[name]]
+        found = tally.table(name)[columns].reset_index(drop=True)
+        written = expected[name][columns].astype(found.dtypes.to_dict()).reset_index(drop=True)
+        pd.testing.assert_frame_equal(found, written, obj=name)
+
+
+@SETTINGS
+@given(cases())
+def test_random_logs_give_the_same_tables_and_accounting(case):
+    study, rows = case
+    told = tell(study, rows)
+    history, tally = read(study, rows)
+    assert accounting(history) == told.accounting()
+    tally.check_conservation()
+    same_tables(tally, told.tables())
+
+
+@SETTINGS
+@given(histories())
+def test_random_state_histories_give_the_same_tables_and_accounting(case):
+    study, rows = case
+    told = tell(study, rows)
+    history, tally = read(study, rows)
+    assert accounting(history) == told.accounting()
+    tally.check_conservation()
+    same_tables(tally, told.tables())
+
+
+@SETTINGS
+@given(cases(), st.integers(0, 2**16))
+def test_any_split_of_the_customers_adds_up_to_the_same_tally(case, cut):
+    study, rows = case
+    log_start = study.input.log_start or FIRST_DAY  # a default would be taken from each part by itself
+    study = replace(study, input=replace(study.input, log_start=log_start))
+    names = sorted({row["who"] for row in rows})
+    left = {name for place, name in enumerate(names) if cut >> place & 1}
+    parts = [[r for r in rows if (r["who"] in left) == side] for side in (True, False)]
+    whole = read(study, rows)[1]
+    if all(parts):
+        added = read(study, parts[0])[1] + read(study, parts[1])[1]
+        assert added.meta.customers == whole.meta.customers
+        for name in KEYS:
+            pd.testing.assert_frame_equal(added.tables[name], whole.tables[name], obj=name)
+
+
+@SETTINGS
+@given(cases())
+def test_every_row_read_has_exactly_one_outcome(case):
+    study, rows = case
+    history, _ = read(study, rows)
+    frame = history.check.to_frame()
+    for _, lines in frame.groupby("file"):
+        by_outcome = lines.groupby("outcome")["rows"].sum()
+        assert by_outcome["read"] == by_outcome.drop("read").sum() == len(rows)
