@@ -1,4 +1,4 @@
-"""The command line: parse, one library call, write. One module a command; nothing heavy loads before it is needed.
+"""The command line: parse, one library call, write. One module a command; heavy parts load when needed.
 
 group.py    the commands, found when asked for     options.py  what every command takes
 call.py     what the user asked for, as a record   console.py  results, messages, progress

@@ -55,8 +55,10 @@ class Call:
         columns = [*spec.segments, *spec.attributes, *([spec.arm] if spec.arm else [])]
         if self.by is not None and self.by not in columns:
             named = ", ".join(f'"{column}"' for column in columns) or "no column"
-            raise CallError(f'--by "{self.by}" is no segment of the study{nearest(self.by, columns)}. '
-                            f"[input] segments, attributes and arm name {named}.")  # fmt: skip
+            raise CallError(
+                f'--by "{self.by}" is no segment of the study{nearest(self.by, columns)}. '
+                f"[input] segments, attributes and arm name {named}."
+            )
         return study
 
 

@@ -1,4 +1,4 @@
-"""What can go wrong on the command line, and the exit code of each: no traceback for anything a user can cause."""
+"""What can go wrong on the command line, and its exit code; no traceback for anything a user can cause."""
 
 from __future__ import annotations
 
@@ -60,7 +60,7 @@ def _fault(error: Exception) -> str:
     with os.fdopen(handle, "w", encoding="utf-8") as file:
         file.write("".join(traceback.format_exception(error)))
     what = " ".join(f"{type(error).__name__}: {error}".split())
-    return f"cohortflow: fault: this is a fault of the program, not of your input ({what[:200]}). Details: {path}"
+    return f"cohortflow: fault: a fault of the program, not of your input ({what[:200]}). Details: {path}"
 
 
 def _terminated(number: int, frame: FrameType | None) -> Any:

@@ -25,8 +25,9 @@ EXAMPLES = """\
   cohortflow fit panel.csv --exit left    a bare file: customer, period, state
 """
 ENDING = """\
-Results go to stdout, messages to stderr; nothing is coloured. Every option can also be set by an environment
-variable, --level by COHORTFLOW_LEVEL, or in the study file: an option wins over the environment, both over the file.
+Results go to stdout, messages to stderr; nothing is coloured. Every option can also be set by an
+environment variable (--level by COHORTFLOW_LEVEL) or in the study file: an option wins over the
+environment, both over the file.
 
 Exit codes: 0 done; 1 done, but with --strict a finding stands; 2 the input or the call was refused;
 3 a fault of the program.

@@ -8,8 +8,13 @@ from typing import Any
 import click
 
 FORMATS = ("table", "csv", "json")
-SETTINGS = {"as_of": "study.as_of", "level": "study.level", "horizon": "study.horizon", "model": "model.name",
-            "seed": "study.seed"}  # fmt: skip
+SETTINGS = {
+    "as_of": "study.as_of",
+    "level": "study.level",
+    "horizon": "study.horizon",
+    "model": "model.name",
+    "seed": "study.seed",
+}
 CONTEXT = {"help_option_names": ["-h", "--help"], "auto_envvar_prefix": "COHORTFLOW"}
 
 
@@ -53,15 +58,31 @@ def common() -> list[click.Parameter]:
         option(["--model"], metavar="NAME", help="Model of the rates."),
         option(["--seed"], type=int, metavar="N", help="Seed of everything drawn."),
         option(["--by"], metavar="SEGMENT", help="Also separately for each value of this segment column."),
-        option(["--set", "settings"], multiple=True, metavar="TABLE.KEY=VALUE",
-               envvar="COHORTFLOW_SET", help="Any setting of the study file; may be repeated."),
-        option(["--exit", "exits"], multiple=True, metavar="NAME", envvar="COHORTFLOW_EXIT",
-               help="When STUDY is a data file: a state (or event) that means having left."),
+        option(
+            ["--set", "settings"],
+            multiple=True,
+            metavar="TABLE.KEY=VALUE",
+            envvar="COHORTFLOW_SET",
+            help="Any setting of the study file; may be repeated.",
+        ),
+        option(
+            ["--exit", "exits"],
+            multiple=True,
+            metavar="NAME",
+            envvar="COHORTFLOW_EXIT",
+            help="When STUDY is a data file: a state (or event) that means having left.",
+        ),
         option(["--out"], metavar="FOLDER", help="Write the tables into this new folder."),
         option(["--force"], is_flag=True, help="Replace the folder if an earlier run wrote it."),
-        option(["--format", "form"], type=click.Choice(FORMATS), default="table", show_default=True,
-               envvar="COHORTFLOW_FORMAT", help="Form of the result on stdout."),
+        option(
+            ["--format", "form"],
+            type=click.Choice(FORMATS),
+            default="table",
+            show_default=True,
+            envvar="COHORTFLOW_FORMAT",
+            help="Form of the result on stdout.",
+        ),
         option(["--strict"], is_flag=True, help="End with code 1 when a finding stands."),
         option(["--quiet", "-q"], is_flag=True, help="No messages on stderr but refusals."),
         option(["--dry-run"], is_flag=True, help="Say what would be read and written; do nothing."),
-    ]  # fmt: skip
+    ]

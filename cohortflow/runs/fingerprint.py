@@ -18,7 +18,7 @@ BLOCK = 1 << 20
 
 
 def fingerprints(files: Iterable[Path], rows: Mapping[str, int]) -> list[dict[str, Any]]:
-    """name, bytes, sha256 and rows of each file, sorted by name. Names, not paths: a copy elsewhere is the same."""
+    """name, bytes, sha256 and rows of each file, sorted by name. No paths: a copy elsewhere is the same."""
     found = [
         {"name": path.name, "bytes": path.stat().st_size, "sha256": sha256(path), "rows": rows.get(path.name)}
         for path in files
@@ -40,7 +40,10 @@ def sha256(path: Path) -> str:
 
 def versions() -> dict[str, str]:
     """Versions of Python and of the libraries that figures or files depend on."""
-    return {"python": platform.python_version(), **{name: importlib.metadata.version(name) for name in LIBRARIES}}
+    return {
+        "python": platform.python_version(),
+        **{name: importlib.metadata.version(name) for name in LIBRARIES},
+    }
 
 
 def made_at() -> str | None:

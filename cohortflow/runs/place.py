@@ -19,7 +19,7 @@ MARK = "run.json"
 
 
 def check_free(target: Path, *, force: bool, mark: str = MARK) -> None:
-    """OutputError unless `target` may be written: not there, an empty folder, or, with `force`, an earlier one.
+    """OutputError unless `target` may be written: not there, empty, or, with `force`, an earlier one.
 
     Only a folder that holds `mark` is ever replaced, so that a slip of the keyboard costs no other work.
     """

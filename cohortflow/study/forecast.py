@@ -143,7 +143,7 @@ def read_value(table: Table, ground: Ground) -> ValueSpec:
         margin=margin,
         discount_rate=table.number_of("discount_rate", 0.0, least=0.0),
         timing=table.text("timing", "middle", choices=TIMINGS),
-        first_period_discounted=table.flag("first_period_discounted", True),
+        first_period_discounted=table.flag("first_period_discounted", None),
         on_move=_on_move(table, ground.states),
     )
 

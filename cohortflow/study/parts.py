@@ -173,14 +173,15 @@ class MoveValue:
 
 @dataclass(frozen=True)
 class ValueSpec:
-    """[value]: contribution a customer and period by state; None = estimated from amounts times `margin`."""
+    """[value]: contribution a customer and period by state; None = estimated from amounts times `margin`.
+    `first_period_discounted`: None = as the timing says."""
 
     currency: str
     per_period: Mapping[str, float] | None
     margin: float | None = None
     discount_rate: float = 0.0
     timing: str = "middle"
-    first_period_discounted: bool = True
+    first_period_discounted: bool | None = None
     on_move: tuple[MoveValue, ...] = ()
 
 

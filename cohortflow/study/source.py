@@ -147,9 +147,10 @@ class Table:
             raise self.refuse(key, f"needs a number {_range(least, most)}, got {value}.")
         return float(value)
 
-    def flag(self, key: str, default: bool) -> bool:
+    def flag(self, key: str, default: bool | None) -> bool | None:
         """true or false."""
-        return bool(self.get(key, default, bool, "true or false"))
+        value: bool | None = self.get(key, default, bool, "true or false")
+        return value
 
     def day(self, key: str, default: Any = REQUIRED) -> Any:
         """A date, written as a TOML date or as text."""

@@ -1,0 +1,149 @@
+"""One forecast, from study to folder: every step in order, then all of it written at once or not at all.
+
+    RUN/ run.json  report.html  rejected.csv  charts/*.svg  tally/  tables/*.csv
+
+What cannot be made (no exit, no data) is absent, not empty; run.json says why. Same input, study and seed
+give the same bytes: rows are sorted, floats written in full, no time is written but SOURCE_DATE_EPOCH's.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any, ClassVar
+
+import pandas as pd
+
+from cohortflow.errors import CallError, listed, nearest
+from cohortflow.estimator import Fit
+from cohortflow.history import count, read
+from cohortflow.history.check import Check
+from cohortflow.record import Record, frozen_mapping
+from cohortflow.runs import write
+from cohortflow.runs.findings import fit_findings
+from cohortflow.runs.place import whole_folder
+from cohortflow.runs.steps import Forecast, fit_study, forecast_study
+from cohortflow.runs.tables import fit_tables, forecast_tables, in_order
+from cohortflow.study import Study, read_study
+from cohortflow.tally import Tally
+
+STAGES = ("check", "fit", "project", "run")
+Progress = Callable[[str], None]
+
+
+@dataclass(frozen=True, repr=False, eq=False)
+class Run(Record):
+    """A forecast as far as it was made.
+
+    stage : check | fit | project | run, how far
+    tables : the contract's tables by name;  absent : those that could not be made -> the reason
+    findings : codes, "what" or "what:state", that a reader must know before believing the numbers
+    path : the folder, None when nothing was written
+    """
+
+    study: Study
+    stage: str
+    by: str | None
+    check: Check
+    rejected: pd.DataFrame
+    tally: Tally | None
+    fit: Fit | None
+    forecasts: Mapping[str, Forecast]
+    tables: Mapping[str, pd.DataFrame]
+    absent: Mapping[str, str]
+    findings: tuple[str, ...]
+    path: Path | None = None
+    kind: ClassVar[str] = "run"
+
+    def to_frame(self) -> pd.DataFrame:
+        """table, rows, columns: what there is."""
+        rows = [(name, len(frame), ", ".join(map(str, frame.columns))) for name, frame in self.tables.items()]
+        return pd.DataFrame(rows, columns=["table", "rows", "columns"])
+
+    def headline(self) -> str:
+        where = f" in {self.path}" if self.path else ""
+        return f"{self.stage} of {self.study.title}: {len(self.tables)} tables{where}"
+
+    def about(self) -> Mapping[str, Any]:
+        return {"stage": self.stage, "by": self.by, "seed": self.study.seed, "findings": list(self.findings)}
+
+
+def run(
+    study: Study | str | Path,
+    *,
+    upto: str = "run",
+    by: str | None = None,
+    out: str | Path | None = None,
+    force: bool = False,
+    keep_values: bool = False,
+    progress: Progress | None = None,
+) -> Run:
+    """Do everything that a study asks for, or only up to a stage, and write it into one folder.
+
+    Parameters
+    ----------
+    study : a Study, or the path of a study file
+    upto : "check" (read, label, account), "fit" (rates), "project" (futures) or "run" (charts and report too)
+    by : a segment column: also separately for each of its values
+    out : the new folder; None writes nothing. `force` replaces an earlier run there
+    keep_values : write the offending values into rejected.csv too (they may be personal data)
+    progress : told what is being done
+
+    Raises OutputError when the folder may not be written, and whatever the steps refuse.
+    """
+    if upto not in STAGES:
+        raise CallError(f'Unknown stage "{upto}"{nearest(upto, STAGES)}. Stages: {listed(STAGES)}.')
+    study = study if isinstance(study, Study) else read_study(study)
+    tell = progress or _silent
+    if out is None:
+        return _made(study, upto, by, tell)
+    with whole_folder(Path(out), force=force) as part:
+        done = _made(study, upto, by, tell)
+        tell("writing")
+        write.run_folder(done, part, keep_values=keep_values)
+    return replace(done, path=Path(out))
+
+
+def _made(study: Study, upto: str, by: str | None, tell: Progress) -> Run:
+    tell("reading")
+    history = read(study)
+    tables = {"accounting": history.check.to_frame()}
+    tally, fitted, forecasts = None, None, {}
+    if upto != "check":
+        tell("counting")
+        tally = count(history)
+        tell("fitting")
+        fitted = fit_study(study, tally, by=by)
+        tables |= fit_tables(fitted, level=study.level)
+    if fitted is not None and upto in ("project", "run"):
+        tell("projecting")
+        forecasts = {forecast.segment: forecast for forecast in forecast_study(study, fitted)}
+        tables |= forecast_tables(forecasts.values())
+    return Run(
+        study,
+        upto,
+        by,
+        history.check,
+        history.rejected,
+        tally,
+        fitted,
+        frozen_mapping(forecasts),
+        frozen_mapping(in_order(tables)),
+        frozen_mapping(_absent(forecasts, tables)),
+        (*history.check.findings, *(fit_findings(fitted) if fitted else ())),
+    )
+
+
+def _absent(forecasts: Mapping[str, Forecast], tables: Mapping[str, pd.DataFrame]) -> dict[str, str]:
+    """Tables that no segment could make, with the reason of the first."""
+    reasons: dict[str, str] = {}
+    for forecast in forecasts.values():
+        for name, reason in forecast.absent.items():
+            if name not in tables:
+                reasons.setdefault(name, reason)
+    return reasons
+
+
+def _silent(what: str) -> None:
+    return None

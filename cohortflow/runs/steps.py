@@ -1,0 +1,153 @@
+"""The library calls that a study amounts to, one function a step; `run` makes only these."""
+
+from __future__ import annotations
+
+import inspect
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from typing import Any, TypeVar
+
+from cohortflow.errors import CallError, NotIdentified
+from cohortflow.estimator import Fit, fit
+from cohortflow.estimator.variants import MODELS
+from cohortflow.projector import (
+    ExitTimes,
+    Joiners,
+    LongRun,
+    Projection,
+    Retention,
+    Value,
+    joiner_forecast,
+    long_run,
+    project,
+    retention,
+    time_to_exit,
+    value,
+)
+from cohortflow.study import Study
+from cohortflow.tally import Tally
+
+ALL = "all"
+T = TypeVar("T")
+
+
+@dataclass(frozen=True)
+class Forecast:
+    """What one segment's fit leads to; `absent` names what could not be made, with the reason."""
+
+    segment: str
+    fit: Fit
+    joiners: Joiners
+    projection: Projection
+    long_run: LongRun
+    exits: ExitTimes | None
+    retention: Retention | None
+    value: Value | None
+    absent: dict[str, str]
+
+
+def fit_study(study: Study, tally: Tally, *, by: str | None = None) -> Fit:
+    """`cf.fit(tally, model=..., window=..., half_life=..., exclude=..., by=...)` as [model] says."""
+    spec = study.model
+    if spec.name == "best":
+        raise CallError(
+            'The model "best" is chosen by back-tests, which this version does not make yet; name a model '
+            "in [model] name or by --model."
+        )
+    taken = inspect.signature(MODELS[spec.name]).parameters if spec.name in MODELS else {}
+    given = {"bands": spec.bands or None, "types": spec.types}
+    options = {name: option for name, option in given.items() if option is not None and name in taken}
+    return fit(
+        tally,
+        model=spec.name,
+        window=spec.window,
+        half_life=spec.half_life,
+        exclude=spec.exclude,
+        by=by,
+        **options,
+    )
+
+
+def forecast_study(study: Study, fitted: Fit) -> Iterator[Forecast]:
+    """The forecasts of all customers and, if the fit has segments, of each of them."""
+    for segment, part in {ALL: fitted, **fitted.segments}.items():
+        yield forecast_segment(study, part, segment)
+
+
+def forecast_segment(study: Study, fitted: Fit, segment: str = ALL) -> Forecast:
+    """`cf.project`, `long_run`, `time_to_exit`, `retention`, `value` of one fit, as the study says.
+
+    Every call gets the study's level and, as `rng`, its seed, so that each can be repeated alone.
+    """
+    tally = fitted.tally
+    start, joiners = tally.mix(), joiners_study(study, tally, segment)
+    shared: dict[str, Any] = {"level": study.level, "segment": segment, "rng": study.seed}
+    absent: dict[str, str] = {}
+
+    def tried(name: str, make: Callable[[], T]) -> T | None:
+        try:
+            return make()
+        except NotIdentified as error:
+            absent[name] = str(error)
+            return None
+
+    return Forecast(
+        segment,
+        fitted,
+        joiners,
+        project(fitted, periods=study.horizon, joiners=joiners, totals=study.totals, **shared),
+        long_run(fitted, joiners=joiners, start=start, **shared),
+        tried("exits", lambda: time_to_exit(fitted, **shared)),
+        tried("retention", lambda: retention(fitted, periods=ages(study, tally), **shared)),
+        tried("value", lambda: value_study(study, fitted, joiners, **shared)),
+        absent,
+    )
+
+
+def ages(study: Study, tally: Tally) -> int:
+    """Periods since joining that the retention curve covers: the window counted, or the horizon if longer."""
+    return max(study.horizon, tally.meta.last - tally.meta.first)
+
+
+def value_study(study: Study, fitted: Fit, joiners: Joiners, **shared: Any) -> Value | None:
+    """`cf.value(fit, per_period=..., discount_rate=..., timing=...)` for ever; None without [value].
+
+    NotIdentified for per_period = "observed", which this version does not estimate yet.
+    """
+    spec = study.value
+    if spec is None:
+        return None
+    if spec.per_period is None:
+        raise NotIdentified(
+            'per_period = "observed" is read and checked, but this version does not estimate it yet; give '
+            "amounts by state in [value] per_period."
+        )
+    return value(
+        fitted,
+        per_period=spec.per_period,
+        on_move=spec.on_move,
+        discount_rate=spec.discount_rate,
+        timing=spec.timing,
+        first_period_discounted=spec.first_period_discounted,
+        currency=spec.currency,
+        start=fitted.tally.mix(),
+        joiners=joiners.a_period(),
+        **shared,
+    )
+
+
+def joiners_study(study: Study, tally: Tally, segment: str = ALL) -> Joiners:
+    """`cf.joiner_forecast(tally, periods, method=...)`; "planned" with the rows of the file.
+
+    Bare counts do not tell who joined: unless the study names a method, nobody joins. The plan of all
+    customers adds up the segments; that of a segment is its own rows.
+    """
+    method = study.joiners.method
+    if "starts" not in tally.meta.tables and study.origin_of.get("joiners.method", "default") == "default":
+        method = "none"
+    plan = [
+        {"period": row.period, "kind": row.kind, "state": row.state, "customers": row.customers}
+        for row in study.joiners.rows
+        if segment in (ALL, row.segment)
+    ]
+    return joiner_forecast(tally, study.horizon, method=method, plan=plan if method == "planned" else None)
