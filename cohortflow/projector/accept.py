@@ -46,10 +46,13 @@ def tally_of(model: Any) -> Tally | None:
 
 
 def covariance_of(model: Any, covariance: Any = None) -> Any:
-    """An object with `.matrix` (K*K, K*K) and `.df`, or None: given, or asked of a Fit by kind.
+    """An object with `.matrix` (K*K, K*K) and `.df` for a model that is one chain; else None.
 
-    `covariance`: None (the Fit's "customer" kind), a kind's name, or such an object itself.
+    `covariance`: None (the Fit's own choice), a kind's name, or such an object itself. A Fit whose chain is not
+    made of its pooled rates (a shrunk one) has no such covariance: its draws tell.
     """
+    if not as_schedule(model).is_plain:
+        return None
     if covariance is not None and not isinstance(covariance, str):
         return covariance
     ask = getattr(model, "covariance", None)
@@ -60,20 +63,20 @@ def covariance_of(model: Any, covariance: Any = None) -> Any:
                 f"{type(model).__name__} has none. Pass the Fit, or a covariance object."
             )
         return None
-    return ask(covariance or "customer")
+    pooled = np.allclose(model.P, as_schedule(model).components[0].matrices[0], atol=1e-12, equal_nan=True)
+    return (ask(covariance) if covariance else ask()) if pooled else None
 
 
-def draws_of(
-    model: Any, draws: Draws | int | None, rng: np.random.Generator, covariance: Any
-) -> Draws | None:
+def draws_of(model: Any, draws: Draws | int | None, rng: np.random.Generator, covariance: Any) -> Draws | None:
     """Draws as given, or that many drawn from a Fit; None when the model has no counts behind it."""
     if isinstance(draws, Draws):
         return draws
     ask = getattr(model, "draws", None)
     if ask is None or draws is None:
         return None
-    kind = covariance if isinstance(covariance, str) else "customer"
-    return ask(int(draws), rng=rng, covariance=kind)
+    if isinstance(draws, bool) or not isinstance(draws, (int, np.integer)) or draws < 2:
+        raise CallError(f"draws is {draws!r}; it takes Draws, or a whole number of draws, at least 2.")
+    return ask(int(draws), rng=rng, **({"covariance": covariance} if isinstance(covariance, str) else {}))
 
 
 def as_counts(values: Any, states: States, *, name: str = "start") -> Array:

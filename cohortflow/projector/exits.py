@@ -171,7 +171,7 @@ def _limits(
     accept.as_level(level)
     low = {m: np.full_like(v, np.nan) for m, v in values.items()}
     high = {m: v.copy() for m, v in low.items()}
-    cov = accept.covariance_of(model, covariance) if schedule.is_plain else None
+    cov = accept.covariance_of(model, covariance)
     if cov is not None:
         _by_delta(schedule, found, values, Spread.of(cov, len(schedule.states), level), low, high)
         return low, high, "delta"

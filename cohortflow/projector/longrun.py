@@ -126,7 +126,7 @@ def long_run(
 
     prospect = seen(schedule)
     rows = tuple(figures(prospect))
-    cov = accept.covariance_of(model, covariance) if schedule.is_plain else None
+    cov = accept.covariance_of(model, covariance)
     if cov is not None:
         limits = delta_limits(prospect, Spread.of(cov, len(schedule.states), level), rate_error)
         return _record(prospect, rows, limits, level, "delta", segment)

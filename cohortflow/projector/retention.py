@@ -286,7 +286,7 @@ def _limits(
     states = schedule.states
     nothing = np.full(periods + 1, np.nan)
     accept.as_level(level)
-    cov = accept.covariance_of(model, covariance) if schedule.is_plain else None
+    cov = accept.covariance_of(model, covariance)
     if cov is None:
         drawn = accept.draws_of(model, draws, accept.as_rng(rng), covariance)
         if drawn is None:

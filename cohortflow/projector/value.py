@@ -353,7 +353,7 @@ def _limits(
     first: int,
 ) -> tuple[dict[tuple[str, str], tuple[float, float]], str]:
     states = schedule.states
-    cov = accept.covariance_of(model, covariance) if schedule.is_plain else None
+    cov = accept.covariance_of(model, covariance)
     if cov is not None:
         spread = Spread.of(cov, len(states), level)
         return _by_delta(schedule, terms, horizon, people, spread, first), "delta"
