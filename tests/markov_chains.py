@@ -1,4 +1,4 @@
-"""Chains and yardsticks for the tests of cohortflow.markov: random chains, and derivatives by complex step."""
+"""Yardsticks for the tests of cohortflow.markov: random chains, and derivatives by complex step."""
 
 from collections.abc import Callable
 
@@ -26,7 +26,9 @@ def positive(size: int, seed: int = 1) -> np.ndarray:
 def chains(draw, least: int = 2, most: int = 6) -> np.ndarray:
     """Any stochastic matrix, zeros and all: reducible, periodic and absorbing ones come up often."""
     size = draw(st.integers(least, most))
-    weights = draw(st.lists(st.lists(st.integers(0, 4), min_size=size, max_size=size), min_size=size, max_size=size))
+    weights = draw(
+        st.lists(st.lists(st.integers(0, 4), min_size=size, max_size=size), min_size=size, max_size=size)
+    )
     counts = np.array(weights, dtype=float)
     counts[counts.sum(axis=1) == 0, 0] = 1.0
     return counts / counts.sum(axis=1, keepdims=True)
@@ -51,7 +53,7 @@ def closed_off(Q: np.ndarray) -> np.ndarray:
 
 
 def complex_step(function: Callable[[np.ndarray], np.ndarray], matrix: np.ndarray) -> np.ndarray:
-    """d function_t / d matrix_ij, shape (T, K, K), to working precision: Im f(P + i h E_ij) / h with h = 1e-40.
+    """d function_t / d matrix_ij, shape (T, K, K), to working precision: Im f(P + i h E_ij) / h, h = 1e-40.
 
     Squire & Trapp (1998), SIAM Review 40(1). `function` must be written without conj, abs or comparison.
     """

@@ -16,6 +16,7 @@ TRAP = np.array([[0.5, 0.2, 0.2, 0.1], [0.0, 0.4, 0.0, 0.6], [0.0, 0.0, 1.0, 0.0
 
 
 @given(losing())
+@settings(deadline=None)
 def test_plain_formulae_give_the_same(Q):
     P, size = closed_off(Q), len(Q)
     found = absorb(P, [size])
@@ -42,6 +43,7 @@ def test_retention_and_distribution_say_the_same_as_the_moments(Q):
 
 
 @given(chains(least=3))
+@settings(deadline=None)
 def test_some_leave_by_each_exit_and_the_rest_stay(P):
     size = len(P)
     P = P.copy()
@@ -81,7 +83,8 @@ def test_quantiles_are_those_of_the_curve():
 
 
 def test_a_base_that_hardly_loses_anybody_keeps_its_digits():
-    # Two states in turn, exits of 3e-13 and 1e-13: in 50 digits, tau = (I - Q)^{-1} 1 with the diagonal from the rest
+    # Two states in turn, exits of 3e-13 and 1e-13: in 50 digits, tau = (I - Q)^{-1} 1 with the diagonal
+    # from the rest
     P = np.array([[0.4, 0.6 - 3e-13, 3e-13], [0.7, 0.3 - 1e-13, 1e-13], [0.0, 0.0, 1.0]])
     with mpmath.workdps(50):
         a, x = mpmath.mpf(float(P[0, 1])), mpmath.mpf(3e-13)
@@ -124,7 +127,9 @@ def test_records_cannot_be_written_to():
 
 
 def test_an_exit_with_a_way_back_is_refused():
-    with pytest.raises(CallError, match=r"state 1 is named as an exit but has moves to \[0\]: an exit is never left"):
+    with pytest.raises(
+        CallError, match=r"state 1 is named as an exit but has moves to \[0\]: an exit is never left"
+    ):
         absorb([[0.9, 0.1], [0.04, 0.96]], [1])
 
 

@@ -21,7 +21,10 @@ def test_a_checked_matrix_is_a_fresh_copy():
         ([0.5, 0.5], r"has shape \(2,\); it must be a square matrix, row = from, column = to"),
         ([[0.5, 0.5]], r"has shape \(1, 2\); it must be a square matrix"),
         (np.zeros((0, 0)), r"has shape \(0, 0\); it must be a square matrix"),
-        ([[0.5, 0.5], [np.nan, np.nan]], r"row 1 of . holds nan: nothing is known about moves out of state 1"),
+        (
+            [[0.5, 0.5], [np.nan, np.nan]],
+            r"row 1 of . holds nan: nothing is known about moves out of state 1",
+        ),
         ([[np.inf, 0.5], [0.0, 1.0]], r"row 0 of . holds inf"),
         ([[1.2, -0.2], [0.0, 1.0]], r".\[0, 1\] is -0\.2; a probability is never negative"),
         ([[0.5, 0.6], [0.0, 1.0]], r"row 0 of . sums to 1\.1"),

@@ -1,4 +1,4 @@
-"""Derivatives of mixes, long-run laws and passage times: each by complex step, on formulae written out plainly."""
+"""Derivatives of mixes, long-run laws and passage times: each by complex step on plain formulae."""
 
 import numpy as np
 import pytest
@@ -36,7 +36,7 @@ def z_of(P: np.ndarray) -> np.ndarray:
 
 
 def on_rows(function):
-    """The function along directions that keep row sums: row i moved by E_ij minus its even spread over the row."""
+    """The function along directions that keep row sums: E_ij minus its even spread over the row."""
 
     def moved(P: np.ndarray) -> np.ndarray:
         return function(P - (P.imag.sum(axis=1, keepdims=True) * 1j) / len(P))
@@ -180,9 +180,18 @@ def test_several_closed_classes_have_no_derivative_of_one_law():
         (lambda: sequence_derivative([], 0), "matrices must hold at least one matrix, all of the same shape"),
         (lambda: sequence_derivative([np.eye(2), np.eye(3)], 0), "all of the same shape"),
         (lambda: sequence_derivative([[[0.5, 0.4], [0, 1]]], 0), r"row 0 of matrices\[0\] sums to 0.9"),
-        (lambda: mix_derivative(P4, 0, steps=0), "steps is 0; it must be a whole number of periods, at least 1"),
-        (lambda: mix_derivative(P4, 0, steps=2, weights=[1, 2]), r"weights has shape \(2,\); it must hold finite"),
-        (lambda: sequence_derivative([P4], 0, joiners=[1, 2]), r"joiners has shape \(2,\); it must hold finite"),
+        (
+            lambda: mix_derivative(P4, 0, steps=0),
+            "steps is 0; it must be a whole number of periods, at least 1",
+        ),
+        (
+            lambda: mix_derivative(P4, 0, steps=2, weights=[1, 2]),
+            r"weights has shape \(2,\); it must hold finite",
+        ),
+        (
+            lambda: sequence_derivative([P4], 0, joiners=[1, 2]),
+            r"joiners has shape \(2,\); it must hold finite",
+        ),
     ],
 )
 def test_bad_calls_are_refused(call, words):

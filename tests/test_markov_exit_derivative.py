@@ -1,4 +1,4 @@
-"""Derivatives of time to exit, exits and the settled base: by complex step on formulae written out plainly."""
+"""Derivatives of time to exit, exits and the settled base: by complex step on plain formulae."""
 
 import numpy as np
 import pytest
@@ -105,7 +105,8 @@ def test_an_exit_must_be_one_of_the_exits():
 
 
 def test_bias_by_the_second_derivative():
-    # E tau^ - tau ~ 1/2 sum_i sum_jl H[(i,j),(i,l)] Cov(p_ij, p_il): H by complex step over the slope's differences
+    # E tau^ - tau ~ 1/2 sum_i sum_jl H[(i,j),(i,l)] Cov(p_ij, p_il): H by complex step over the slope's
+    # differences
     n = np.array([60.0, 200.0, 300.0, 150.0, 0.0])
     h, bias = 1e-5, np.zeros(4)
     inside = [0, 1, 2, 3]

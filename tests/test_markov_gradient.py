@@ -53,7 +53,9 @@ def test_all_forms_of_one_covariance_agree():
 
 def test_a_share_has_its_binomial_variance():
     # g = dp_00: p q / n = 0.3 * 0.7 / 50
-    assert multinomial_variance([[1, 0], [0, 0]], [[0.3, 0.7], [0, 1]], [50, 0]) == pytest.approx(0.3 * 0.7 / 50)
+    assert multinomial_variance([[1, 0], [0, 0]], [[0.3, 0.7], [0, 1]], [50, 0]) == pytest.approx(
+        0.3 * 0.7 / 50
+    )
 
 
 def test_a_row_nobody_was_seen_in_makes_the_variance_unknown_if_it_matters():
@@ -71,7 +73,9 @@ def test_directions_off_the_row_sums_do_not_count():
 def test_shapes_are_checked():
     with pytest.raises(CallError, match=r"gradient has shape \(2, 3\); it must be \(K, K\)"):
         delta_variance(np.zeros((2, 3)), np.zeros((2, 2, 2)))
-    with pytest.raises(CallError, match=r"covariance has shape \(3,\); for 2 states it must be \(2, 2, 2, 2\)"):
+    with pytest.raises(
+        CallError, match=r"covariance has shape \(3,\); for 2 states it must be \(2, 2, 2, 2\)"
+    ):
         delta_variance(np.zeros((2, 2)), np.zeros(3))
     with pytest.raises(CallError, match=r"gradient has shape \(3, 3\); it must be that of P, \(2, 2\)"):
         multinomial_variance(np.zeros((3, 3)), np.eye(2), [1, 1])

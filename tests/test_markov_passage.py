@@ -22,6 +22,7 @@ from tests.markov_chains import LIFECYCLE, chains, positive
 
 
 @given(chains())
+@settings(deadline=None)
 def test_return_times_and_stationary_shares_are_reciprocal(P):
     if analyse(P).irreducible:
         assert stationary(P) * np.diag(mean_first_passage(P)) == pytest.approx(1.0)
@@ -67,12 +68,18 @@ def test_the_fundamental_matrix_gives_the_same_times():
 def test_times_within_a_group_keep_their_digits_beside_one_that_is_almost_cut_off():
     # within the pair (0, 1) a trip takes about 2 periods, to the pair (2, 3) about 1e12: exact by mpmath
     P = np.array(
-        [[0.5, 0.5, 0.0, 0.0], [0.5, 0.5 - 1e-12, 1e-12, 0.0], [0.0, 0.0, 0.5, 0.5], [1e-12, 0.0, 0.5, 0.5 - 1e-12]]
+        [
+            [0.5, 0.5, 0.0, 0.0],
+            [0.5, 0.5 - 1e-12, 1e-12, 0.0],
+            [0.0, 0.0, 0.5, 0.5],
+            [1e-12, 0.0, 0.5, 0.5 - 1e-12],
+        ]
     )
     with mpmath.workdps(50):
         c = mpmath.mpf(1e-12)
         half = mpmath.mpf(0.5)
-        # to state 1: m0 = 1 + m0/2 = 2 exactly; to state 2 from 1: m1 = 1 + m0/2 + (1 - 1/2 - c) m1, m0 = 2 + m1
+        # to state 1: m0 = 1 + m0/2 = 2 exactly; to state 2 from 1: m1 = 1 + m0/2 + (1 - 1/2 - c) m1, m0 =
+        # 2 + m1
         to_two = (1 + half * 2) / (1 - (1 - half - c) - half)
     M = mean_first_passage(P)
     assert M[0, 1] == 2.0

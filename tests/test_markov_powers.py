@@ -25,7 +25,9 @@ def test_very_long_times_keep_their_digits():
     leave = 1e-12
     P = np.array([[1 - leave, leave], [0.0, 1.0]])
     (found,) = first_time(P, np.eye(2)[:1], lambda mix: mix[:, 0] <= 0.5)
-    assert found == pytest.approx(math.log(0.5) / math.log1p(-leave), rel=1e-4)  # 1 - 1e-12 itself has 4 digits
+    assert found == pytest.approx(
+        math.log(0.5) / math.log1p(-leave), rel=1e-4
+    )  # 1 - 1e-12 itself has 4 digits
 
 
 def test_what_never_comes_is_infinite():

@@ -1,8 +1,8 @@
-"""The mix of those remaining: by long products, and in the cases where it depends on the start or is missing."""
+"""The mix of those remaining: by long products, and where it depends on the start or is missing."""
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 
 from cohortflow.errors import CallError, NotIdentified
 from cohortflow.markov import remaining, remaining_from
@@ -19,6 +19,7 @@ def run_down(Q: np.ndarray, law: np.ndarray, periods: int = 5000) -> np.ndarray:
 
 
 @given(losing())
+@settings(deadline=None)
 def test_the_law_repeats_itself_and_the_loss_is_that_of_its_exits(Q):
     kept = remaining(Q)
     if np.isfinite(kept.mix).all():
@@ -31,6 +32,7 @@ def test_the_law_repeats_itself_and_the_loss_is_that_of_its_exits(Q):
 
 
 @given(losing())
+@settings(deadline=None)
 def test_where_it_exists_long_products_find_it(Q):
     kept = remaining(Q)
     if kept.exists and kept.ratio < 0.98:
@@ -40,7 +42,8 @@ def test_where_it_exists_long_products_find_it(Q):
 
 
 def test_entry_states_that_are_never_entered_again_do_no_harm():
-    # methods.md, section E, example matrix: lambda .93721486; u of R L D .350315 .427181 .222504 (recomputed there)
+    # methods.md, section E, example matrix: lambda .93721486; u of R L D .350315 .427181 .222504
+    # (recomputed there)
     kept = remaining(INSIDE)
     assert kept.retention == pytest.approx(0.93721486, abs=5e-9)
     assert kept.mix == pytest.approx([0, 0.350315, 0.427181, 0.222504], abs=5e-7)
@@ -109,7 +112,9 @@ def test_a_periodic_class_repeats_its_law_but_does_not_settle():
     kept = remaining(Q)
     assert (kept.code, kept.exists, kept.ratio) == ("periodic", False, pytest.approx(1.0))
     assert kept.mix.tolist() == pytest.approx([1 / 3, 2 / 3])
-    with pytest.raises(NotIdentified, match="no mix of those remaining from this start: the class .* is periodic"):
+    with pytest.raises(
+        NotIdentified, match="no mix of those remaining from this start: the class .* is periodic"
+    ):
         remaining_from(Q, 0)
 
 

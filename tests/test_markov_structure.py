@@ -5,7 +5,7 @@ import math
 import networkx as nx
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 
 from cohortflow.errors import CallError
 from cohortflow.markov import analyse, cyclic_groups, surely_reaches
@@ -18,6 +18,7 @@ def graph(P: np.ndarray) -> nx.DiGraph:
 
 
 @given(chains())
+@settings(deadline=None)
 def test_classes_and_reachability_are_those_of_the_graph(P):
     found, g = analyse(P), graph(P)
     assert set(map(frozenset, found.classes)) == set(map(frozenset, nx.strongly_connected_components(g)))
@@ -29,6 +30,7 @@ def test_classes_and_reachability_are_those_of_the_graph(P):
 
 
 @given(chains())
+@settings(deadline=None)
 def test_classes_stand_in_order_of_their_smallest_state(P):
     found = analyse(P)
     assert [group[0] for group in found.classes] == sorted(min(group) for group in found.classes)
@@ -36,6 +38,7 @@ def test_classes_stand_in_order_of_their_smallest_state(P):
 
 
 @given(chains())
+@settings(deadline=None)
 def test_a_class_is_aperiodic_exactly_when_its_graph_is(P):
     found = analyse(P)
     for group, length in zip(found.closed, found.periods, strict=True):
@@ -47,6 +50,7 @@ def test_a_class_is_aperiodic_exactly_when_its_graph_is(P):
 
 
 @given(chains())
+@settings(deadline=None)
 def test_groups_of_a_cycle_follow_one_another(P):
     for group in analyse(P).closed:
         parts = cyclic_groups(P, group)
@@ -57,6 +61,7 @@ def test_groups_of_a_cycle_follow_one_another(P):
 
 
 @given(chains())
+@settings(deadline=None)
 def test_certain_arrival_is_what_long_runs_show(P):
     # the chain stopped at state 0, run for very long: mass at 0 tends to 1 exactly where arrival is certain
     stopped = P.copy()

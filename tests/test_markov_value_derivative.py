@@ -64,7 +64,9 @@ def test_without_discount_the_moves_inside_suffice():
 
 
 def test_value_without_end_is_refused():
-    with pytest.raises(NotIdentified, match="with discount 1 and states that are never left the value is infinite"):
+    with pytest.raises(
+        NotIdentified, match="with discount 1 and states that are never left the value is infinite"
+    ):
         discounted_value_derivative([[0.8, 0.2], [0.0, 1.0]], [34.0, 0.0], discount=1.0)
 
 
@@ -79,5 +81,7 @@ def test_the_discount_factor_is_checked(discount):
 def test_rewards_must_fit():
     with pytest.raises(CallError, match=r"reward has shape \(2,\); it needs one number for each of 4 states"):
         discounted_value_derivative(P4, [1, 2], discount=0.9)
-    with pytest.raises(CallError, match=r"move_reward has shape \(2, 2\); it must hold a finite number for every"):
+    with pytest.raises(
+        CallError, match=r"move_reward has shape \(2, 2\); it must hold a finite number for every"
+    ):
         discounted_value_derivative(P4, REWARD, discount=0.9, move_reward=np.zeros((2, 2)))
