@@ -144,7 +144,7 @@ def test_the_last_complete_period_ends_by_the_as_of_day(tmp_path, as_of, last):
 def test_events_at_one_instant_follow_tie_order_then_the_rules(tmp_path):
     text = EVENTS.replace('joins = ["joined"]', 'joins = ["joined"]\ntie_order = ["stopped", "joined"]')
     assert read_study(written(tmp_path, text)).event_order == ("stopped", "joined", "bought")
-    assert read_study(written(tmp_path, EVENTS)).event_order == ("joined", "stopped", "bought")
+    assert read_study(written(tmp_path, EVENTS)).event_order == ("stopped", "joined", "bought")
 
 
 def test_every_part_of_the_forecast_is_read(tmp_path):

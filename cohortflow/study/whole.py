@@ -88,9 +88,11 @@ class Study:
 
     @cached_property
     def known_events(self) -> tuple[str, ...]:
-        """Events that mean something here: those of rules, joins, returns and the tie order."""
+        """Events that mean something here: joins and returns that no rule names, those of the rules in the
+        order of the file, and the tie order's."""
         spec = self.input
-        return tuple(dict.fromkeys((*spec.joins, *self.used_events, *(spec.returns or ()), *spec.tie_order)))
+        unnamed = [e for e in (*spec.joins, *(spec.returns or ())) if e not in self.used_events]
+        return tuple(dict.fromkeys((*unnamed, *self.used_events, *spec.tie_order)))
 
     @cached_property
     def event_order(self) -> tuple[str, ...]:
