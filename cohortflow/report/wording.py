@@ -35,6 +35,14 @@ OUTCOMES: Mapping[str, str] = MappingProxyType(
     {"read": "rows read", "used": "used", "rejected": "rejected", "duplicate": "dropped as duplicates",
      "set_aside": "set aside"}  # fmt: skip
 )
+PARTS: Mapping[str, str] = MappingProxyType(
+    {
+        "rates": "the uncertainty of the rates",
+        "chance": "chance from customer to customer",
+        "common_shocks": "shocks that hit everybody in a period",
+        "joiners": "the uncertainty of joiners",
+    }
+)
 VERDICTS: Mapping[str, tuple[str, str]] = MappingProxyType(
     {
         "unique_limit": (
@@ -186,7 +194,7 @@ def said(code: str) -> str:
     >>> said("after_as_of"), said("some_new_code")
     ('after the last day that counts', 'some new code')
     """
-    return REASONS.get(code) or OUTCOMES.get(code) or code.replace("_", " ")
+    return REASONS.get(code) or OUTCOMES.get(code) or PARTS.get(code) or code.replace("_", " ")
 
 
 def note(code: str) -> str:

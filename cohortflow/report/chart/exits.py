@@ -10,8 +10,8 @@ from matplotlib.axes import Axes
 
 from cohortflow.report.chart.frames import ALL, clear_winner, frame_of
 from cohortflow.report.chart.style import (
-    BAND, BODY, FUTURE, INK, MARGIN, MODEL, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
-    quiet_axis,
+    BAND, BODY, FUTURE, INK, MARGIN, MODEL, PAPER, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style,
+    panel, quiet_axis,
 )  # fmt: skip
 from cohortflow.report.rounding import UNKNOWN, duration, missing, percent, span, unit
 from cohortflow.report.text import label
@@ -62,7 +62,7 @@ def exit_reason_chart(exits: Any, *, segment: str = ALL, width: float = WIDE) ->
     key_high = 0.24 * _key_lines(ways, width)
     row_high = max(ROW_HIGH, 0.17 * len(ways) + 0.1)
     with house_style():
-        body = len(names) * row_high + FOOT_HIGH + key_high
+        body = len(names) * row_high + 0.3 + key_high
         figure = drawing(title, subtitle, width=width, body=body, alt=alt)
         axes = _rows_panel(figure, names, width, top=key_high, row_high=row_high, note=0.55)
         axes.set_xlim(-0.01, 1.02)
@@ -184,7 +184,7 @@ def _key(figure: Drawing, ways: list[str], width: float, high: float) -> None:
 def _mark(axes: Axes, x: float, y: float, k: int) -> None:
     colour = (INK, MODEL, FUTURE)[k % 3]
     axes.plot([x], [y], MARKS[k % len(MARKS)], color=colour, markersize=5,
-              markerfacecolor=colour if k % 2 == 0 else "white", zorder=3)  # fmt: skip
+              markerfacecolor=colour if k % 2 == 0 else PAPER, zorder=3)  # fmt: skip
 
 
 def _reason_mark(axes: Axes, y: float, row: pd.Series, k: int) -> None:

@@ -9,7 +9,8 @@ import pandas as pd
 
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
-    BODY, FAINT, INK, MARGIN, MODEL, SMALL, SOFT, WIDE, Drawing, drawing, house_style, panel, quiet_axis,
+    BODY, FAINT, INK, MARGIN, MODEL, MODEL_BAND, PAPER, SMALL, SOFT, WIDE, Drawing, drawing, house_style, panel,
+    quiet_axis,
 )  # fmt: skip
 from cohortflow.report.rounding import count, percent, span, unit
 
@@ -35,6 +36,9 @@ def retention_chart(
     with house_style():
         figure = drawing(title, subtitle, width=width, body=HIGH + FOOT_HIGH + 0.1, alt=_alt(title, rows, kind))
         axes = panel(figure, MARGIN + 0.42, 0.1, width - 2 * MARGIN - 0.42 - 0.85, HIGH)
+        if "model_low" in rows:
+            axes.fill_between(rows["periods_since_joining"], rows["model_low"], rows["model_high"], color=MODEL_BAND,
+                              linewidth=0)  # fmt: skip
         _points(axes, rows)
         axes.plot(rows["periods_since_joining"], rows["model"], color=MODEL, linestyle=(0, (4, 1.6)))
         axes.set_ylim(0, 1.02)
@@ -50,16 +54,20 @@ def retention_chart(
 
 
 def immature(rows: pd.DataFrame) -> np.ndarray:
-    """(ages,) bool: fewer than half of the joiners, or under 30 customers, have been followed to that age."""
+    """(ages,) bool: ages that fewer than half of the joiners can have reached, or with under 30 customers."""
     at_risk = rows["at_risk"].to_numpy(dtype=float)
-    reached = rows["reached"].to_numpy(dtype=float) if "reached" in rows else at_risk
-    return (reached < 0.5 * np.nanmax(reached)) | (at_risk < FEW)
+    few = at_risk < FEW
+    if "immature" in rows:
+        return rows["immature"].to_numpy(dtype=bool) | few
+    return (at_risk < 0.5 * np.nanmax(at_risk)) | few if (at_risk > 0).any() else few
 
 
 def departure(rows: pd.DataFrame) -> int | None:
-    """First age (in periods) from which the model lies outside the observed interval at every later mature age."""
+    """First age from which the model's interval lies outside the observed one at every later mature age."""
     usable = rows[~immature(rows) & rows["observed"].notna().to_numpy()]
-    outside = (usable["model"] < usable["observed_low"]) | (usable["model"] > usable["observed_high"])
+    low = usable["model_low"].fillna(usable["model"]) if "model_low" in usable else usable["model"]
+    high = usable["model_high"].fillna(usable["model"]) if "model_high" in usable else usable["model"]
+    outside = (high < usable["observed_low"]) | (low > usable["observed_high"])
     inside = np.flatnonzero(~outside.to_numpy())
     first = inside[-1] + 1 if len(inside) else 0
     return int(usable["periods_since_joining"].iloc[first]) if first < len(usable) else None
@@ -70,7 +78,7 @@ def _points(axes: Any, rows: pd.DataFrame) -> None:
     young = immature(rows)
     ages = rows["periods_since_joining"].to_numpy(dtype=float)
     axes.vlines(ages[seen], rows["observed_low"][seen], rows["observed_high"][seen], color=SOFT, linewidth=1.0)
-    for mask, face in ((seen & ~young, INK), (seen & young, "white")):
+    for mask, face in ((seen & ~young, INK), (seen & young, PAPER)):
         axes.plot(ages[mask], rows["observed"][mask], "o", color=INK, markerfacecolor=face, markersize=3.6,
                   markeredgewidth=0.9)  # fmt: skip
     if (seen & young).any():
@@ -111,7 +119,7 @@ def _title(rows: pd.DataFrame, kind: str) -> str:
     if apart is None:
         return f"{head}; the model says {percent(last['model'])}, within the interval"
     side = "too many" if last["model"] > last["observed"] else "too few"
-    return f"{head}; from age {apart} on the model keeps {side} ({percent(last['model'])} at age {age})"
+    return f"{head}; from age {apart} on the model lies outside and keeps {side} ({percent(last['model'])} at age {age})"
 
 
 def _alt(title: str, rows: pd.DataFrame, kind: str) -> str:

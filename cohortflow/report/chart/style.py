@@ -40,7 +40,7 @@ THEME = {
     "shade-1": (SHADES[1], "#1d312f"),
     "shade-2": (SHADES[2], "#21433e"),
     "shade-3": (SHADES[3], "#27594f"),
-    "shade-4": (SHADES[4], "#3d8577"),
+    "shade-4": (SHADES[4], "#2f6b60"),
     "shade-5": (SHADES[5], "#6db3a3"),
     "shade-6": (SHADES[6], "#a9dacd"),
 }

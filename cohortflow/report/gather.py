@@ -1,0 +1,228 @@
+"""From the contract's tables to a Content: every section of the report in its final order."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from functools import partial
+
+import pandas as pd
+
+from cohortflow.report import tabulate
+from cohortflow.report.chart.base import base_chart
+from cohortflow.report.chart.diagram import state_diagram
+from cohortflow.report.chart.exits import exit_reason_chart, exit_time_chart
+from cohortflow.report.chart.groups import groups_chart, groups_of
+from cohortflow.report.chart.moves import moves_chart
+from cohortflow.report.chart.retention import retention_chart
+from cohortflow.report.chart.rollforward import rollforward_chart
+from cohortflow.report.chart.settling import settled, settling_chart
+from cohortflow.report.chart.style import Drawing
+from cohortflow.report.content import Content, Draw, Exhibit, Facts, Section
+from cohortflow.report.findings import findings
+from cohortflow.report.headlines import headlines, summary
+from cohortflow.report.methods import assumptions, methods_section, states_table
+from cohortflow.report.rounding import count, missing, percent, span, unit
+from cohortflow.report.table import Table
+from cohortflow.report.wording import CAUTIONS, DEFINITIONS, EXPLAIN, JOINERS, said, verdict
+from cohortflow.states import ALL_LIVE
+
+Tables = Mapping[str, pd.DataFrame]
+
+
+def gather(facts: Facts, tables: Tables, *, approach: pd.DataFrame | None = None) -> Content:
+    """The report of one run.
+
+    tables : the contract's frames by name; what is absent is left out of the report, and said
+    approach : shares by periods_ahead and state, farther than the horizon (default: the projection's own)
+    """
+    whole = dict(tables)
+    own = {name: _of_segment(frame, facts.segment) for name, frame in whole.items()}
+    if approach is None and "projection" in own:
+        rows = own["projection"]
+        approach = rows[rows["state"].isin(list(facts.states.remaining))]
+    sections = (
+        _counted(facts, own), _moves(facts, own), _heading(facts, own, whole), _settles(facts, own, approach),
+        _stay(facts, own), _rests(facts, own), _definitions(facts), methods_section(facts),
+    )  # fmt: skip
+    return Content(facts, summary(facts), headlines(facts, own), findings(facts, own, approach), sections)
+
+
+def _of_segment(frame: pd.DataFrame, segment: str) -> pd.DataFrame:
+    if "segment" not in frame.columns or segment not in set(frame["segment"]):
+        return frame
+    return frame[frame["segment"] == segment].reset_index(drop=True)
+
+
+def _drawn(chart: object, *args: object, **options: object) -> Draw:
+    bound = partial(chart, *args, **options)  # type: ignore[operator]
+
+    def draw(width: float) -> Drawing:
+        return bound(width=width)
+
+    return draw
+
+
+def _counted(facts: Facts, tables: Tables) -> Section:
+    lead, exhibits = [], []
+    if facts.customers is not None:
+        until = f" Rows count up to {facts.as_of}." if facts.as_of else ""
+        lead.append(f"{count(facts.customers)} customers were followed from {facts.first} to {facts.last}.{until}")
+    if "accounting" in tables:
+        rows = tables["accounting"]
+        read, used = (rows.loc[rows["outcome"] == o, "rows"].sum() for o in ("read", "used"))
+        lead.append(f"{count(used)} of {count(read)} rows were used; every other row has a reason.")
+        exhibits.append(Exhibit("accounting", table=tabulate.accounting_table(rows), open=True))
+    exhibits.append(Exhibit("states", table=states_table(facts), open=True))
+    return Section("counted", "What was counted", tuple(lead), tuple(exhibits))
+
+
+def _moves(facts: Facts, tables: Tables) -> Section:
+    if "transitions" not in tables:
+        return Section("moves", "How customers move", (_lacking(facts, "transitions"),))
+    rows, states = tables["transitions"], facts.states
+    one = unit(facts.kind, 1)
+    window = f" from {facts.first} to {facts.last}" if facts.first else ""
+    lead = (
+        f"Rates are shares of counted moves{window}: of the customers in a state at the end of a {one}, the share in "
+        f"each state at the end of the next.",
+    )
+    exhibits = (
+        Exhibit("moves", _drawn(moves_chart, rows, states=states, period=facts.kind), tabulate.moves_table(rows),
+                (EXPLAIN["interval"],), narrow=False),
+        Exhibit("diagram", _drawn(state_diagram, rows, states=states, period=facts.kind),
+                tabulate.matrix_table(rows, states), narrow=len(states) <= 6),
+    )  # fmt: skip
+    return Section("moves", "How customers move", lead, exhibits)
+
+
+def _heading(facts: Facts, tables: Tables, whole: Tables) -> Section:
+    title = "Where the base is heading"
+    if "projection" not in tables:
+        return Section("heading", title, (_lacking(facts, "projection"),))
+    rows, past = tables["projection"], tables.get("rollforward")
+    quantities = facts.quantities
+    horizon = f"{facts.horizon} {unit(facts.kind, facts.horizon)}"
+    lead = (f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.",)
+    chart = _drawn(base_chart, rows, past, totals=facts.totals, states=facts.states, kind=facts.kind)
+    exhibits = [Exhibit("base", chart, tabulate.base_table(rows, quantities=quantities), (EXPLAIN["band"],))]
+    if past is not None and (past["state"] == ALL_LIVE).any():
+        exhibits.append(Exhibit("rollforward", _drawn(rollforward_chart, past), tabulate.rollforward_table(past),
+                                (EXPLAIN["rollforward"],)))  # fmt: skip
+    by_segment = _segments(whole["projection"])
+    if by_segment is not None:
+        exhibits.append(Exhibit("segments", table=by_segment, open=True))
+    return Section("heading", title, lead, tuple(exhibits))
+
+
+def _segments(rows: pd.DataFrame) -> Table | None:
+    """Live customers of each segment today and at the horizon, when there are segments."""
+    live = rows[rows["state"] == ALL_LIVE] if "segment" in rows else rows.iloc[:0]
+    names = [s for s in dict.fromkeys(live["segment"])] if len(live) else []
+    if len(names) < 2:
+        return None
+    out = []
+    for segment in names:
+        own = live[live["segment"] == segment].sort_values("periods_ahead")
+        now, then = own.iloc[0], own.iloc[-1]
+        out.append((tabulate.name(segment), count(now["customers"]), count(then["customers"]),
+                    span(then["low"], then["high"])))  # fmt: skip
+    last = str(live.sort_values("periods_ahead")["period"].iloc[-1])
+    return Table("Live customers by segment", ("segment", "today", last, "band"), tuple(out))
+
+
+def _settles(facts: Facts, tables: Tables, approach: pd.DataFrame | None) -> Section:
+    title = "Where it settles"
+    if "long_run" not in tables:
+        return Section("settles", title, (_lacking(facts, "long_run"),))
+    rows, exhibits = tables["long_run"], []
+    headline, why = verdict(facts.verdict) if facts.verdict else ("", "")
+    lead = [w for w in (f"{headline} {why}".strip(), _base_words(facts, rows), _remaining_words(facts, rows)) if w]
+    goal = settled(rows)
+    table = tabulate.long_run_table(rows, tables.get("projection"))
+    words = [EXPLAIN["periods_to_settle"]]
+    words += [EXPLAIN[m] for m in ("settled_base", "remaining_mix") if _has(rows, m)]
+    if approach is not None and len(goal.rows):
+        exhibits.append(Exhibit("settling", _drawn(settling_chart, approach, rows, kind=facts.kind), table,
+                                tuple(words)))  # fmt: skip
+    elif table.rows:
+        exhibits.append(Exhibit("settling", table=table, plain_words=tuple(words), open=True))
+    groups = groups_of(rows)
+    if len(groups) > 1 and not all(g.exit for g in groups):
+        exhibits.append(Exhibit("groups", _drawn(groups_chart, rows)))
+    return Section("settles", title, tuple(lead), tuple(exhibits))
+
+
+def _has(rows: pd.DataFrame, measure: str) -> bool:
+    return bool(rows.loc[rows["measure"] == measure, "value"].notna().any())
+
+
+def _base_words(facts: Facts, rows: pd.DataFrame) -> str:
+    own = rows[(rows["measure"] == "settled_base") & (rows["state"] == ALL_LIVE)]
+    if not len(own):
+        return ""
+    row = own.iloc[0]
+    if missing(row["value"]):
+        return f"The base with constant joiners has no settled size: {said(str(row.get('note', '')))}."
+    figures = tabulate.with_interval(row["value"], row["low"], row["high"], count)
+    return f"With the assumed joiners every {unit(facts.kind, 1)} the live base would settle at {figures} customers."
+
+
+def _remaining_words(facts: Facts, rows: pd.DataFrame) -> str:
+    own = rows[(rows["measure"] == "remaining_retention") & rows["value"].notna()]
+    if not len(own):
+        return ""
+    row = own.iloc[0]
+    figures = tabulate.with_interval(row["value"], row["low"], row["high"], percent)
+    return f"Of today's customers who are still here after a long time, {figures} stay each further {unit(facts.kind, 1)}."
+
+
+def _stay(facts: Facts, tables: Tables) -> Section:
+    title, exhibits = "How long they stay and how they leave", []
+    if "retention" in tables:
+        rows = tables["retention"]
+        exhibits.append(
+            Exhibit("retention", _drawn(retention_chart, rows, kind=facts.kind, level=facts.level),
+                    tabulate.retention_table(rows, kind=facts.kind), (EXPLAIN["retention"],))
+        )  # fmt: skip
+    if "exits" in tables:
+        rows = tables["exits"]
+        exhibits.append(
+            Exhibit("exit_time", _drawn(exit_time_chart, rows, kind=facts.kind),
+                    tabulate.exits_table(rows, kind=facts.kind), (EXPLAIN["exit_time"],))
+        )  # fmt: skip
+        if len(facts.states.exits) > 1:
+            exhibits.append(Exhibit("exit_reason", _drawn(exit_reason_chart, rows)))
+    lead = () if exhibits else (_lacking(facts, "exits"),)
+    return Section("stay", title, lead, tuple(exhibits))
+
+
+def _rests(facts: Facts, tables: Tables) -> Section:
+    exhibits = []
+    if "adequacy" in tables:
+        exhibits.append(Exhibit("adequacy", table=_adequacy_table(tables["adequacy"]), open=True))
+    lead = ("The projection rests on these assumptions:",)
+    return Section("rests", "What this rests on, and cautions", lead, tuple(exhibits),
+                   points=(*assumptions(facts), *CAUTIONS))  # fmt: skip
+
+
+def _adequacy_table(rows: pd.DataFrame) -> Table:
+    cells = [tuple(_word(row.get(c)) for c in ("check", "what", "verdict", "advice")) for _, row in rows.iterrows()]
+    return Table("Assumptions tested", ("check", "what", "verdict", "advice"), tuple(cells), texts=(0, 1, 2, 3))
+
+
+def _word(value: object) -> str:
+    return "" if missing(value) else said(str(value))
+
+
+def _definitions(facts: Facts) -> Section:
+    return Section("definitions", "Definitions", terms=DEFINITIONS)
+
+
+def _lacking(facts: Facts, table: str) -> str:
+    why = facts.absent.get(table)
+    return f"This part is absent: {why}" if why else "This part was not asked for."
+
+
+def sections_of(content: Content) -> Sequence[Section]:
+    """The sections that have something to show."""
+    return [s for s in content.sections if s.lead or s.exhibits or s.points or s.terms]

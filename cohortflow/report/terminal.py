@@ -1,0 +1,103 @@
+"""What `check`, `fit`, `project` and `run` print: the findings first, then tables of at most 80 columns.
+
+Made from the contract's tables, so that the same text can be had from a run folder.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+
+import pandas as pd
+
+from cohortflow.report import tabulate
+from cohortflow.report.table import WIDTH, Table, plain_text
+from cohortflow.report.text import clean, wrap
+from cohortflow.report.wording import note
+from cohortflow.report.wording import verdict as verdict_words
+from cohortflow.states import ALL_LIVE, States
+
+Frames = Mapping[str, pd.DataFrame]
+
+
+def printout(*parts: str) -> str:
+    """Parts of a printout, an empty line between them, one line end after the last.
+
+    >>> printout("findings", "", "table")
+    'findings\\n\\ntable\\n'
+    """
+    return "\n\n".join(part for part in parts if part) + "\n"
+
+
+def findings_text(findings: Iterable[str]) -> str:
+    """The findings as a list of sentences; "what:state" codes are put into words.
+
+    >>> print(findings_text(["few_at_risk:quiet"]))
+    Findings
+    - Fewer than 30 departures from quiet were counted: its rates are little more
+      than a hint.
+    """
+    lines = []
+    for finding in findings:
+        first, *rest = wrap(clean(sentence(finding)), WIDTH - 2)
+        lines += [f"- {first}", *(f"  {line}" for line in rest)]
+    return "\n".join(["Findings", *lines]) if lines else "Nothing was found that spoils a number."
+
+
+def sentence(finding: str) -> str:
+    """A finding in words: a note of a record, "note@segment", or a sentence that is one already."""
+    code, at, segment = finding.partition("@")
+    if " " in code:
+        return finding
+    return f"{segment}: {note(code)}" if at else note(code)
+
+
+def check_text(tables: Frames, findings: Iterable[str]) -> str:
+    """Findings and the accounting of the rows."""
+    return printout(findings_text(findings), plain_text(tabulate.accounting_table(tables["accounting"])))
+
+
+def fit_text(tables: Frames, findings: Iterable[str], states: States) -> str:
+    """Findings, then the rates as a square and move by move, for each segment."""
+    transitions = tables["transitions"]
+    parts = [findings_text(findings)]
+    for segment in segments(transitions):
+        parts.append(_titled(tabulate.matrix_table(transitions, states, segment=segment), segment))
+        parts.append(_titled(tabulate.moves_table(transitions, segment=segment), segment))
+    return printout(*parts)
+
+
+def project_text(
+    tables: Frames, findings: Iterable[str], states: States, *, kind: str, totals: Sequence[str], verdict: str
+) -> str:
+    """Findings, the base period by period, the states at the horizon, the long run, time to exit."""
+    projection = tables["projection"]
+    sums = [ALL_LIVE, *totals]
+    parts = [findings_text(findings)]
+    for segment in segments(projection):
+        rows = [*sums, *states.remaining, *states.exits]
+        shown = [
+            tabulate.base_table(projection, quantities=sums, segment=segment),
+            tabulate.outlook_table(projection, quantities=rows, segment=segment),
+            tabulate.long_run_table(tables["long_run"], projection, segment=segment),
+        ]
+        if "exits" in tables:
+            shown.append(tabulate.exits_table(tables["exits"], kind=kind, segment=segment))
+        parts += [_titled(table, segment) for table in shown]
+    return printout(*parts, "\n".join(wrap(" ".join(verdict_words(verdict)), WIDTH)))
+
+
+def run_text(tables: Frames, findings: Iterable[str], quantities: Sequence[str]) -> str:
+    """Findings, then the base today, next period and at the horizon."""
+    outlook = tabulate.outlook_table(tables["projection"], quantities=quantities)
+    return printout(findings_text(findings), plain_text(outlook))
+
+
+def segments(frame: pd.DataFrame) -> list[str]:
+    """The segments of a table, in its order."""
+    return [str(name) for name in pd.unique(frame["segment"])]
+
+
+def _titled(table: Table, segment: str) -> str:
+    if segment != "all":
+        table = Table(f"{table.caption}: {clean(segment)}", table.heads, table.rows, table.texts, table.note)
+    return plain_text(table)
