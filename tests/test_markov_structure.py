@@ -6,9 +6,10 @@ import networkx as nx
 import numpy as np
 import pytest
 from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from cohortflow.errors import CallError
-from cohortflow.markov import analyse, cyclic_groups, surely_reaches
+from cohortflow.markov import analyse, cyclic_groups, determined, surely_reaches
 from cohortflow.markov.structure import communicating_classes, is_closed, leads_to, period, reachability, sure
 from tests.markov_chains import LIFECYCLE, chains
 
@@ -105,6 +106,25 @@ def test_small_functions_by_eye():
     assert leads_to(moves, [0], barred=[1]).tolist() == [True, False, True, False]
     assert sure(moves, [3]).tolist() == [True, True, True, True]
     assert reachability(np.array([[0]])).tolist() == [[True]]
+
+
+@given(chains(), st.integers(0, 5))
+@settings(deadline=None)
+def test_what_does_not_lead_to_an_unknown_row_is_a_chain_of_its_own(P, place):
+    unknown = P.copy()
+    unknown[place % len(P)] = np.nan
+    known = determined(unknown)
+    g = graph(P)
+    assert set(known) == set(range(len(P))) - nx.ancestors(g, place % len(P)) - {place % len(P)}
+    assert P[np.ix_(known, known)].sum(axis=1) == pytest.approx(np.ones(len(known)))
+
+
+def test_with_every_row_known_all_is_determined():
+    assert determined(LIFECYCLE) == (0, 1, 2, 3, 4)
+    with pytest.raises(
+        CallError, match=r"P has shape \(2, 2\) and allowed \(3, 3\); both must be the same square"
+    ):
+        determined(np.eye(2), allowed=np.eye(3))
 
 
 def test_a_period_belongs_to_one_class():

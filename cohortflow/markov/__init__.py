@@ -77,7 +77,15 @@ from cohortflow.markov.stationary import (
     stationary_laws,
     time_average_matrix,
 )
-from cohortflow.markov.structure import Structure, analyse, cyclic_groups, surely_reaches
+from cohortflow.markov.structure import (
+    Structure,
+    analyse,
+    cyclic_groups,
+    determined,
+    leads_to,
+    reachability,
+    surely_reaches,
+)
 from cohortflow.markov.value_derivative import (
     ValueDerivative,
     discounted_value_derivative,
@@ -105,6 +113,7 @@ __all__ = [
     "cycle_limits",
     "cyclic_groups",
     "delta_variance",
+    "determined",
     "deviation_matrix",
     "discounted_value_derivative",
     "embedding",
@@ -121,6 +130,7 @@ __all__ = [
     "joined",
     "kemeny_constant",
     "kemeny_derivative",
+    "leads_to",
     "limit_from_start",
     "limit_matrix",
     "mean_first_passage",
@@ -132,6 +142,7 @@ __all__ = [
     "periods_to_settle",
     "principal_logarithm",
     "reach_probability",
+    "reachability",
     "remaining",
     "remaining_from",
     "remaining_mix_derivative",

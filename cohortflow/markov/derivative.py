@@ -32,7 +32,7 @@ from cohortflow.markov.arguments import (
 from cohortflow.markov.elimination import eliminate
 from cohortflow.markov.gradient import Derivative, base_row, joined
 from cohortflow.markov.quasi_stationary import Remaining, remaining
-from cohortflow.markov.stationary import deviation_matrix, stationary
+from cohortflow.markov.stationary import law_and_deviation
 from cohortflow.markov.structure import sure
 
 
@@ -93,8 +93,8 @@ def stationary_derivative(P: ArrayLike) -> Derivative:
            [ 0.1562, -0.4687]])
     """
     matrix = check_stochastic(P)
-    law = stationary(matrix)
-    return Derivative(law, law[None, None], deviation_matrix(matrix).T[None])
+    law, away = law_and_deviation(matrix)
+    return Derivative(law, law[None, None], away.T[None])
 
 
 def kemeny_derivative(P: ArrayLike) -> Derivative:
@@ -105,8 +105,7 @@ def kemeny_derivative(P: ArrayLike) -> Derivative:
            [-1.5625,  4.6875]])
     """
     matrix = check_stochastic(P)
-    stationary(matrix)
-    away = deviation_matrix(matrix)
+    _, away = law_and_deviation(matrix)
     return Derivative(np.array([np.trace(away) + 1.0]), away[:, None, :], away.T[:, None, :])
 
 
@@ -117,7 +116,7 @@ def fundamental_derivative(P: ArrayLike, start: ArrayLike) -> Derivative:
     array([ 1.375, -0.375])
     """
     matrix = check_stochastic(P)
-    law, away = stationary(matrix), deviation_matrix(matrix)
+    law, away = law_and_deviation(matrix)
     whole = away + law
     row = check_start(start, len(matrix)) @ whole
     return Derivative(row, np.stack([row, -law])[:, None, :], np.stack([whole.T, (away @ away).T]))

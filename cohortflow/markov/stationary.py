@@ -37,13 +37,7 @@ def stationary(P: ArrayLike) -> Array:
     >>> stationary([[0.5, 0.25, 0.25], [0.5, 0.0, 0.5], [0.25, 0.25, 0.5]])
     array([0.4, 0.2, 0.4])
     """
-    laws = stationary_laws(P)
-    if len(laws) > 1:
-        raise NotIdentified(
-            f"there are {len(laws)} closed classes, so no single stationary law: the long-run mix depends on "
-            "the start; ask stationary_laws for one law a class, or limit_from_start with a start"
-        )
-    return laws[0]
+    return _only(stationary_laws(P))
 
 
 def stationary_laws(P: ArrayLike) -> Array:
@@ -203,6 +197,26 @@ def periods_to_settle(P: ArrayLike, start: ArrayLike, *, tolerance: float = 0.01
         return math.inf
     away = first_time(matrix, law[None, :], lambda mix: 0.5 * np.abs(mix - limit).sum(axis=1) <= tolerance)
     return float(away[0])
+
+
+def law_and_deviation(matrix: Array) -> tuple[Array, Array]:
+    """pi (K,) and D (K, K) of a checked chain with one closed class. Raises NotIdentified if it has several.
+
+    >>> law, away = law_and_deviation(np.array([[0.9, 0.1], [0.3, 0.7]]))
+    >>> law.round(4), away.round(4).tolist()
+    (array([0.75, 0.25]), [[0.625, -0.625], [-1.875, 1.875]])
+    """
+    parts = structure_of(matrix)
+    return _only(_laws(matrix, parts)), _deviation(matrix, parts)
+
+
+def _only(laws: Array) -> Array:
+    if len(laws) > 1:
+        raise NotIdentified(
+            f"there are {len(laws)} closed classes, so no single stationary law: the long-run mix depends on "
+            "the start; ask stationary_laws for one law a class, or limit_from_start with a start"
+        )
+    return laws[0]
 
 
 def _laws(matrix: Array, parts: Structure) -> Array:

@@ -175,6 +175,27 @@ def sure(moves: NDArray[Any], targets: Iterable[int]) -> Flags:
     return ~leads_to(moves, np.flatnonzero(lost).tolist(), barred=targets)
 
 
+def determined(P: ArrayLike, *, allowed: ArrayLike | None = None) -> tuple[int, ...]:
+    """States whose future is known though some rows of P (K, K) are NaN: no path leads to such a row.
+
+    They never move to the others, so P cut down to them is a chain of its own, and everything that starts
+    in them can be had from it. `allowed`: flags (K, K) of the moves that may happen, where P > 0 alone
+    would trust that what was not seen cannot be.
+
+    >>> P = [[0.9, 0.1, 0.0], [0.5, 0.5, 0.0], [float("nan")] * 3]
+    >>> determined(P)
+    (0, 1)
+    >>> determined(P, allowed=[[1, 1, 0], [1, 1, 1], [0, 0, 1]])
+    ()
+    """
+    matrix = np.asarray(P, dtype=float)
+    moves = matrix > 0 if allowed is None else np.asarray(allowed) > 0
+    if matrix.ndim != 2 or matrix.shape[0] != matrix.shape[1] or moves.shape != matrix.shape:
+        raise CallError(f"P has shape {matrix.shape} and allowed {moves.shape}; both must be the same square")
+    unknown = np.flatnonzero(np.isnan(matrix).any(axis=1)).tolist()
+    return tuple(np.flatnonzero(~leads_to(moves, unknown)).tolist())
+
+
 def _levels(inside: Flags) -> NDArray[np.int64]:
     """Steps from the first state of a communicating class to each of its states."""
     level = np.full(len(inside), -1, dtype=np.int64)

@@ -499,7 +499,7 @@ def test_c25b_norris_time_to_the_end():
 
 
 def satellites(*, one_launch: bool = False) -> np.ndarray:
-    """Tijms (2003), A First Course in Stochastic Models, p. 172. VERIFIED: tests of the octave queueing toolbox.
+    """Tijms (2003), A First Course in Stochastic Models, p. 172. VERIFIED: octave queueing toolbox, tests.
 
     States 0 .. 5: one to six satellites; 6, 7: two or one left, a shuttle being prepared; 8: system down.
     """
@@ -605,7 +605,7 @@ def whale() -> np.ndarray:
     """Killer whale: yearling, juvenile, mature, post-reproductive, dead. The source has column = from.
 
     VERIFIED inputs: Brault & Caswell (1993), Ecology 74, 1444-1454; Caswell (2001), Matrix Population Models,
-    example 5.1. Outputs of popbio 2.8 (`fundamental.matrix`) run in R; the book's own printed outputs were not seen.
+    example 5.1. Outputs of popbio 2.8 (`fundamental.matrix`) run in R; the book's own were not seen.
     """
     U = np.array([[0, 0, 0, 0], [0.9775, 0.9111, 0, 0], [0, 0.0736, 0.9534, 0], [0, 0, 0.0452, 0.9804]]).T
     return np.vstack([np.column_stack([U, 1 - U.sum(axis=1)]), np.eye(5)[4]])
