@@ -37,7 +37,7 @@ Key = tuple[str, str, str, str]
 class LongRun(Record):
     """The long run of a model.
 
-    verdict : unique_limit | unique_cycle | depends_on_start | no_limit | exits_only
+    verdict : unique_limit | unique_cycle | depends_on_start | no_limit | exits_only | not_identified
     reasons : codes: "closed_group:a+b", "periodic_group:a+b", "several_groups", "exits_reachable",
         "rows_without_data:x"
     figures : the rows;  limits : key of a figure -> (low, high);  method : delta | draws | none

@@ -47,7 +47,7 @@ def _matched(at: Prospect, found: Limits) -> Limits:
 def _group(at: Prospect, group: list[int], origin: str, spread: Spread) -> Limits:
     """Stationary shares (logit) and return times (log) within one closed group."""
     names, block = at.schedule.states.names, np.ix_(group, group)
-    if at.chain.clouded[group].any() or len(group) == 1:
+    if len(group) == 1:
         return {}
     slope = stationary_derivative(at.chain.P[block])
     out: Limits = {}

@@ -88,7 +88,12 @@ class Prospect:
 
     @cached_property
     def verdict(self) -> str:
-        """exits_only | unique_limit | unique_cycle | depends_on_start | no_limit."""
+        """exits_only | unique_limit | unique_cycle | depends_on_start | no_limit | not_identified.
+
+        Of the starts that cannot reach a row without data; not_identified when there are none.
+        """
+        if not self._begun.any():
+            return "not_identified"
         if not self.groups:
             return "exits_only"
         if any(period > 1 for _, period in self.groups):
@@ -99,9 +104,10 @@ class Prospect:
 
     @cached_property
     def _begun(self) -> Array:
-        """(S,) what can be reached from a state that is not an exit."""
+        """(S,) what can be reached from a state that is not an exit, rows without data being out of reach."""
         inside = ~self.schedule.states.exit_mask
         laws = (self.chain.start[inside].sum(axis=0) + self.chain.join[inside].sum(axis=0)) > 0
+        laws &= ~self.chain.clouded
         return self.structure.reachable[laws].any(axis=0)
 
     def _length(self, state: int) -> int:
@@ -136,31 +142,24 @@ def _groups(at: Prospect) -> Iterator[Figure]:
     for number, (group, period) in enumerate(at.groups, start=1):
         origin = f"group {number}"
         members = sorted({int(at.chain.report[s]) for s in group})
-        clouded = bool(at.chain.clouded[list(group)].any())
         for member in members:
             yield Figure("closed_group", names[member], origin, float(number))
         yield Figure("group_period", "", origin, float(period))
-        law = laws[at.structure.closed.index(group)]
-        yield from _stationary(at, group, law, members, origin, clouded)
+        yield from _stationary(at, group, laws[at.structure.closed.index(group)], members, origin)
 
 
 def _stationary(
-    at: Prospect, group: tuple[int, ...], law: Array, members: list[int], origin: str, clouded: bool
+    at: Prospect, group: tuple[int, ...], law: Array, members: list[int], origin: str
 ) -> Iterator[Figure]:
     names = at.schedule.states.names
     length = at._length(group[0])
-    note = "rows_without_data" if clouded else ""
     for place in range(length):
         here = at.fold(np.where(at.chain.place == place, law, 0.0)) if length > 1 else at.fold(law)
-        share = here / here.sum()
+        label = at.position(place) if length > 1 else ""
         for member in members:
-            value = math.nan if clouded else float(share[member])
-            label = at.position(place) if length > 1 else ""
-            yield Figure("stationary_share", names[member], origin, value, note or label)
+            yield Figure("stationary_share", names[member], origin, float(here[member] / here.sum()), label)
     for member in members:
-        share_of_time = at.fold(law)[member]
-        value = math.nan if clouded or share_of_time == 0 else 1.0 / float(share_of_time)
-        yield Figure("return_time", names[member], names[member], value, note)
+        yield Figure("return_time", names[member], names[member], 1.0 / float(at.fold(law)[member]))
 
 
 # ---- limits from a start ----
@@ -224,24 +223,30 @@ class Ring:
         return float(self.kept.retention ** (1.0 / len(self.matrices)))
 
 
-def rings(schedule: Schedule, first_step: int) -> list[Ring]:
-    """One Ring a component."""
+def rings(at: Prospect) -> list[Ring]:
+    """One Ring a component; states that can reach a row without data are taken out (their rows are 0)."""
     out = []
-    for part in schedule.components:
-        inside = np.flatnonzero(~schedule.states.exit_mask[part.report])
+    for number, part in enumerate(at.schedule.components):
+        inside = np.flatnonzero(~at.schedule.states.exit_mask[part.report])
         turns = len(part.matrices) if part.tail == "cycle" else 1
-        begin = first_step if part.tail == "cycle" else max(first_step, len(part.matrices) - 1)
-        matrices = [filled(part.matrix(begin + k))[np.ix_(inside, inside)] for k in range(turns)]
+        begin = at.first_step if part.tail == "cycle" else max(at.first_step, len(part.matrices) - 1)
+        own = at.chain.component == number
+        last = int(at.chain.place[own].max()) - turns + 1
+        matrices = []
+        for k in range(turns):
+            unclear = at.chain.clouded[own & (at.chain.place == last + k)][inside]
+            matrix = filled(part.matrix(begin + k))[np.ix_(inside, inside)]
+            matrices.append(np.where(unclear[:, None], 0.0, matrix))
         product = matrices[0] if turns == 1 else np.linalg.multi_dot([*matrices, np.eye(len(inside))])
         out.append(Ring(part, matrices, product, remaining(product)))
     return out
 
 
 def _remaining(at: Prospect) -> Iterator[Figure]:
-    if at.chain.clouded[np.flatnonzero(at._begun)].any():
+    if at.chain.undefined()[~at.schedule.states.exit_mask].all():
         yield Figure("remaining_retention", "", "", math.nan, "rows_without_data")
         return
-    found = [(c, r) for c, r in enumerate(rings(at.schedule, at.first_step)) if _peopled(at, c)]
+    found = [(c, r) for c, r in enumerate(rings(at)) if _peopled(at, c)]
     top = max(r.retention for _, r in found)
     leading = [(c, r) for c, r in found if r.retention >= top * (1 - _SAME)]
     code = leading[0][1].kept.code if len(leading) == 1 else "depends_on_start"
@@ -249,9 +254,10 @@ def _remaining(at: Prospect) -> Iterator[Figure]:
     yield Figure("remaining_retention", "", "", top, note)
     if len(leading) > 1:
         yield Figure("remaining_mix", "", "", math.nan, code)
-    elif code in ("exists", "some_starts"):
+    elif code in ("exists", "some_starts", "periodic"):
         yield from _ring_mix(at, leading[0][1], leading[0][1].kept.mix, "", note)
-        yield from _settling(at, leading[0][1], note)
+        if code != "periodic":
+            yield from _settling(at, leading[0][1], note)
     elif code == "depends_on_start" and len(at.schedule.components) == 1:
         yield from _mix_by_start(at, leading[0][1])
     else:
