@@ -12,6 +12,7 @@ from cohortflow.cli.faults import DONE, FINDING
 from cohortflow.cli.plan import plan_text
 from cohortflow.record import plain
 from cohortflow.report.table import csv_text
+from cohortflow.report.terminal import sentence
 from cohortflow.runs.folder import Run, run
 from cohortflow.runs.write import record
 from cohortflow.study import Study
@@ -32,11 +33,13 @@ def perform(call: Call, main: str, words: Words, *, folder: Callable[[Study], Pa
     done = run(study, upto=call.command, by=call.by, out=out, force=call.force, progress=console.progress)
     console.result(shown(done, call.form, main, words))
     if call.form != "table":
-        for finding in done.findings:
-            console.say(f"finding: {finding}")
+        for finding in done.serious:
+            console.say(f"finding: {sentence(finding)}")
+    for warning in done.warnings:
+        console.say(warning)
     if done.path:
         console.say(f"Written to {done.path}")
-    return FINDING if call.strict and done.findings else DONE
+    return FINDING if call.strict and done.serious else DONE
 
 
 def shown(done: Run, form: str, main: str, words: Words) -> str:

@@ -6,13 +6,18 @@ Made from the contract's tables, so that the same text can be had from a run fol
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import replace
+from typing import Any
+from typing import Any
 
 import pandas as pd
 
+from cohortflow.history import Finding
 from cohortflow.report import tabulate
+from cohortflow.report.rounding import count
 from cohortflow.report.table import WIDTH, Table, plain_text
-from cohortflow.report.text import clean, wrap
-from cohortflow.report.wording import note
+from cohortflow.report.text import clean, listing, wrap
+from cohortflow.report.wording import note, said
 from cohortflow.report.wording import verdict as verdict_words
 from cohortflow.states import ALL_LIVE, States
 
@@ -28,35 +33,27 @@ def printout(*parts: str) -> str:
     return "\n\n".join(part for part in parts if part) + "\n"
 
 
-def findings_text(findings: Iterable[str]) -> str:
-    """The findings as a list of sentences; "what:state" codes are put into words.
+def findings_text(findings: Iterable[Finding]) -> str:
+    """The findings as a list of sentences with their sizes, the serious ones first.
 
-    >>> print(findings_text(["few_at_risk:quiet"]))
+    >>> print(findings_text([Finding("few_at_risk", serious=False, detail={"state": "quiet"})]))
     Findings
     - Fewer than 30 departures from quiet were counted: its rates are little more
       than a hint.
     """
     lines = []
-    for finding in findings:
-        first, *rest = wrap(clean(sentence(finding)), WIDTH - 2)
+    for finding in sorted(findings, key=lambda f: not f.serious):
+        first, *rest = wrap(clean(note(finding)), WIDTH - 2)
         lines += [f"- {first}", *(f"  {line}" for line in rest)]
     return "\n".join(["Findings", *lines]) if lines else "Nothing was found that spoils a number."
 
 
-def sentence(finding: str) -> str:
-    """A finding in words: a note of a record, "note@segment", or a sentence that is one already."""
-    code, at, segment = finding.partition("@")
-    if " " in code:
-        return finding
-    return f"{segment}: {note(code)}" if at else note(code)
-
-
-def check_text(tables: Frames, findings: Iterable[str]) -> str:
+def check_text(tables: Frames, findings: Iterable[Finding]) -> str:
     """Findings and the accounting of the rows."""
     return printout(findings_text(findings), plain_text(tabulate.accounting_table(tables["accounting"])))
 
 
-def fit_text(tables: Frames, findings: Iterable[str], states: States) -> str:
+def fit_text(tables: Frames, findings: Iterable[Finding], states: States) -> str:
     """Findings, then the rates as a square and move by move, for each segment."""
     transitions = tables["transitions"]
     parts = [findings_text(findings)]
@@ -67,7 +64,13 @@ def fit_text(tables: Frames, findings: Iterable[str], states: States) -> str:
 
 
 def project_text(
-    tables: Frames, findings: Iterable[str], states: States, *, kind: str, totals: Sequence[str], verdict: str
+    tables: Frames,
+    findings: Iterable[Finding],
+    states: States,
+    *,
+    kind: str,
+    totals: Sequence[str],
+    verdict: str,
 ) -> str:
     """Findings, the base period by period, the states at the horizon, the long run, time to exit."""
     projection = tables["projection"]
@@ -86,7 +89,7 @@ def project_text(
     return printout(*parts, "\n".join(wrap(" ".join(verdict_words(verdict)), WIDTH)))
 
 
-def run_text(tables: Frames, findings: Iterable[str], quantities: Sequence[str]) -> str:
+def run_text(tables: Frames, findings: Iterable[Finding], quantities: Sequence[str]) -> str:
     """Findings, then the base today, next period and at the horizon."""
     outlook = tabulate.outlook_table(tables["projection"], quantities=quantities)
     return printout(findings_text(findings), plain_text(outlook))
@@ -99,5 +102,5 @@ def segments(frame: pd.DataFrame) -> list[str]:
 
 def _titled(table: Table, segment: str) -> str:
     if segment != "all":
-        table = Table(f"{table.caption}: {clean(segment)}", table.heads, table.rows, table.texts, table.note)
+        table = replace(table, caption=f"{table.caption}: {clean(segment)}")
     return plain_text(table)

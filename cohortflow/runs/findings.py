@@ -5,28 +5,38 @@ from __future__ import annotations
 from collections.abc import Iterable
 
 from cohortflow.estimator import Fit
+from cohortflow.history import Finding
 from cohortflow.study import Study
 
+HINTS = ("few_at_risk", "no_buckets")
 UNUSED = {
-    "value": "[value]: money by state and move",
-    "scenarios": "[[scenario]]: what-ifs",
-    "adjustments": "[[adjustment]]: manual overlays",
-    "budget": "[budget]: the comparison with the budget",
+    "scenarios": "[[scenario]]",
+    "adjustments": "[[adjustment]]",
+    "budget": "[budget]",
 }
 
 
-def fit_findings(fitted: Fit) -> list[str]:
-    """Codes of the fit's notes that spoil a number, segments as "note@segment"."""
-    found = [note for note in fitted.notes]
-    for segment, part in fitted.segments.items():
-        found += [f"{note}@{segment}" for note in part.notes]
-    return found
+def fit_findings(fitted: Fit) -> tuple[Finding, ...]:
+    """The fit's notes ("no_data:quiet") as findings; those that only widen an interval are not serious."""
+    return tuple(
+        _finding(note, segment)
+        for segment, part in {"all": fitted, **fitted.segments}.items()
+        for note in part.notes
+    )
+
+
+def _finding(note: str, segment: str) -> Finding:
+    code, _, state = note.partition(":")
+    detail = {"state": state} if state else {}
+    if segment != "all":
+        detail["segment"] = segment
+    return Finding(code, serious=code not in HINTS, detail=detail)
 
 
 def not_yet(study: Study, used: Iterable[str] = ()) -> list[str]:
     """Sentences on tables of the study that were read and checked but have no effect yet."""
     return [
-        f"{what} is read and checked, but not used by this version yet."
-        for key, what in UNUSED.items()
+        f"{table} was read and checked, but this version does not use it yet."
+        for key, table in UNUSED.items()
         if getattr(study, key) and key not in used
     ]

@@ -17,11 +17,10 @@ import pandas as pd
 
 from cohortflow.errors import CallError, listed, nearest
 from cohortflow.estimator import Fit
-from cohortflow.history import count, read
-from cohortflow.history.check import Check
+from cohortflow.history import Check, Finding, InputFile, count, read
 from cohortflow.record import Record, frozen_mapping
 from cohortflow.runs import write
-from cohortflow.runs.findings import fit_findings
+from cohortflow.runs.findings import fit_findings, not_yet
 from cohortflow.runs.place import whole_folder
 from cohortflow.runs.steps import Forecast, fit_study, forecast_study
 from cohortflow.runs.tables import fit_tables, forecast_tables, in_order
@@ -38,7 +37,8 @@ class Run(Record):
 
     stage : check | fit | project | run, how far
     tables : the contract's tables by name;  absent : those that could not be made -> the reason
-    findings : codes, "what" or "what:state", that a reader must know before believing the numbers
+    findings : what a reader must know before believing the numbers; the serious ones stand with --strict
+    inputs : fingerprints of the files read;  warnings : sentences on parts of the study not used yet
     path : the folder, None when nothing was written
     """
 
@@ -52,7 +52,9 @@ class Run(Record):
     forecasts: Mapping[str, Forecast]
     tables: Mapping[str, pd.DataFrame]
     absent: Mapping[str, str]
-    findings: tuple[str, ...]
+    findings: tuple[Finding, ...]
+    inputs: tuple[InputFile, ...]
+    warnings: tuple[str, ...] = ()
     path: Path | None = None
     kind: ClassVar[str] = "run"
 
@@ -66,7 +68,13 @@ class Run(Record):
         return f"{self.stage} of {self.study.title}: {len(self.tables)} tables{where}"
 
     def about(self) -> Mapping[str, Any]:
-        return {"stage": self.stage, "by": self.by, "seed": self.study.seed, "findings": list(self.findings)}
+        findings = [finding.to_dict() for finding in self.findings]
+        return {"stage": self.stage, "by": self.by, "seed": self.study.seed, "findings": findings}
+
+    @property
+    def serious(self) -> tuple[Finding, ...]:
+        """Findings that stand in the way under --strict."""
+        return tuple(finding for finding in self.findings if finding.serious)
 
 
 def run(
@@ -97,17 +105,17 @@ def run(
     study = study if isinstance(study, Study) else read_study(study)
     tell = progress or _silent
     if out is None:
-        return _made(study, upto, by, tell)
+        return _made(study, upto, by, tell, keep_values=keep_values)
     with whole_folder(Path(out), force=force) as part:
-        done = _made(study, upto, by, tell)
+        done = _made(study, upto, by, tell, keep_values=keep_values)
         tell("writing")
-        write.run_folder(done, part, keep_values=keep_values)
+        write.run_folder(done, part)
     return replace(done, path=Path(out))
 
 
-def _made(study: Study, upto: str, by: str | None, tell: Progress) -> Run:
+def _made(study: Study, upto: str, by: str | None, tell: Progress, *, keep_values: bool) -> Run:
     tell("reading")
-    history = read(study)
+    history = read(study, keep_values=keep_values)
     tables = {"accounting": history.check.to_frame()}
     tally, fitted, forecasts = None, None, {}
     if upto != "check":
@@ -132,6 +140,8 @@ def _made(study: Study, upto: str, by: str | None, tell: Progress) -> Run:
         frozen_mapping(in_order(tables)),
         frozen_mapping(_absent(forecasts, tables)),
         (*history.check.findings, *(fit_findings(fitted) if fitted else ())),
+        history.inputs,
+        tuple(not_yet(study)),
     )
 
 

@@ -3,30 +3,47 @@
 from __future__ import annotations
 
 import json
+from dataclasses import asdict
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from cohortflow import __version__
+from cohortflow.history import save_tally
 from cohortflow.record import plain
 from cohortflow.report.table import csv_text
-from cohortflow.runs.findings import not_yet
-from cohortflow.runs.fingerprint import made_at, versions
+from cohortflow.runs.facts import facts_of
 from cohortflow.runs.place import MARK, write_text
+from cohortflow.runs.versions import made_at, versions
 
 if TYPE_CHECKING:
     from cohortflow.runs.folder import Run
 
 FORMAT_VERSION = 1
-VALUE_COLUMN = "value"
 
 
-def run_folder(done: Run, folder: Path, *, keep_values: bool) -> None:
+def run_folder(done: Run, folder: Path) -> None:
     """Write everything that the run holds into an empty folder."""
     for name, frame in done.tables.items():
         write_text(folder / "tables" / f"{name}.csv", csv_text(frame))
-    rejected = done.rejected if keep_values else done.rejected.drop(columns=VALUE_COLUMN, errors="ignore")
-    write_text(folder / "rejected.csv", csv_text(rejected))
+    write_text(folder / "rejected.csv", csv_text(done.rejected))
+    if done.tally is not None:
+        save_tally(done.tally, folder / "tally")
+    if done.stage == "run":
+        write_report(done, folder)
     write_text(folder / MARK, record_text(done))
+
+
+def write_report(done: Run, folder: Path) -> None:
+    """report.html and charts/*.svg."""
+    from cohortflow.report.chart.style import WIDE, svg
+    from cohortflow.report.gather import gather
+    from cohortflow.report.page import page_html
+
+    content = gather(facts_of(done), done.tables)
+    write_text(folder / "report.html", page_html(content))
+    for exhibit in content.exhibits():
+        if exhibit.draw is not None:
+            write_text(folder / "charts" / f"{exhibit.key}.svg", svg(exhibit.draw(WIDE)))
 
 
 def record_text(done: Run) -> str:
@@ -49,10 +66,10 @@ def record(done: Run) -> dict[str, Any]:
         "study": study.to_dict(),
         "set_by": dict(study.origin_of),
         "definitions": study.digest(),
-        "inputs": done.check.inputs,
+        "inputs": [asdict(file) for file in done.inputs],
         "accounting": done.tables["accounting"].to_dict(orient="records"),
-        "findings": list(done.findings),
-        "warnings": not_yet(study),
+        "findings": [finding.to_dict() for finding in done.findings],
+        "warnings": list(done.warnings),
         "absent": dict(done.absent),
         "tables": {
             name: {"rows": len(frame), "columns": [str(c) for c in frame.columns]}
