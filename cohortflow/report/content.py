@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from types import MappingProxyType
+from typing import Any
 
 from cohortflow.periods import Calendar
 from cohortflow.report.chart.style import Drawing
@@ -23,7 +24,7 @@ class Facts:
     """Settings and sizes that the tables do not tell.
 
     first, last : labels of the first and last period counted;  as_of : last day that counts
-    notes : codes of the records ("few_at_risk:quiet", ...);  verdict, reasons : of the long run
+    notes : codes of the records ("few_at_risk:quiet", ...) and findings of the check;  verdict, reasons : of the long run
     parts : what the bands hold;  validated : periods ahead that back-tests bear out (None: not tested)
     rules : state -> its rule in words;  inputs : (name, bytes, rows, sha256);  settings : name -> "value (origin)"
     absent : table -> why it could not be made
@@ -44,7 +45,7 @@ class Facts:
     moves: int | None = None
     totals: Mapping[str, tuple[str, ...]] = field(default_factory=lambda: MappingProxyType({}))
     excluded: tuple[str, ...] = ()
-    notes: tuple[str, ...] = ()
+    notes: tuple[Any, ...] = ()
     verdict: str = ""
     reasons: tuple[str, ...] = ()
     parts: tuple[str, ...] = ()

@@ -10,6 +10,7 @@ from cohortflow.report.chart.retention import departure
 from cohortflow.report.chart.settling import settled
 from cohortflow.report.content import Facts, Finding
 from cohortflow.report.rounding import count, duration, missing, percent, unit
+from cohortflow.report.tabulate import whole_accounting
 from cohortflow.report.text import listing, upper_first
 from cohortflow.report.wording import a_period, note, said
 
@@ -35,7 +36,7 @@ def findings(facts: Facts, tables: Tables, approach: pd.DataFrame | None = None)
 def _rows(tables: Tables) -> Iterator[Finding]:
     if "accounting" not in tables:
         return
-    rows = tables["accounting"]
+    rows = whole_accounting(tables["accounting"])
     read = rows.loc[rows["outcome"] == "read", "rows"].sum()
     rejected = rows[(rows["outcome"] == "rejected") & (rows["rows"] > 0)]
     if not len(rejected) or not read:
@@ -50,8 +51,8 @@ def _rows(tables: Tables) -> Iterator[Finding]:
 
 def _notes(facts: Facts) -> Iterator[Finding]:
     for code in facts.notes:
-        kind = code.partition(":")[0].partition("@")[0]
-        yield Finding(note(code), PLACES.get(kind, "rests"))
+        kind = str(getattr(code, "code", code)).partition(":")[0].partition("@")[0]
+        yield Finding(note(code), PLACES.get(kind, "rests" if isinstance(code, str) else "counted"))
 
 
 def _settings(facts: Facts) -> Iterator[Finding]:

@@ -15,7 +15,7 @@ from markupsafe import Markup
 
 from cohortflow.report.chart.style import NARROW, THEME, WIDE, Drawing, svg
 from cohortflow.report.content import Content, Exhibit
-from cohortflow.report.gather import sections_of
+from cohortflow.report.sections import sections_of
 from cohortflow.report.rounding import percent
 from cohortflow.report.text import clean
 

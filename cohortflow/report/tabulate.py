@@ -12,7 +12,7 @@ from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.retention import immature
 from cohortflow.report.rounding import count, decimal, foot, missing, percent, signed, span, unit
 from cohortflow.report.table import Table
-from cohortflow.report.text import clean
+from cohortflow.report.text import clean, shorten
 from cohortflow.report.wording import OUTCOMES, said
 from cohortflow.states import ALL_LIVE, States
 
@@ -37,7 +37,7 @@ LINE_WORDS = {
 
 def name(quantity: Any) -> str:
     """A state or total as printed in tables."""
-    return "all live customers" if quantity == ALL_LIVE else clean(quantity)
+    return "all live customers" if quantity == ALL_LIVE else shorten(clean(quantity), 60)
 
 
 def with_interval(value: float, low: float, high: float, form: Any) -> str:
@@ -45,9 +45,15 @@ def with_interval(value: float, low: float, high: float, form: Any) -> str:
     return form(value) if missing(low) or missing(value) or low == high else f"{form(value)} ({span(low, high, form)})"
 
 
+def whole_accounting(accounting: Any) -> pd.DataFrame:
+    """The accounting over all files: its total lines (file "all") when it has them."""
+    rows = frame_of(accounting, ["outcome", "reason", "file", "rows", "customers"])
+    return rows[rows["file"] == ALL] if (rows["file"] == ALL).any() else rows
+
+
 def accounting_table(accounting: Any) -> Table:
     """What became of the rows: read = used + rejected + duplicates + set aside."""
-    rows = frame_of(accounting, ["outcome", "reason", "rows", "customers"])
+    rows = whole_accounting(accounting)
     rows = rows.assign(reason=rows["reason"].fillna("").astype(str))
     out = []
     for outcome in OUTCOMES:

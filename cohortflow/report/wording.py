@@ -7,28 +7,35 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from types import MappingProxyType
+from typing import Any
 
-from cohortflow.report.rounding import unit
+from cohortflow.report.rounding import count, unit
 from cohortflow.report.text import label, upper_first
 
 REASONS: Mapping[str, str] = MappingProxyType(
     {
-        "bad_date": "date not readable",
-        "bad_amount": "amount not readable",
-        "bad_number": "number not readable",
-        "id_missing": "customer id missing",
-        "id_placeholder": "customer id is a placeholder",
+        "id_missing": "customer id missing or a placeholder",
+        "time_unreadable": "date or time not readable",
+        "amount_unreadable": "amount not readable",
+        "valid_until_unreadable": "paid-up-to date not readable",
+        "weight_unreadable": "weight not readable",
+        "end_unreadable": "end date not readable",
+        "end_before_start": "end before start",
+        "outside_calendar": "outside the calendar file",
+        "encoding_unreadable": "not readable as text",
+        "ragged_row": "wrong number of columns",
         "unknown_event": "event named nowhere in the study",
         "unknown_state": "state named nowhere in the study",
         "ignored_event": "event that the study ignores",
         "after_as_of": "after the last day that counts",
         "after_exit": "after the customer had left",
         "before_log_start": "before the log was complete",
+        "before_calendar": "before the calendar file begins",
         "incomplete_period": "in the incomplete last period",
         "impossible_move": "a move declared impossible",
-        "identical_row": "same as another row in every column",
-        "repeated_row": "same as another row in every column",
-        "older_version": "an older version of a row",
+        "identical": "same as another row in every column",
+        "superseded": "an older version of a row",
+        "overlap": "overlaps another row of the customer",
     }
 )
 OUTCOMES: Mapping[str, str] = MappingProxyType(
@@ -184,6 +191,15 @@ NOTES: Mapping[str, str] = MappingProxyType(
         "never_exits": "From {state} no way leads to an exit: time until leaving is without end.",
         "may_not_exit": "From {state} some customers may never leave, so the mean time until leaving is without end.",
         "impossible_move": "A move declared impossible was seen from {state}; it was set aside.",
+        "instants_without_offset": "{rows} rows have a time without an offset from UTC; they were read as local time.",
+        "superseded_rows": "{rows} rows were replaced by later versions of themselves.",
+        "identical_rows_kept": "{rows} rows are identical but carry no clock time, so they may be real repeats: they "
+                               "were kept.",
+        "log_start_assumed": "The study does not say when the log became complete; its first period was assumed.",
+        "ties_decided_by_order": "{rows} times several events of a customer share one instant; the order of the study's "
+                                 "rules decided.",
+        "joined_without_join_event": "{customers} customers appear without an event that marks joining; their history "
+                                     "before is not known.",
     }
 )  # fmt: skip
 
@@ -197,16 +213,33 @@ def said(code: str) -> str:
     return REASONS.get(code) or OUTCOMES.get(code) or PARTS.get(code) or code.replace("_", " ")
 
 
-def note(code: str) -> str:
-    """A note of a record ("no_data:quiet") as a sentence.
+def note(finding: Any) -> str:
+    """A finding as a sentence: a Finding (code, rows, customers, detail), a record's code ("no_data:quiet"), or a
+    sentence that is one already.
 
     >>> note("few_at_risk:quiet")
     'Fewer than 30 departures from quiet were counted: its rates are little more than a hint.'
+    >>> note("The plan is taken as given.")
+    'The plan is taken as given.'
     """
+    code = str(getattr(finding, "code", finding))
     kind, _, state = code.partition(":")
-    if kind in NOTES:
-        return NOTES[kind].replace("{state}", label(state) or "a state")
-    return upper_first(f"{kind.replace('_', ' ')}{f': {label(state)}' if state else ''}.")
+    if " " in kind:
+        return code
+    detail = getattr(finding, "detail", {})
+    state, segment = str(detail.get("state", state)), str(detail.get("segment", ""))
+    words = NOTES.get(kind)
+    if words is None:
+        words = upper_first(f"{kind.replace('_', ' ')}{f': {label(state)}' if state else ''}{_size(finding)}.")
+    for key in ("rows", "customers"):
+        words = words.replace(f"{{{key}}}", count(getattr(finding, key, 0)))
+    words = words.replace("{state}", label(state))
+    return f"{label(segment)}: {words}" if segment else words
+
+
+def _size(finding: Any) -> str:
+    parts = [f"{count(n)} {what}" for what in ("rows", "customers") if (n := getattr(finding, what, 0))]
+    return f" ({', '.join(parts)})" if parts else ""
 
 
 def verdict(code: str) -> tuple[str, str]:

@@ -68,7 +68,7 @@ def _counted(facts: Facts, tables: Tables) -> Section:
         until = f" Rows count up to {facts.as_of}." if facts.as_of else ""
         lead.append(f"{count(facts.customers)} customers were followed from {facts.first} to {facts.last}.{until}")
     if "accounting" in tables:
-        rows = tables["accounting"]
+        rows = tabulate.whole_accounting(tables["accounting"])
         read, used = (rows.loc[rows["outcome"] == o, "rows"].sum() for o in ("read", "used"))
         lead.append(f"{count(used)} of {count(read)} rows were used; every other row has a reason.")
         exhibits.append(Exhibit("accounting", table=tabulate.accounting_table(rows), open=True))

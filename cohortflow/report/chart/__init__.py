@@ -1,0 +1,1 @@
+"""One file a chart; style.py holds the look they share, frames.py what they take."""

@@ -1,0 +1,112 @@
+"""The report of a Run: its records' codes and settings as Facts, its tables as a Content, its files as text."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from cohortflow import __version__
+from cohortflow.errors import CallError, OutputError
+from cohortflow.report.ahead import approach
+from cohortflow.report.chart.style import WIDE, svg
+from cohortflow.report.content import Content, Facts
+from cohortflow.report.sections import gather
+from cohortflow.report.page import page_html
+from cohortflow.report.rules import rule_words
+from cohortflow.study import Study
+
+ALL = "all"
+
+
+def content_of(run: Any, *, segment: str = ALL) -> Content:
+    """The report of a run (or of one of its segments) as a Content. CallError when the run has no projection."""
+    if not getattr(run, "forecasts", None) or segment not in run.forecasts:
+        known = ", ".join(getattr(run, "forecasts", {}) or ["none"])
+        raise CallError(f'There is no forecast of "{segment}" in this run; forecasts: {known}. Make a whole run first.')
+    forecast = run.forecasts[segment]
+    schedule, joining = forecast.fit.schedule, _joining(forecast)
+    start = forecast.fit.tally.mix()
+    ahead = None
+    if not schedule.unknown and float(start.sum()) > 0:
+        first = forecast.fit.tally.meta.last - schedule.first if schedule.first is not None else 0
+        ahead = approach(schedule, start.to_numpy(dtype=float), run.study.states, joining=joining, first_step=first)
+    return gather(facts_of(run, segment=segment), run.tables, approach=ahead)
+
+
+def _joining(forecast: Any) -> Any:
+    """(K,) joiners and returners a period, or None when nobody joins."""
+    constant = forecast.joiners.a_period()
+    return constant if constant.sum() > 0 else None
+
+
+def facts_of(run: Any, *, segment: str = ALL) -> Facts:
+    """The Facts of one segment of a run."""
+    study, forecast = run.study, run.forecasts[segment]
+    fit, tally, long_run = forecast.fit, forecast.fit.tally, forecast.long_run
+    label = tally.calendar.label
+    notes = (*run.findings, *forecast.projection.reasons, *long_run.reasons, *_reasons(forecast.exits))
+    kept = [n for n in dict.fromkeys(notes) if str(n).partition(":")[0] not in _STRUCTURE]
+    return Facts(
+        title=study.title,
+        states=study.states,
+        calendar=study.calendar,
+        level=study.level,
+        horizon=forecast.projection.periods,
+        first=label(fit.first),
+        last=label(tally.meta.last),
+        as_of=study.as_of.isoformat() if study.as_of else "",
+        seed=study.seed,
+        model=fit.model,
+        joiners=forecast.joiners.method,
+        customers=tally.meta.customers,
+        moves=int(fit.rates.n.sum()),
+        totals=study.totals,
+        excluded=tuple(label(p) for p in fit.excluded),
+        notes=tuple(kept),
+        verdict=long_run.verdict,
+        reasons=tuple(long_run.reasons),
+        parts=tuple(forecast.projection.parts),
+        rules={rule.name: rule_words(rule) for rule in study.rules},
+        inputs=tuple((i.name, i.bytes, i.rows, i.sha256) for i in run.check.inputs),
+        settings=_settings(study),
+        people={k: str(v) for k, v in vars(study.people).items() if v},
+        absent=run.absent,
+        version=__version__,
+        segment=segment,
+    )
+
+
+_STRUCTURE = ("closed_group", "periodic_group", "several_groups", "exits_reachable")
+
+
+def _reasons(exits: Any) -> tuple[str, ...]:
+    return () if exits is None else tuple(exits.reasons)
+
+
+def _settings(study: Study) -> dict[str, str]:
+    """Settings that did not come from the study file or a default: what somebody turned for this run."""
+    return {name: origin for name, origin in sorted(study.origin_of.items()) if origin not in ("study file", "default")}
+
+
+def files_of(content: Content) -> Mapping[str, str]:
+    """The report's files, relative to the run folder, as text: report.html and charts/*.svg."""
+    charts = {f"charts/{e.key}.svg": _stand_alone(svg(e.draw(WIDE))) for e in content.exhibits() if e.draw}
+    return {"report.html": page_html(content), **charts}
+
+
+def _stand_alone(drawn: str) -> str:
+    return f'<?xml version="1.0" encoding="utf-8"?>\n{drawn.rstrip()}\n'
+
+
+def write_report(run: Any, path: str | Path, *, segment: str = ALL, force: bool = False) -> Path:
+    """Write the page of a run to `path`. OutputError when the file is there already, unless `force`."""
+    target = Path(path)
+    if target.exists() and not force:
+        raise OutputError(f"{target} is there already; nothing was written. Choose another path, or force=True.")
+    text = page_html(content_of(run, segment=segment))
+    try:
+        target.write_text(text, encoding="utf-8", newline="\n")
+    except OSError as error:
+        raise OutputError(f"{target} cannot be written: {error.strerror or error}. Choose another path.") from error
+    return target
