@@ -67,7 +67,9 @@ def covariance_of(model: Any, covariance: Any = None) -> Any:
     return (ask(covariance) if covariance else ask()) if pooled else None
 
 
-def draws_of(model: Any, draws: Draws | int | None, rng: np.random.Generator, covariance: Any) -> Draws | None:
+def draws_of(
+    model: Any, draws: Draws | int | None, rng: np.random.Generator, covariance: Any
+) -> Draws | None:
     """Draws as given, or that many drawn from a Fit; None when the model has no counts behind it."""
     if isinstance(draws, Draws):
         return draws

@@ -57,9 +57,7 @@ def rollforward_actual(tally: Tally, *, segment: str = "all") -> pd.DataFrame:
     periods = np.arange(first + 1, last + 1)
     lines = counted_lines(tally)
     frame = table(states, lines, tally.calendar.labels(periods), kind="actual", segment=segment)
-    return pd.concat([frame, _memos(tally, segment)], ignore_index=True).convert_dtypes(
-        infer_objects=False, convert_string=False, convert_boolean=False, convert_floating=False
-    )
+    return pd.concat([frame, _memos(tally, segment)], ignore_index=True)
 
 
 def counted_lines(tally: Tally) -> Lines:

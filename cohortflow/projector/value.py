@@ -254,7 +254,8 @@ def worth(schedule: Schedule, terms: Terms, *, horizon: int | None, first_step: 
         s = laws @ np.where(endless, 0.0, second)
         out += [np.where(lost, np.nan, x) for x in (scale * v, scale * np.sqrt(np.maximum(s - v**2, 0.0)))]
     names = schedule.states.names
-    stuck = [n for n, law in zip(names, chain.start, strict=True) if law[endless].any()]
+    unclear = chain.undefined()
+    stuck = [n for k, n in enumerate(names) if chain.start[k][endless].any() and not unclear[k]]
     reasons = [f"no_exit_no_discount:{n}" for n in stuck if n not in schedule.states.exits]
     return Worth(*out, (*reasons, *(f"rows_without_data:{s}" for s in schedule.unknown)))
 
