@@ -1,0 +1,301 @@
+"""Sources into one typed table `rows`, a record a row, in the order of the files; rowid is the record's number.
+
+customer  text, never changed          t      instant (events) in microseconds
+label     period as written (history)  code   position of the event or state; -1 ignored, -2 unknown and ignored
+fault     code of columns.FAULTS, 0 = good    bad  the offending text, for messages and --keep-values
+amount, until, seg, weight, event_id, loaded, currency, clock, zoned: only where the study names their columns
+h         64 bits of the whole row
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from cohortflow.errors import InputError, listed, nearest
+from cohortflow.history.columns import (
+    IGNORED,
+    UNKNOWN,
+    Money,
+    amount_sql,
+    code_sql,
+    fault_sql,
+    field_of,
+    id_missing_sql,
+    joined_text,
+    money_style,
+    row_hash,
+    weight_sql,
+)
+from cohortflow.history.engine import Engine, quoted
+from cohortflow.history.sources import Source
+from cohortflow.history.times import LATEST, TimeFormat, detect_format, in_order, instant_sql, period_sql
+from cohortflow.study import InputSpec, Study
+
+FOREVER = 1_000_000_000  # ordinal of a valid-until day that never comes
+Progress = Callable[[str, float], None]
+
+
+@dataclass
+class Loaded:
+    """What stands in `rows` besides the fixed columns, and how the files were read."""
+
+    sources: list[Source]
+    has: set[str] = field(default_factory=set)
+    time_format: TimeFormat | None = None
+    money: Money | None = None
+    segment_columns: tuple[tuple[str, str], ...] = ()
+
+    @property
+    def rows(self) -> int:
+        """Records in `rows` (records the reader could not split are not among them)."""
+        return sum(source.rows for source in self.sources)
+
+
+def load(engine: Engine, study: Study, sources: list[Source], progress: Progress) -> Loaded:
+    """Fill `rows`. InputError for columns, dates or money that cannot be told."""
+    loaded = Loaded(sources, segment_columns=segment_columns(study.input))
+    maker = _Maker(engine, study, loaded)
+    done, whole = 0, sum(s.size for s in sources) or 1
+    for number, source in enumerate(sources):
+        select = maker.select(source)
+        verb = "INSERT INTO rows" if number else "CREATE TABLE rows AS"
+        _run(engine, source, f"{verb} {select}")
+        source.first = sum(s.rows for s in sources[:number])
+        source.rows = int(engine.one("SELECT count(*) FROM rows")) - source.first
+        _note_bad_records(engine, source, number)
+        done += source.size
+        progress("reading", done / whole)
+    return loaded
+
+
+def segment_columns(spec: InputSpec) -> tuple[tuple[str, str], ...]:
+    """(column, role) in the order in which the values are kept."""
+    roles = [*((c, "segment") for c in spec.segments), *((c, "attribute") for c in spec.attributes)]
+    return (*roles, *(((spec.arm, "arm"),) if spec.arm else ()))
+
+
+def _run(engine: Engine, source: Source, sql: str) -> None:
+    try:
+        engine.run(sql)
+    except Exception as error:
+        reason = next(
+            (line.strip() for line in str(error).splitlines() if line.strip()), type(error).__name__
+        )
+        raise InputError(
+            f"{source.name}: the file could not be read as {source.shown}: {reason}. Check `delimiter` and "
+            "`encoding` in [input], or save the extract again as CSV in UTF-8."
+        ) from None
+
+
+def _note_bad_records(engine: Engine, source: Source, number: int) -> None:
+    """Records that the reader could not split: (place of the record's first byte, reason)."""
+    if source.dialect is None:
+        return
+    kinds = engine.rows(
+        f"SELECT line_byte_position, error_type::VARCHAR, csv_line FROM bad_{number} "
+        "QUALIFY row_number() OVER (PARTITION BY line_byte_position ORDER BY column_idx) = 1 "
+        "ORDER BY line_byte_position"
+    )
+    for position, kind, text in kinds:
+        _check_quote(source, kind, text)
+        reason = "encoding_unreadable" if "ENCODING" in kind else "ragged_row"
+        source.bad.append((int(position or 0), reason))
+    engine.drop(f"bad_{number}", f"scan_{number}")
+
+
+def _check_quote(source: Source, kind: str, text: str | None) -> None:
+    """An unclosed quote swallows the rows after it, which would vanish from the accounting."""
+    swallowed = (text or "").strip("\r\n").count("\n")
+    if swallowed > 1 and ("QUOTE" in kind or '"' in (text or "")):
+        start = (text or "").strip("\r\n").splitlines()[0][:60]
+        raise InputError(
+            f"{source.name}: a quotation mark is opened and not closed in the record that begins {start!r}; "
+            f"it swallows {swallowed} more lines. Double it or remove it in the file."
+        )
+
+
+class _Maker:
+    """Builds the statement that reads one source."""
+
+    def __init__(self, engine: Engine, study: Study, loaded: Loaded) -> None:
+        self.engine, self.study, self.loaded = engine, study, loaded
+        self.spec = study.input
+
+    def select(self, source: Source) -> str:
+        """SELECT of one source in the columns of `rows`."""
+        columns: dict[str, str] = {}
+        checks: list[tuple[str, str]] = []
+        who = field_of(source, self.spec.customer or "", "customer").text
+        columns["customer"] = who
+        checks.append(("id_missing", id_missing_sql(who)))
+        if self.spec.layout == "events":
+            self._event(source, columns, checks)
+        else:
+            self._state(source, columns, checks)
+        self._extras(source, columns, checks)
+        self.loaded.has |= set(columns)
+        named = ", ".join(f"{sql} AS {name}" for name, sql in columns.items())
+        inner = f"SELECT {named}, {row_hash(source)} AS h, {', '.join(_kept(checks))} FROM {source.relation}"
+        outer = ", ".join(columns)
+        fault = fault_sql([(reason, f"k{i}") for i, (reason, _) in enumerate(checks)])
+        return f"SELECT {outer}, h, {fault} AS fault FROM ({inner})"
+
+    # ---- what happened ----
+    def _event(self, source: Source, columns: dict[str, str], checks: list[tuple[str, str]]) -> None:
+        when = field_of(source, self.spec.time or "", "time")
+        form = self._time_format(source, when.name, when.sql, when.type)
+        time = instant_sql(when.sql if when.is_text or form.kind != "step" else when.text, form, when.type)
+        event = field_of(source, self.spec.event or "", "event").text
+        codes = event_codes(self.study)
+        columns |= {"t": time.instant, "clock": time.clock, "zoned": time.zoned}
+        columns["code"] = code_sql(event, codes, str(UNKNOWN))
+        columns["bad"] = f"CASE WHEN {columns['code']} = {UNKNOWN} THEN coalesce({event}, '') END"
+        checks.append(("time_unreadable", f"({time.instant}) IS NULL"))
+        if self.study.events.others != "ignore":
+            checks.append(("unknown_event", f"{columns['code']} = {UNKNOWN}"))
+
+    def _state(self, source: Source, columns: dict[str, str], checks: list[tuple[str, str]]) -> None:
+        period = field_of(source, self.spec.time or "", "time")
+        state = field_of(source, self.spec.state or "", "state").text
+        columns["label"] = f"trim({period.text})"
+        columns["code"] = code_sql(f"trim({state})", state_codes(self.study), str(UNKNOWN))
+        columns["bad"] = f"CASE WHEN {columns['code']} = {UNKNOWN} THEN coalesce({state}, '') END"
+        checks.append(("time_unreadable", f"coalesce({columns['label']}, '') = ''"))
+        if self.study.events.others != "ignore":
+            checks.append(("unknown_state", f"{columns['code']} = {UNKNOWN}"))
+
+    def _time_format(self, source: Source, name: str, sql: str, sql_type: str) -> TimeFormat:
+        known = self.loaded.time_format
+        if self.study.calendar.kind == "step":
+            form = TimeFormat("step")
+        elif sql_type.startswith("TIMESTAMP") or sql_type == "DATE":
+            form = TimeFormat("typed")
+        elif sql_type != "VARCHAR":
+            raise InputError(
+                f'{source.name}: the column "{name}" holds numbers ({sql_type}), not dates. Give dates as text '
+                'or timestamps, or use period = "step" for plain integers.'
+            )
+        else:
+            where = f'{source.name}, column "{name}"'
+            form = detect_format(source.samples.get(name, ()), where=where, given=self.spec.date_format)
+            if form.order_unknown:
+                form = known if known and known.patterns else self._ordered(source, sql, form, where)
+        self.loaded.time_format = known or form
+        return form
+
+    def _ordered(self, source: Source, sql: str, form: TimeFormat, where: str) -> TimeFormat:
+        mark = quoted(form.order_unknown)
+        first, second = (f"try_cast(split_part(trim({sql}), {mark}, {i}) AS INTEGER)" for i in (1, 2))
+        found = self.engine.rows(
+            f"SELECT coalesce(bool_or({first} BETWEEN 13 AND 31), false), "
+            f"coalesce(bool_or({second} BETWEEN 13 AND 31), false) FROM {source.relation}"
+        )[0]
+        return in_order(form, bool(found[0]), bool(found[1]), where=where)
+
+    # ---- the rest ----
+    def _extras(self, source: Source, columns: dict[str, str], checks: list[tuple[str, str]]) -> None:
+        spec = self.spec
+        if spec.amount:
+            amount = field_of(source, spec.amount, "amount")
+            samples = source.samples.get(amount.name, ())
+            delimiter = source.dialect.delimiter if source.dialect else None
+            self.loaded.money = money_style(samples, delimiter, spec.decimal)
+            columns["amount"], bad = amount_sql(amount, self.loaded.money)
+            checks.append(("amount_unreadable", bad))
+        if spec.valid_until:
+            columns["until"], bad = self._until(source)
+            checks.append(("valid_until_unreadable", bad))
+        if spec.weight:
+            columns["weight"], bad = weight_sql(field_of(source, spec.weight, "weight"))
+            checks.append(("weight_unreadable", bad))
+        if self.loaded.segment_columns:
+            fields = [field_of(source, name, role) for name, role in self.loaded.segment_columns]
+            columns["seg"] = joined_text(fields)
+        for key in ("event_id", "currency"):
+            if name := getattr(spec, key):
+                columns[key] = f"nullif(trim({field_of(source, name, key).text}), '')"
+        if spec.loaded_at:
+            columns["loaded"] = f"coalesce(trim({field_of(source, spec.loaded_at, 'loaded_at').text}), '')"
+
+    def _until(self, source: Source) -> tuple[str, str]:
+        """(ordinal of the period of the valid-until day, whether it is there but unreadable)."""
+        column = field_of(source, self.spec.valid_until or "", "valid_until")
+        there = f"({column.sql} IS NOT NULL AND trim({column.text}) <> '')"
+        if self.study.calendar.kind == "step" or not column.is_text:
+            form = TimeFormat("step" if self.study.calendar.kind == "step" else "typed")
+        else:
+            where = f'{source.name}, column "{column.name}"'
+            samples = source.samples.get(column.name, ())
+            if not any(v.strip() for v in samples):
+                form = TimeFormat("iso")
+            else:
+                form = detect_format(samples, where=where, given=self.spec.date_format)
+            if form.order_unknown:
+                form = self._ordered(source, column.sql, form, where)
+        instant = instant_sql(column.sql, form, column.type).instant
+        period = period_sql(self.study.calendar, f"({instant})")
+        far = f"substr(trim({column.text}), 1, 4) BETWEEN '{LATEST.year}' AND '9999'"
+        value = f"CASE WHEN NOT {there} THEN NULL WHEN {far} THEN {FOREVER} ELSE {period} END"
+        if self.study.calendar.kind == "own":
+            value = f"CASE WHEN ({value}) = -1 THEN {self._past_own(instant)} ELSE ({value}) END"
+        return value, f"({there} AND NOT coalesce({far}, false) AND ({instant}) IS NULL)"
+
+    def _past_own(self, instant: str) -> str:
+        """A valid-until day outside an own calendar: never comes, or is long past."""
+        end = self.study.calendar.own[-1][2].isoformat()
+        return f"(CASE WHEN make_timestamp({instant}) > TIMESTAMP '{end}' THEN {FOREVER} ELSE -{FOREVER} END)"
+
+
+def _kept(checks: list[tuple[str, str]]) -> list[str]:
+    return [f"coalesce({condition}, false) AS k{i}" for i, (_, condition) in enumerate(checks)]
+
+
+def event_codes(study: Study) -> dict[str, int]:
+    """Every accepted spelling -> position in `Study.event_order`; ignored events: IGNORED."""
+    place = {name: i for i, name in enumerate(study.event_order)}
+    ignored = dict.fromkeys(study.events.ignore, IGNORED)
+    spelled = {
+        s: (place | ignored)[n] for n, ss in study.events.map.items() for s in ss if n in place | ignored
+    }
+    return {**ignored, **place, **spelled}
+
+
+def state_codes(study: Study) -> dict[str, int]:
+    """Every accepted spelling of a state -> its position; ignored ones: IGNORED."""
+    place = {name: i for i, name in enumerate(study.states.names)}
+    ignored = dict.fromkeys(study.events.ignore, IGNORED)
+    spelled = {
+        s: (place | ignored)[n] for n, ss in study.events.map.items() for s in ss if n in place | ignored
+    }
+    return {**ignored, **place, **spelled}
+
+
+def refuse_unknown_names(engine: Engine, study: Study) -> None:
+    """InputError that lists event or state names used nowhere, with their counts and the nearest known name."""
+    if study.events.others != "refuse":
+        return
+    found = engine.rows(
+        "SELECT bad, count(*) FROM rows WHERE fault IN (3, 7) GROUP BY 1 ORDER BY 2 DESC, 1 LIMIT 13"
+    )
+    if not found:
+        return
+    what = "event" if study.input.layout == "events" else "state"
+    known = [n for n, c in (event_codes if what == "event" else state_codes)(study).items() if c >= 0]
+    shown = "; ".join(f'"{name}" {count:,} times{nearest(name, known)}' for name, count in found[:12])
+    more = " and more" if len(found) > 12 else ""
+    raise InputError(
+        f"The extract has {what}s that the study does not name: {shown}{more}. Known: {listed(known)}. In [events], "
+        f"map a spelling to a name (map = {{ {known[0] if known else 'name'} = [...] }}), put it under `ignore`, "
+        'or set others = "reject" or "ignore".'
+    )
+
+
+def column_values(engine: Engine, column: str, limit: int = 12) -> Mapping[str, Any]:
+    """Values of a column of the good rows with their counts, most frequent first."""
+    found = engine.rows(
+        f"SELECT {column}, count(*) FROM rows WHERE fault = 0 AND {column} IS NOT NULL "
+        f"GROUP BY 1 ORDER BY 2 DESC, 1 LIMIT {int(limit)}"
+    )
+    return dict(found)
