@@ -9,7 +9,8 @@ from hypothesis import strategies as st
 
 from cohortflow.chain import Chain, Draws
 from cohortflow.errors import CallError
-from cohortflow.projector.value import Terms, money_terms, value, value_derivative, worth
+from cohortflow.projector.money import Terms, money_terms, value_derivative, worth
+from cohortflow.projector.value import value
 from cohortflow.states import States
 from tests.projector_cases import (
     CHAIN,

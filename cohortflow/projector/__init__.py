@@ -10,8 +10,8 @@ from cohortflow.projector.longrun import LongRun as LongRun
 from cohortflow.projector.longrun import long_run as long_run
 from cohortflow.projector.mix import cohort_shares as cohort_shares
 from cohortflow.projector.mix import step_counts as step_counts
-from cohortflow.projector.project import Projection as Projection
 from cohortflow.projector.project import project as project
+from cohortflow.projector.projection import Projection as Projection
 from cohortflow.projector.rates import rates_actual as rates_actual
 from cohortflow.projector.rates import rates_forecast as rates_forecast
 from cohortflow.projector.retention import Retention as Retention

@@ -25,7 +25,8 @@ from cohortflow.projector.accept import Array
 from cohortflow.projector.delta import Spread, quantiles
 from cohortflow.projector.joiners import Joiners
 from cohortflow.projector.longrun_delta import delta_limits
-from cohortflow.projector.longrun_figures import Figure, Prospect, figures
+from cohortflow.projector.longrun_figures import figures
+from cohortflow.projector.prospect import Figure, Prospect
 from cohortflow.projector.unroll import drawn_schedule
 from cohortflow.record import Record
 

@@ -11,7 +11,8 @@ from cohortflow.markov.derivative import remaining_mix_derivative, retention_der
 from cohortflow.markov.exit_derivative import exit_probability_derivative, settled_base_derivative
 from cohortflow.projector.accept import Array
 from cohortflow.projector.delta import Spread, interval
-from cohortflow.projector.longrun_figures import Prospect, figures
+from cohortflow.projector.longrun_figures import figures
+from cohortflow.projector.prospect import Prospect
 from cohortflow.states import ALL_LIVE
 
 Key = tuple[str, str, str, str]

@@ -17,7 +17,7 @@ from scipy import special
 
 from cohortflow.projector.accept import Array, as_level
 from cohortflow.projector.bands import quantile_band
-from cohortflow.projector.project import Projection
+from cohortflow.projector.projection import Projection
 from cohortflow.projector.rollforward import counted_lines
 from cohortflow.tally import ENDS, Tally
 
