@@ -9,10 +9,9 @@ from typing import Any
 from cohortflow import __version__
 from cohortflow.errors import CallError, OutputError
 from cohortflow.report.ahead import approach
-from cohortflow.report.chart.style import WIDE, svg
 from cohortflow.report.content import Content, Facts
 from cohortflow.report.sections import gather
-from cohortflow.report.page import page_html
+from cohortflow.report.page import page_html, wide_charts
 from cohortflow.report.rules import rule_words
 from cohortflow.study import Study
 
@@ -45,8 +44,8 @@ def facts_of(run: Any, *, segment: str = ALL) -> Facts:
     study, forecast = run.study, run.forecasts[segment]
     fit, tally, long_run = forecast.fit, forecast.fit.tally, forecast.long_run
     label = tally.calendar.label
-    notes = (*run.findings, *forecast.projection.reasons, *long_run.reasons, *_reasons(forecast.exits))
-    kept = [n for n in dict.fromkeys(notes) if str(n).partition(":")[0] not in _STRUCTURE]
+    codes = dict.fromkeys((*forecast.projection.reasons, *long_run.reasons, *_reasons(forecast.exits)))
+    notes = (*run.findings, *(c for c in codes if c.partition(":")[0] not in _STRUCTURE))
     return Facts(
         title=study.title,
         states=study.states,
@@ -63,12 +62,12 @@ def facts_of(run: Any, *, segment: str = ALL) -> Facts:
         moves=int(fit.rates.n.sum()),
         totals=study.totals,
         excluded=tuple(label(p) for p in fit.excluded),
-        notes=tuple(kept),
+        notes=notes,
         verdict=long_run.verdict,
         reasons=tuple(long_run.reasons),
         parts=tuple(forecast.projection.parts),
         rules={rule.name: rule_words(rule) for rule in study.rules},
-        inputs=tuple((i.name, i.bytes, i.rows, i.sha256) for i in run.check.inputs),
+        inputs=tuple((i.name, i.bytes, i.rows, i.sha256) for i in run.inputs),
         settings=_settings(study),
         people={k: str(v) for k, v in vars(study.people).items() if v},
         absent=run.absent,
@@ -91,12 +90,10 @@ def _settings(study: Study) -> dict[str, str]:
 
 def files_of(content: Content) -> Mapping[str, str]:
     """The report's files, relative to the run folder, as text: report.html and charts/*.svg."""
-    charts = {f"charts/{e.key}.svg": _stand_alone(svg(e.draw(WIDE))) for e in content.exhibits() if e.draw}
-    return {"report.html": page_html(content), **charts}
-
-
-def _stand_alone(drawn: str) -> str:
-    return f'<?xml version="1.0" encoding="utf-8"?>\n{drawn.rstrip()}\n'
+    drawn = wide_charts(content)
+    head = '<?xml version="1.0" encoding="utf-8"?>\n'
+    charts = {f"charts/{key}.svg": f"{head}{chart.text.rstrip()}\n" for key, chart in drawn.items()}
+    return {"report.html": page_html(content, drawn), **charts}
 
 
 def write_report(run: Any, path: str | Path, *, segment: str = ALL, force: bool = False) -> Path:

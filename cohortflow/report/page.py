@@ -7,13 +7,15 @@ from __future__ import annotations
 
 import html
 import re
+from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import cache
 
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
-from cohortflow.report.chart.style import NARROW, THEME, WIDE, Drawing, svg
+from cohortflow.errors import CallError, listed, nearest
+from cohortflow.report.chart.style import NARROW, THEME, WIDE, svg
 from cohortflow.report.content import Content, Exhibit
 from cohortflow.report.sections import sections_of
 from cohortflow.report.rounding import percent
@@ -29,6 +31,15 @@ _COLOURS = {light: f"var(--{name})" for name, (light, _) in THEME.items()}
 
 
 @dataclass(frozen=True)
+class Drawn:
+    """A chart as SVG text with its text alternative and width in CSS pixels."""
+
+    text: str
+    alt: str
+    pixels: int
+
+
+@dataclass(frozen=True)
 class Picture:
     """A chart ready for the page: its SVG for wide screens and, if it is redrawn for them, for narrow ones.
 
@@ -40,9 +51,13 @@ class Picture:
     narrow: Markup | None
 
 
-def page_html(content: Content) -> str:
-    """The whole page as text; the same bytes for the same content."""
-    pictures = {e.key: picture(e) for e in content.exhibits() if e.draw is not None}
+def page_html(content: Content, drawn: Mapping[str, Drawn] | None = None) -> str:
+    """The whole page as text; the same bytes for the same content.
+
+    drawn : the wide charts by key, when they have been drawn already (`wide_charts`)
+    """
+    drawn = wide_charts(content) if drawn is None else drawn
+    pictures = {e.key: picture(e, drawn[e.key]) for e in content.exhibits() if e.draw is not None}
     return _templates().get_template("page.html").render(
         content=content, facts=content.facts, sections=sections_of(content), pictures=pictures, theme=THEME,
         titles={s.key: s.title for s in content.sections},
@@ -50,30 +65,42 @@ def page_html(content: Content) -> str:
 
 
 def fragment_html(content: Content, section: str) -> str:
-    """One section as a fragment with its own style, for notebooks."""
-    chosen = [s for s in sections_of(content) if s.key == section]
-    pictures = {e.key: picture(e) for s in chosen for e in s.exhibits if e.draw is not None}
+    """One section as a fragment with its own style, for notebooks. CallError when there is no such section."""
+    known = [s.key for s in sections_of(content)]
+    if section not in known:
+        raise CallError(f'There is no section "{section}"{nearest(section, known)}; there are {listed(known)}.')
+    chosen = [s for s in content.sections if s.key == section]
+    pictures = {e.key: picture(e, _drawn(e, WIDE)) for s in chosen for e in s.exhibits if e.draw is not None}
     return _templates().get_template("fragment.html").render(
         content=content, facts=content.facts, sections=chosen, pictures=pictures, theme=THEME
     )
 
 
-def picture(exhibit: Exhibit) -> Picture:
-    """Draw an exhibit's chart for the page."""
+def wide_charts(content: Content) -> dict[str, Drawn]:
+    """Every chart of the report at its full width, by key."""
+    return {e.key: _drawn(e, WIDE) for e in content.exhibits() if e.draw is not None}
+
+
+def _drawn(exhibit: Exhibit, width: float) -> Drawn:
     assert exhibit.draw is not None
-    wide, title = exhibit.draw(WIDE), TITLES.get(exhibit.key, exhibit.key)
+    figure = exhibit.draw(width)
+    return Drawn(svg(figure), figure.alt, round(96 * float(figure.get_size_inches()[0])))
+
+
+def picture(exhibit: Exhibit, wide: Drawn) -> Picture:
+    """An exhibit's chart for the page."""
+    title = TITLES.get(exhibit.key, exhibit.key)
     if exhibit.narrow:
-        return Picture(title, inline(wide, exhibit.key), inline(exhibit.draw(NARROW), f"{exhibit.key}-n"))
-    least = max(640, round(0.8 * 96 * float(wide.get_size_inches()[0])))
-    return Picture(title, inline(wide, exhibit.key, least=least), None)
+        return Picture(title, inline(wide, exhibit.key), inline(_drawn(exhibit, NARROW), f"{exhibit.key}-n"))
+    return Picture(title, inline(wide, exhibit.key, least=max(640, round(0.8 * wide.pixels))), None)
 
 
-def inline(drawing: Drawing, key: str, *, least: int = 0) -> Markup:
-    """The drawing as an <svg> element for the page: own ids, the page's colours, its text alternative.
+def inline(drawn: Drawn, key: str, *, least: int = 0) -> Markup:
+    """The chart as an <svg> element for the page: own ids, the page's colours, its text alternative.
 
     least : pixels below which it does not shrink (0: it shrinks with the page)
     """
-    text = svg(drawing)
+    text = drawn.text
     view = re.search(r'viewBox="[^"]+"', text)
     assert view is not None
     text = text[text.index(">", text.index("<svg")) + 1 :]
@@ -84,7 +111,7 @@ def inline(drawing: Drawing, key: str, *, least: int = 0) -> Markup:
     for colour, name in _COLOURS.items():
         text = text.replace(colour, name)
     style = f' style="min-width:{least}px"' if least else ""
-    label = html.escape(clean(drawing.alt))
+    label = html.escape(clean(drawn.alt))
     spaces = 'xmlns="http://www.w3.org/2000/svg" xmlns:xlink="http://www.w3.org/1999/xlink"'
     return Markup(f'<svg {spaces} {view.group(0)} role="img" aria-label="{label}"{style}>{text}')
 

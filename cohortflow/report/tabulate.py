@@ -99,7 +99,8 @@ def matrix_table(transitions: Any, states: States, *, segment: str = ALL) -> Tab
 def _rate(row: pd.Series) -> str:
     if missing(row["probability"]):
         return "no data"
-    return f"(<{percent(row['high'])})" if row["probability"] == 0 else percent(row["probability"])
+    limit = percent(row["high"])
+    return f"({limit if limit[0] == '<' else '<' + limit})" if row["probability"] == 0 else percent(row["probability"])
 
 
 def base_table(projection: Any, *, quantities: Sequence[str], segment: str = ALL) -> Table:

@@ -14,7 +14,7 @@ from cohortflow.errors import CallError
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
     BODY, FUTURE, INK, MARGIN, MODEL, MODEL_BAND, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
-    quiet_axis,
+    quiet_axis, share_ticks,
 )  # fmt: skip
 from cohortflow.report.rounding import count, duration, missing, percent, span, unit
 from cohortflow.report.text import label
@@ -116,8 +116,7 @@ def _panel(axes: Axes, own: pd.DataFrame, goal: Settled, name: str, step: float)
     axes.set_xlim(0, ahead[-1])
     axes.set_ylim(0, np.nanmax([*share, value, high if not missing(high) else 0]) * 1.12)
     axes.xaxis.set_major_locator(MaxNLocator(4, integer=True))
-    axes.yaxis.set_major_locator(MaxNLocator(3))
-    axes.yaxis.set_major_formatter(lambda v, _: percent(v, 0))
+    share_ticks(axes)
     quiet_axis(axes)
     axes.annotate(percent(value), (1, value), xycoords=("axes fraction", "data"), xytext=(5, 4 if low == low else 0),
                   textcoords="offset points", color=MODEL, size=BODY, weight="bold", va="center")  # fmt: skip

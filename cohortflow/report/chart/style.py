@@ -21,7 +21,9 @@ from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties, get_font_names
 from matplotlib.text import Text
 from matplotlib.textpath import TextToPath
+from matplotlib.ticker import MaxNLocator
 
+from cohortflow.report.rounding import percent
 from cohortflow.report.text import clean, wrap
 
 INK, SOFT, FAINT, PAPER = "#1b2a33", "#4f606b", "#c3ccd1", "#fdfdfc"
@@ -93,18 +95,29 @@ class Drawing(Figure):
     def _repr_svg_(self) -> str:
         return svg(self)
 
+    def savefig(self, fname: Any, **options: Any) -> None:
+        """As matplotlib's, with installed fonts for scripts that the base font lacks (pictures made of pixels)."""
+        with house_style():
+            self._set_family([FONT, *_other_fonts()])
+            super().savefig(fname, **options)
+            self._set_family(FONT)
+
+    def _set_family(self, family: str | list[str]) -> None:
+        for text in self.findobj(Text):
+            text.set_fontfamily(family)
+
 
 @contextmanager
 def house_style() -> Iterator[None]:
     """The settings under which figures are drawn and saved; global settings stay as they were."""
-    with rc_context({**RC, "font.family": [FONT, *_other_fonts()]}), warnings.catch_warnings():
+    with rc_context({**RC, "font.family": [FONT]}), warnings.catch_warnings():
         warnings.filterwarnings("ignore", message="Glyph .* missing from")
         yield
 
 
 @cache
 def _other_fonts() -> tuple[str, ...]:
-    """Installed fonts for scripts that the base font lacks; used on screen only, never for SVG."""
+    """Installed fonts for scripts that the base font lacks; for pixels only, never for SVG."""
     known = set(get_font_names())
     return tuple(name for name in OTHER_SCRIPTS if name in known)
 
@@ -161,9 +174,7 @@ def svg(figure: Figure) -> str:
     Text stays text, set in a font family that browsers have; no dates, no random ids.
     """
     out = io.StringIO()
-    with house_style(), rc_context({"font.family": [FONT]}):
-        for text in figure.findobj(Text):
-            text.set_fontfamily(FONT)
+    with house_style():
         FigureCanvasSVG(figure).print_svg(out, metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
     drawn = out.getvalue()
     drawn = drawn[drawn.index("<svg") :]
@@ -176,6 +187,12 @@ def quiet_axis(axes: Axes, *, grid: str = "y") -> None:
     axes.grid(axis=grid, color=FAINT, linewidth=0.5, alpha=0.7)  # type: ignore[arg-type]
     axes.set_axisbelow(True)
     axes.spines["left"].set_visible(False)
+
+
+def share_ticks(axes: Axes) -> None:
+    """A few ticks at round shares, printed as what they are."""
+    axes.yaxis.set_major_locator(MaxNLocator(3, steps=[1, 2, 5, 10]))
+    axes.yaxis.set_major_formatter(lambda v, _: percent(v, 0 if abs(v * 100 - round(v * 100)) < 1e-6 else 1))
 
 
 def shade(share: float, steps: Sequence[float]) -> int:
