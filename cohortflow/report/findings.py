@@ -12,7 +12,7 @@ from cohortflow.report.content import Facts, Finding
 from cohortflow.report.rounding import count, duration, missing, percent, unit
 from cohortflow.report.tabulate import whole_accounting
 from cohortflow.report.text import listing, upper_first
-from cohortflow.report.wording import a_period, note, said
+from cohortflow.report.wording import note, said
 
 Tables = Mapping[str, pd.DataFrame]
 SECTIONS = ("counted", "moves", "heading", "settles", "stay", "rests", "definitions", "methods")
@@ -91,7 +91,7 @@ def _retention(facts: Facts, tables: Tables) -> Iterator[Finding]:
     age = departure(rows)
     if age is None:
         return
-    row = rows[rows["periods_since_joining"] == age].iloc[0]
+    row = rows[(rows["periods_since_joining"] >= age) & rows["observed"].notna()].iloc[0]
     side = "more" if row["model"] > row["observed"] else "fewer"
     yield Finding(
         f"From {count(age)} {unit(facts.kind, age)} after joining on, the model keeps {side} joiners than were observed: "
@@ -112,7 +112,6 @@ def _settling(facts: Facts, tables: Tables, approach: pd.DataFrame | None) -> It
                       "direction, not a forecast.", "settles")  # fmt: skip
     elif goal.periods > facts.horizon:
         yield Finding(
-            f"The mix takes {duration(goal.periods, facts.kind, 0)} to settle, {a_period(facts.kind)} at a time; the "
-            f"forecast reaches {duration(facts.horizon, facts.kind, 0)}. Do not quote the settled mix as a forecast.",
-            "settles",
+            f"The mix takes {duration(goal.periods, facts.kind, 0)} to settle; the forecast reaches "
+            f"{duration(facts.horizon, facts.kind, 0)}. Do not quote the settled mix as a forecast.", "settles",
         )  # fmt: skip

@@ -8,7 +8,7 @@ import pandas as pd
 
 from cohortflow.report.content import Facts, Headline
 from cohortflow.report.rounding import count, decimal, duration, missing, percent, signed, span, unit
-from cohortflow.report.tabulate import name
+from cohortflow.report.tabulate import name, with_interval
 from cohortflow.report.text import label, upper_first
 from cohortflow.report.wording import JOINERS, MODELS, a_period, said
 
@@ -21,7 +21,8 @@ def headlines(facts: Facts, tables: Tables) -> tuple[Headline, ...]:
     if "projection" in tables:
         rows = tables["projection"]
         found += [_at_horizon(facts, rows, q) for q in ("all_live", *list(facts.totals)[:1])]
-        found.append(_leavers(facts, rows))
+        churn = _churn(facts, tables["rates"]) if "rates" in tables else None
+        found.append(churn or _leavers(facts, rows))
     if "rollforward" in tables:
         found.append(_joiners(facts, tables["rollforward"]))
     if "exits" in tables:
@@ -70,6 +71,24 @@ def _at_horizon(facts: Facts, rows: pd.DataFrame, quantity: str) -> Headline | N
     )  # fmt: skip
 
 
+def _churn(facts: Facts, rates: pd.DataFrame) -> Headline | None:
+    """Next period's churn rate from the table `rates`, by exit and in all, with its denominator."""
+    ahead = rates[(rates["kind"] == "forecast") & (rates["measure"] == "churn")]
+    if not len(ahead):
+        return None
+    own = ahead[ahead["period"] == ahead["period"].iloc[0]]
+    whole, exits = own[own["exit"] == ""], own[own["exit"] != ""]
+    if not len(whole) or missing(whole["value"].iloc[0]):
+        return None
+    row = whole.iloc[0]
+    each = [f"{label(r['exit'])} {with_interval(r['value'], r['low'], r['high'], percent)}" for _, r in exits.iterrows()]
+    basis = f"{count(row['numerator'])} of {count(row['denominator'])} live and away at the opening"
+    return Headline(
+        f"Leaving in {row['period']}", percent(row["value"]), span(row["low"], row["high"], percent),
+        f"{basis}: {'; '.join(each)}" if len(exits) > 1 else basis,
+    )  # fmt: skip
+
+
 def _leavers(facts: Facts, rows: pd.DataFrame) -> Headline | None:
     next_period = rows[rows["periods_ahead"] == 1]
     now = rows[rows["periods_ahead"] == 0]
@@ -84,7 +103,7 @@ def _leavers(facts: Facts, rows: pd.DataFrame) -> Headline | None:
     ]
     total = gone["customers"].sum()
     return Headline(
-        f"Leaving in {gone['period'].iloc[0]}", f"{percent(total / opening)} of customers", "; ".join(each),
+        f"Leaving in {gone['period'].iloc[0]}", percent(total / opening), "; ".join(each),
         f"{count(total)} of {count(opening)} live and away at the opening",
     )  # fmt: skip
 

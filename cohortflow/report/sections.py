@@ -23,6 +23,7 @@ from cohortflow.report.headlines import headlines, summary
 from cohortflow.report.methods import assumptions, methods_section, states_table
 from cohortflow.report.rounding import count, missing, percent, span, unit
 from cohortflow.report.table import Table
+from cohortflow.report.text import listing
 from cohortflow.report.wording import CAUTIONS, DEFINITIONS, EXPLAIN, JOINERS, said, verdict
 from cohortflow.states import ALL_LIVE
 
@@ -102,7 +103,8 @@ def _heading(facts: Facts, tables: Tables, whole: Tables) -> Section:
     rows, past = tables["projection"], tables.get("rollforward")
     quantities = facts.quantities
     horizon = f"{facts.horizon} {unit(facts.kind, facts.horizon)}"
-    lead = (f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.",)
+    bands = f" The {percent(facts.level, 0)} bands hold {listing([said(p) for p in facts.parts])}." if facts.parts else ""
+    lead = (f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.{bands}",)
     chart = _drawn(base_chart, rows, past, totals=facts.totals, states=facts.states, kind=facts.kind)
     exhibits = [Exhibit("base", chart, tabulate.base_table(rows, quantities=quantities), (EXPLAIN["band"],))]
     if past is not None and (past["state"] == ALL_LIVE).any():

@@ -21,6 +21,7 @@ from cohortflow.states import ALL_LIVE, States
 
 PANEL_HIGH, FIRST_HIGH, PANEL_WIDE = 1.15, 1.75, 2.75
 LABEL_WIDE, HEAD_HIGH, FOOT_HIGH = 0.62, 0.36, 0.34
+UNSEEN = 0.1  # share of the base that turned up only in a period: what came before was not whole
 COLUMNS = ["period", "periods_ahead", "state", "customers", "low", "high"]
 
 
@@ -87,7 +88,16 @@ def _past(rollforward: Any, segment: str, totals: Mapping[str, Sequence[str]]) -
     for name, members in totals.items():
         if name not in wide:
             wide[name] = wide[[s for s in members if s in wide]].sum(axis=1)
-    return wide.astype(float)
+    return wide.astype(float).loc[_complete_from(frame, wide) :]
+
+
+def _complete_from(frame: pd.DataFrame, wide: pd.DataFrame) -> str:
+    """First period whose closing is whole: before it, many customers were there but not yet seen."""
+    seen = frame[(frame["kind"] == "actual") & (frame["line"] == "unobserved_in") & (frame["state"] == ALL_LIVE)]
+    if ALL_LIVE not in wide or not len(seen):
+        return str(wide.index[0])
+    late = seen.set_index("period")["customers"].astype(float) > UNSEEN * wide[ALL_LIVE].astype(float)
+    return str(late[late].index[-1]) if late.any() else str(wide.index[0])
 
 
 def _ahead_labels(rows: pd.DataFrame) -> list[str]:

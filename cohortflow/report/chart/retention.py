@@ -63,13 +63,13 @@ def immature(rows: pd.DataFrame) -> np.ndarray:
 
 
 def departure(rows: pd.DataFrame) -> int | None:
-    """First age from which the model's interval lies outside the observed one at every later mature age."""
+    """First age from which the model's interval lies on one side of the observed one at every later mature age."""
     usable = rows[~immature(rows) & rows["observed"].notna().to_numpy()]
     low = usable["model_low"].fillna(usable["model"]) if "model_low" in usable else usable["model"]
     high = usable["model_high"].fillna(usable["model"]) if "model_high" in usable else usable["model"]
-    outside = (high < usable["observed_low"]) | (low > usable["observed_high"])
-    inside = np.flatnonzero(~outside.to_numpy())
-    first = inside[-1] + 1 if len(inside) else 0
+    side = np.where(high < usable["observed_low"], -1, np.where(low > usable["observed_high"], 1, 0))
+    other = np.flatnonzero(side != side[-1]) if len(side) and side[-1] else np.arange(len(side))
+    first = other[-1] + 1 if len(other) else 0
     return int(usable["periods_since_joining"].iloc[first]) if first < len(usable) else None
 
 

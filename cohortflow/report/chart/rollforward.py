@@ -14,6 +14,7 @@ from cohortflow.errors import CallError, listed
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
     BAND, BODY, FAINT, FUTURE, INK, MARGIN, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
+    text_width,
 )  # fmt: skip
 from cohortflow.report.rounding import count, foot, signed
 from cohortflow.report.text import label
@@ -140,7 +141,8 @@ def _total(axes: Axes, name: str, value: int, y: float, wide: float, x: float, c
     axes.text(0, y, name, weight="bold", va="center")
     axes.plot([x, x], [y - 0.09, y + 0.09], color=INK, linewidth=2.4, solid_capstyle="butt")
     note = count(value) if change is None else f"{count(value)} ({signed(change)})"
-    axes.text(x + 0.07, y, note, weight="bold", va="center")
+    fits = x + 0.07 + text_width(note, BODY, bold=True) <= wide
+    axes.text(x + (0.07 if fits else -0.07), y, note, weight="bold", va="center", ha="left" if fits else "right")
 
 
 def _part(axes: Axes, name: str, change: int, y: float, start: float, end: float, actual: bool) -> None:
