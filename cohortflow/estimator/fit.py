@@ -22,8 +22,9 @@ from cohortflow.errors import CallError, listed, nearest
 from cohortflow.estimator.covariance import Covariance, covariance
 from cohortflow.estimator.layout import Sampler
 from cohortflow.estimator.rows import RowCounts
+from cohortflow.estimator.seasonal import place_of
 from cohortflow.estimator.transitions import Intervals, intervals, undeclared_absorbing
-from cohortflow.estimator.variants import MODELS, build_model
+from cohortflow.estimator.variants import MODELS, build_model, recent_window
 from cohortflow.estimator.window import Window, choose_window, plain_rows
 from cohortflow.periods import Calendar
 from cohortflow.record import Record, frozen_mapping, plain
@@ -44,6 +45,7 @@ class Fit(Record):
     segments : one Fit a value when `by` was given, else empty
     notes : codes ("no_data:quiet", "undeclared_absorbing:paused", "few_at_risk:new", "no_buckets" ...)
     settings : the model's own numbers (bands, effective n, convergence ...)
+    season : (C, K) share of its own rates that a state keeps at each place of the season's cycle, or None
 
     >>> import cohortflow as cf
     >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
@@ -62,6 +64,7 @@ class Fit(Record):
     segments: Mapping[str, Fit] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
     settings: Mapping[str, Any] = field(default_factory=dict)
+    season: np.ndarray | None = None
     kind: ClassVar[str] = "fit"
 
     def __post_init__(self) -> None:
@@ -125,6 +128,10 @@ class Fit(Record):
     def chain(self) -> Chain:
         """The plain model as one labelled matrix; NotIdentified for any other model."""
         return self.schedule.chain
+
+    def position(self, ordinal: int) -> int:
+        """Place of a period in the model's season (0 for a model without seasons)."""
+        return 0 if self.season is None else place_of(self.tally, len(self.season), ordinal)
 
     def covariance(self, kind: str | None = None) -> Covariance:
         """Covariance of the pooled rates: "multinomial", "customer" or "two_way" (see that module).
@@ -215,7 +222,10 @@ def fit(
     """
     if model not in MODELS:
         raise CallError(f'Unknown model "{model}"{nearest(model, MODELS)}. Models: {listed(MODELS)}.')
-    shared: dict[str, Any] = {"window": window, "half_life": half_life, "exclude": tuple(exclude)}
+    shared: dict[str, Any] = {"window": window, "half_life": half_life}
+    if model == "recent":
+        shared = recent_window(tally, window, half_life)
+    shared["exclude"] = tuple(exclude)
     chosen = choose_window(tally, **shared)
     rates = plain_rows(tally, chosen)
     built = build_model(model, tally, chosen, rates, by=by, options=options)
@@ -229,7 +239,18 @@ def fit(
             if part.origins()
         }
     notes = (*row_notes(rates, tally.states), *built.notes)
-    return Fit(tally, model, chosen, rates, built.schedule, built.sampler, segments, notes, built.settings)
+    return Fit(
+        tally,
+        model,
+        chosen,
+        rates,
+        built.schedule,
+        built.sampler,
+        segments,
+        notes,
+        built.settings,
+        built.season,
+    )
 
 
 def pooled_matrix(rates: RowCounts, states: States) -> np.ndarray:

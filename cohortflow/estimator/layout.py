@@ -7,7 +7,7 @@ are laid into its matrices over m expanded states, so that one function serves t
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, Protocol
 
 import numpy as np
@@ -15,10 +15,11 @@ from numpy.typing import NDArray
 
 from cohortflow.chain import Component, Draws, Schedule
 from cohortflow.estimator.covariance import covariance as covariance_of
-from cohortflow.estimator.draws import draw_rows
+from cohortflow.estimator.draws import draw_rows, generator
 from cohortflow.estimator.rows import RowCounts
-from cohortflow.periods import Calendar
+from cohortflow.estimator.shrink import Shrink
 from cohortflow.states import States
+from cohortflow.tally import Tally
 
 Array = NDArray[np.float64]
 
@@ -35,8 +36,8 @@ class Sampler(Protocol):
 class Part:
     """One component of a model built from rows of rates.
 
-    matrices : (..., R, K) rates to (..., L, m, m) matrices;  report, start, join, tail, name : as in
-    Component
+    matrices : (..., R, K) rates, shrunk if they are to be, to (..., L, m, m) matrices
+    report, start, join, tail, name : as in Component
     """
 
     matrices: Callable[[Array], Array]
@@ -49,24 +50,39 @@ class Part:
 
 @dataclass(frozen=True, eq=False)
 class RowSampler:
-    """Draws of models whose parts are laid out from one set of rows."""
+    """Draws of models whose parts are laid out from one set of rows.
+
+    shrink : how rows are drawn towards their pools before the parts lay them out, or None. The pools come
+        from the rows' plain draws, a row's own share from the same draws stretched (see Shrink.inflate).
+    """
 
     counts: RowCounts
     parts: tuple[Part, ...]
+    shrink: Shrink | None = None
 
     def draws(self, schedule: Schedule, n: int, *, rng: int | np.random.Generator, covariance: str) -> Draws:
-        rows = draw_rows(self.counts, covariance_of(self.counts, covariance), n, rng=rng)
+        cov = covariance_of(self.counts, covariance)
+        seed = int(generator(rng).integers(2**62))
+        rows = draw_rows(self.counts, cov, n, rng=seed)
+        if self.shrink is not None:
+            root = np.repeat(np.sqrt(self.shrink.inflate), self.counts.shape[1])
+            wide = replace(cov, matrix=cov.matrix * np.outer(root, root))
+            rows = self.shrink.apply(draw_rows(self.counts, wide, n, rng=seed), pools_of=rows)
         return Draws.of_matrices(schedule, [part.matrices(rows) for part in self.parts])
 
 
 @dataclass(frozen=True, eq=False)
 class Built:
-    """What a model's builder hands back to `fit`."""
+    """What a model's builder hands back to `fit`.
+
+    season : (C, K) share of its own rates that a state keeps at each place of the cycle; None without seasons
+    """
 
     schedule: Schedule
     sampler: Sampler
     notes: tuple[str, ...] = ()
     settings: Mapping[str, Any] = field(default_factory=dict)
+    season: Array | None = None
 
 
 def lay_out(rates: Array, row: NDArray[np.int64], successor: NDArray[np.int64]) -> Array:
@@ -93,19 +109,28 @@ def with_exits(rates: Array, exits: NDArray[np.bool_]) -> Array:
 
 
 def build(
-    states: States,
-    calendar: Calendar,
+    tally: Tally,
     counts: RowCounts,
     parts: tuple[Part, ...],
     *,
-    first: int | None = None,
-    unknown: tuple[str, ...] = (),
+    rates: RowCounts,
+    shrink: Shrink | None = None,
     notes: tuple[str, ...] = (),
     settings: Mapping[str, Any] | None = None,
+    season: Array | None = None,
 ) -> Built:
-    """Schedule and sampler of a model whose parts are laid out from `counts`."""
+    """Schedule and sampler of a model whose parts are laid out from `counts`; `rates` are the pooled ones."""
+    shares = counts.P if shrink is None else shrink.apply(counts.P)
     components = tuple(
-        Component(p.matrices(counts.P), p.report, p.start, p.join, p.tail, p.name) for p in parts
+        Component(p.matrices(shares), p.report, p.start, p.join, p.tail, p.name) for p in parts
     )
-    schedule = Schedule(states, components, calendar, first=first, unknown=unknown)
-    return Built(schedule, RowSampler(counts, parts), notes, settings or {})
+    unknown = unknown_states(rates, tally.states)
+    schedule = Schedule(tally.states, components, tally.calendar, first=tally.meta.last, unknown=unknown)
+    return Built(schedule, RowSampler(counts, parts, shrink), notes, settings or {}, season)
+
+
+def unknown_states(rates: RowCounts, states: States) -> tuple[str, ...]:
+    """States other than exits from which no departure was counted."""
+    return tuple(
+        n for n, r in zip(states.names, rates.at_risk, strict=True) if r == 0 and n in states.remaining
+    )

@@ -11,42 +11,51 @@ import numpy as np
 from cohortflow.errors import CallError, listed, nearest
 from cohortflow.estimator.layout import Built, Part, build, with_exits
 from cohortflow.estimator.rows import RowCounts
+from cohortflow.estimator.seasonal import seasonal
+from cohortflow.estimator.second_order import second_order
+from cohortflow.estimator.segment import segment
+from cohortflow.estimator.tenure import tenure
+from cohortflow.estimator.time_in_state import time_in_state
 from cohortflow.estimator.window import Window
 from cohortflow.states import States
 from cohortflow.tally import Tally
 
 Builder = Callable[..., Built]
 
+DEFAULT_WINDOW = 12
+
 
 def plain(tally: Tally, window: Window, rates: RowCounts) -> Built:
     """One matrix, the pooled rates."""
     states = tally.states
-    return build(
-        states,
-        tally.calendar,
-        rates,
-        (plain_part(states),),
-        first=tally.meta.last,
-        unknown=unknown_states(rates, states),
-        settings={"effective_n": rates.effective.tolist()},
-    )
+    eye, exits = np.eye(len(states)), states.exit_mask
+    part = Part(lambda r: with_exits(r, exits)[..., None, :, :], np.arange(len(states)), eye, eye)
+    return build(tally, rates, (part,), rates=rates, settings={"effective_n": _by_state(rates, states)})
 
 
-def plain_part(states: States, *, name: str = "all") -> Part:
-    """The part that holds the (K, K) rates as they are."""
-    eye = np.eye(len(states))
-    exits = states.exit_mask
-    return Part(lambda r: with_exits(r, exits)[..., None, :, :], np.arange(len(states)), eye, eye, name=name)
+def recent_window(tally: Tally, window: int | None, half_life: float | None) -> dict[str, Any]:
+    """The choice of `recent` where neither is given: the last full cycle, or 12 periods without one."""
+    if window is None and half_life is None:
+        return {
+            "window": tally.calendar.cycle if tally.calendar.cycle > 1 else DEFAULT_WINDOW,
+            "half_life": None,
+        }
+    return {"window": window, "half_life": half_life}
 
 
-def unknown_states(rates: RowCounts, states: States) -> tuple[str, ...]:
-    """States other than exits from which no departure was counted."""
-    return tuple(
-        n for n, r in zip(states.names, rates.at_risk, strict=True) if r == 0 and n in states.remaining
-    )
+def _by_state(rates: RowCounts, states: States) -> dict[str, float]:
+    return {n: float(e) for n, e in zip(states.names, rates.effective, strict=True) if n in states.remaining}
 
 
-MODELS: dict[str, Builder] = {"plain": plain}
+MODELS: dict[str, Builder] = {
+    "plain": plain,
+    "recent": plain,  # the same rates; `fit` gives it a window or a half-life
+    "seasonal": seasonal,
+    "tenure": tenure,
+    "time_in_state": time_in_state,
+    "segment": segment,
+    "second_order": second_order,
+}
 
 
 def build_model(

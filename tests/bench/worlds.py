@@ -146,3 +146,97 @@ def _paths(panel, first):
             text.append(f"{'-' if run[0] < 0 else run[0]}*{len(run)}")
         out.append(" ".join([str(t[0] + first), *text]))
     return out
+
+
+# The test chain of the coverage studies: all start in N, C absorbs.
+STATES = States(["N", "R", "L", "D", "C"], exits=["C"], entries=["N"])
+CHAIN = np.array([[0, .50, .05, .30, .15], [0, .72, .10, .14, .04], [0, .10, .85, .04, .01],
+                  [0, .15, .01, .64, .20], [0, 0, 0, 0, 1]])  # fmt: skip
+
+
+def autoregression(rng, periods, sd, persistence, shape=()):
+    """(periods, ...) stationary first-order autoregression."""
+    out = np.empty((periods, *shape))
+    out[0] = rng.standard_normal(shape) * sd
+    for t in range(1, periods):
+        out[t] = persistence * out[t - 1] + np.sqrt(1 - persistence**2) * sd * rng.standard_normal(shape)
+    return out
+
+
+def shocked_rates(P, exits, shared, own):
+    """(T, K, K) rows P exp(f_t on exits + e_t), made probability rows."""
+    rates = P * np.exp(shared[:, None, None] * exits + own)
+    return rates / rates.sum(axis=2, keepdims=True)
+
+
+def settled(P, exits, customers):
+    """Mix of a base of this size that joiners in state 0 keep level, and their number a period."""
+    Q = P[np.ix_(~exits, ~exits)]
+    visits = np.linalg.inv(np.eye(len(Q)) - Q)[0]
+    joining = customers / visits.sum()
+    mix = np.zeros(len(P))
+    mix[~exits] = joining * visits
+    return mix, joining
+
+
+def walk_counts(rates, mix, joining, rng):
+    """(T, K, K) counts of moves of a base with Poisson joiners in state 0, and the (K,) mix at the end."""
+    now, cube = np.rint(mix).astype(int), np.zeros(rates.shape, dtype=int)
+    for t, P in enumerate(rates):
+        cube[t] = rng.multinomial(now, P)
+        cube[t, now == 0] = 0
+        now = cube[t].sum(axis=0)
+        now[-1] = 0
+        now[0] += rng.poisson(joining)
+    return cube, now
+
+
+def shocked_cube(P, states, customers, periods, rng, *, exit_sd=0.0, cell_sd=0.0, persistence=0.0, path=None):
+    """(T, K, K) counts under shocks; `path` (T,) gives the shared shock itself."""
+    shared = autoregression(rng, periods, exit_sd, persistence) if path is None else np.asarray(path)
+    own = autoregression(rng, periods, cell_sd, persistence, P.shape)
+    rates = shocked_rates(P, states.exit_mask, shared, own)
+    return walk_counts(rates, *settled(P, states.exit_mask, customers), rng)[0]
+
+
+def cube_tally(cube, states, *, now=None, first=0, calendar="step"):
+    """Tally of counts by period (one bucket), with the base of the last period and the joiners in state 0."""
+    periods = len(cube)
+    t, i, j = np.nonzero(cube)
+    now = np.r_[cube[-1].sum(axis=0)[:-1], 0] if now is None else now
+    at_end = pd.DataFrame(
+        {
+            "period": periods,
+            "gap": 0,
+            "end": 1,
+            "state": np.flatnonzero(now),
+            "next_state": -1,
+            "n": now[now > 0],
+        }
+    )
+    moves = pd.DataFrame({"period": t, "gap": 1, "end": 0, "state": i, "next_state": j, "n": cube[t, i, j]})
+    moves = pd.concat([moves, at_end]).assign(bucket=0, segment=0)
+    moves = moves.assign(weight=moves["n"], period=moves["period"] + first)
+    joined = np.append(cube[1:, 0].sum(axis=1) - cube[:-1, :, 0].sum(axis=1), now[0] - cube[-1, :, 0].sum())
+    starts = pd.DataFrame(
+        {
+            "bucket": 0,
+            "segment": 0,
+            "period": np.arange(1, periods + 1) + first,
+            "state": 0,
+            "kind": 0,
+            "from_state": -1,
+            "n": joined,
+            "weight": joined,
+        }
+    )
+    meta = Meta(
+        states,
+        Calendar(calendar),
+        first,
+        first + periods,
+        int(cube[0].sum()),
+        "simulated",
+        tables=("moves", "starts"),
+    )
+    return Tally.build(meta, {"moves": moves, "starts": starts})
