@@ -33,6 +33,7 @@ class Call:
     out: Path | None = None
     force: bool = False
     form: str = "table"
+    keep_values: bool = False
     strict: bool = False
     quiet: bool = False
     dry_run: bool = False
@@ -74,7 +75,9 @@ def call_of(command: str, given: Mapping[str, Any], source: Source) -> Call:
     for option, key in SETTINGS.items():
         if given[option] is not None:
             overrides[key], set_by[key] = given[option], _origin(source(option))
-    kept = {name: given[name] for name in ("by", "force", "form", "strict", "quiet", "dry_run")}
+    kept = {
+        name: given[name] for name in ("by", "force", "form", "keep_values", "strict", "quiet", "dry_run")
+    }
     out = Path(given["out"]) if given["out"] is not None else None
     return Call(command, Path(given["study"]), overrides, set_by, tuple(given["exits"]), out=out, **kept)
 

@@ -7,9 +7,9 @@ from cohortflow.cli.options import study_command
 
 EXAMPLES = """\
 cohortflow check veg/veg_box.toml
-cohortflow check veg/veg_box.toml --strict --quiet      for a pipeline: code 1 when a finding stands
-cohortflow check veg/veg_box.toml --out checked         accounting and rejected rows as CSV
-cohortflow check log.csv --exit cancelled               a bare file: customer, time, event"""
+cohortflow check veg/veg_box.toml --strict --quiet    for a pipeline: code 1 on a finding
+cohortflow check veg/veg_box.toml --out checked       accounting and rejected rows as CSV
+cohortflow check log.csv --exit cancelled             a bare file: customer, time, event"""
 
 
 @study_command("check", EXAMPLES)

@@ -24,14 +24,13 @@ class Console:
         if not self.quiet:
             click.echo(text, err=True)
 
-    @property
     def progress(self) -> Callable[[str], None]:
-        """Told what is being done now; silent unless stderr is a terminal."""
-        return self._step if sys.stderr.isatty() and not self.quiet else _nothing
+        """Told what is being done now; each new step is said once, and only when stderr is a terminal."""
+        shown: list[str] = []
 
-    def _step(self, what: str) -> None:
-        click.echo(f"{what} ...", err=True)
+        def step(what: str) -> None:
+            if sys.stderr.isatty() and not self.quiet and what not in shown[-1:]:
+                shown.append(what)
+                click.echo(f"{what} ...", err=True)
 
-
-def _nothing(what: str) -> None:
-    return None
+        return step

@@ -82,6 +82,11 @@ def common() -> list[click.Parameter]:
             envvar="COHORTFLOW_FORMAT",
             help="Form of the result on stdout.",
         ),
+        option(
+            ["--keep-values"],
+            is_flag=True,
+            help="Write the offending values into rejected.csv too; they may be personal data.",
+        ),
         option(["--strict"], is_flag=True, help="End with code 1 when a finding stands."),
         option(["--quiet", "-q"], is_flag=True, help="No messages on stderr but refusals."),
         option(["--dry-run"], is_flag=True, help="Say what would be read and written; do nothing."),

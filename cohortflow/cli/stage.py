@@ -12,7 +12,7 @@ from cohortflow.cli.faults import DONE, FINDING
 from cohortflow.cli.plan import plan_text
 from cohortflow.record import plain
 from cohortflow.report.table import csv_text
-from cohortflow.report.terminal import sentence
+from cohortflow.report.wording import note
 from cohortflow.runs.folder import Run, run
 from cohortflow.runs.write import record
 from cohortflow.study import Study
@@ -30,11 +30,19 @@ def perform(call: Call, main: str, words: Words, *, folder: Callable[[Study], Pa
     if call.dry_run:
         console.result(plan_text(call, study, out))
         return DONE
-    done = run(study, upto=call.command, by=call.by, out=out, force=call.force, progress=console.progress)
+    done = run(
+        study,
+        upto=call.command,
+        by=call.by,
+        out=out,
+        force=call.force,
+        keep_values=call.keep_values,
+        progress=console.progress(),
+    )
     console.result(shown(done, call.form, main, words))
     if call.form != "table":
         for finding in done.serious:
-            console.say(f"finding: {sentence(finding)}")
+            console.say(f"finding: {note(finding)}")
     for warning in done.warnings:
         console.say(warning)
     if done.path:

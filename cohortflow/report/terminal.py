@@ -7,14 +7,12 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
-from typing import Any
-from typing import Any
 
 import pandas as pd
 
 from cohortflow.history import Finding
 from cohortflow.report import tabulate
-from cohortflow.report.rounding import count
+from cohortflow.report.rounding import percent
 from cohortflow.report.table import WIDTH, Table, plain_text
 from cohortflow.report.text import clean, listing, wrap
 from cohortflow.report.wording import note, said
@@ -60,7 +58,8 @@ def fit_text(tables: Frames, findings: Iterable[Finding], states: States) -> str
     for segment in segments(transitions):
         parts.append(_titled(tabulate.matrix_table(transitions, states, segment=segment), segment))
         parts.append(_titled(tabulate.moves_table(transitions, segment=segment), segment))
-    return printout(*parts)
+    methods = listing([said(str(m)) for m in pd.unique(transitions["method"].dropna()) if m])
+    return printout(*parts, f"Intervals at {_level(transitions)}, {methods}, for each rate by itself.")
 
 
 def project_text(
@@ -86,13 +85,21 @@ def project_text(
         if "exits" in tables:
             shown.append(tabulate.exits_table(tables["exits"], kind=kind, segment=segment))
         parts += [_titled(table, segment) for table in shown]
-    return printout(*parts, "\n".join(wrap(" ".join(verdict_words(verdict)), WIDTH)))
+    ending = f"Bands and intervals at {_level(projection)}. {' '.join(verdict_words(verdict))}"
+    return printout(*parts, "\n".join(wrap(ending, WIDTH)))
 
 
 def run_text(tables: Frames, findings: Iterable[Finding], quantities: Sequence[str]) -> str:
     """Findings, then the base today, next period and at the horizon."""
-    outlook = tabulate.outlook_table(tables["projection"], quantities=quantities)
-    return printout(findings_text(findings), plain_text(outlook))
+    projection = tables["projection"]
+    outlook = tabulate.outlook_table(projection, quantities=quantities)
+    return printout(findings_text(findings), plain_text(outlook), f"Bands at {_level(projection)}.")
+
+
+def _level(frame: pd.DataFrame) -> str:
+    """The level of a table's intervals."""
+    levels = frame["level"].dropna()
+    return percent(float(levels.iloc[0]), 0) if len(levels) else "no level"
 
 
 def segments(frame: pd.DataFrame) -> list[str]:

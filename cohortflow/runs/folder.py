@@ -99,6 +99,18 @@ def run(
     progress : told what is being done
 
     Raises OutputError when the folder may not be written, and whatever the steps refuse.
+
+    >>> import pathlib, tempfile
+    >>> from cohortflow.study import default_study
+    >>> rows = ["customer,period,state", "a,1,fresh", "a,2,steady", "b,1,fresh", "b,2,left", "c,2,fresh"]
+    >>> with tempfile.TemporaryDirectory() as home:
+    ...     panel = pathlib.Path(home) / "panel.csv"
+    ...     _ = panel.write_text("\\n".join(rows))
+    ...     done = run(default_study(panel, exits=["left"]), upto="fit")
+    >>> done
+    <fit of panel.csv: 2 tables>
+    >>> done.fit.counts.loc["fresh"].tolist()
+    [0.0, 1.0, 1.0]
     """
     if upto not in STAGES:
         raise CallError(f'Unknown stage "{upto}"{nearest(upto, STAGES)}. Stages: {listed(STAGES)}.')
@@ -115,11 +127,10 @@ def run(
 
 def _made(study: Study, upto: str, by: str | None, tell: Progress, *, keep_values: bool) -> Run:
     tell("reading")
-    history = read(study, keep_values=keep_values)
+    history = read(study, progress=lambda stage, share: tell(stage), keep_values=keep_values)
     tables = {"accounting": history.check.to_frame()}
     tally, fitted, forecasts = None, None, {}
     if upto != "check":
-        tell("counting")
         tally = count(history)
         tell("fitting")
         fitted = fit_study(study, tally, by=by)
@@ -141,7 +152,7 @@ def _made(study: Study, upto: str, by: str | None, tell: Progress, *, keep_value
         frozen_mapping(_absent(forecasts, tables)),
         (*history.check.findings, *(fit_findings(fitted) if fitted else ())),
         history.inputs,
-        tuple(not_yet(study)),
+        tuple(not_yet(study)) if forecasts else (),
     )
 
 

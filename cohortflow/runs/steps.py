@@ -7,6 +7,8 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import Any, TypeVar
 
+import pandas as pd
+
 from cohortflow.errors import CallError, NotIdentified
 from cohortflow.estimator import Fit, fit
 from cohortflow.estimator.variants import MODELS
@@ -80,7 +82,7 @@ def forecast_segment(study: Study, fitted: Fit, segment: str = ALL) -> Forecast:
     Every call gets the study's level and, as `rng`, its seed, so that each can be repeated alone.
     """
     tally = fitted.tally
-    start, joiners = tally.mix(), joiners_study(study, tally, segment)
+    joiners = joiners_study(study, tally, segment)
     shared: dict[str, Any] = {"level": study.level, "segment": segment, "rng": study.seed}
     absent: dict[str, str] = {}
 
@@ -96,12 +98,18 @@ def forecast_segment(study: Study, fitted: Fit, segment: str = ALL) -> Forecast:
         fitted,
         joiners,
         project(fitted, periods=study.horizon, joiners=joiners, totals=study.totals, **shared),
-        long_run(fitted, joiners=joiners, start=start, **shared),
+        long_run(fitted, joiners=joiners, start=base_of(tally), **shared),
         tried("exits", lambda: time_to_exit(fitted, **shared)),
         tried("retention", lambda: retention(fitted, periods=ages(study, tally), **shared)),
         tried("value", lambda: value_study(study, fitted, joiners, **shared)),
         absent,
     )
+
+
+def base_of(tally: Tally) -> pd.Series | None:
+    """Customers by state at the end of the last period; None when nobody is left: no mix is made up."""
+    mix = tally.mix()
+    return mix if mix.sum() > 0 else None
 
 
 def ages(study: Study, tally: Tally) -> int:
@@ -130,7 +138,7 @@ def value_study(study: Study, fitted: Fit, joiners: Joiners, **shared: Any) -> V
         timing=spec.timing,
         first_period_discounted=spec.first_period_discounted,
         currency=spec.currency,
-        start=fitted.tally.mix(),
+        start=base_of(fitted.tally),
         joiners=joiners.a_period(),
         **shared,
     )

@@ -11,7 +11,6 @@ from cohortflow import __version__
 from cohortflow.history import save_tally
 from cohortflow.record import plain
 from cohortflow.report.table import csv_text
-from cohortflow.runs.facts import facts_of
 from cohortflow.runs.place import MARK, write_text
 from cohortflow.runs.versions import made_at, versions
 
@@ -35,15 +34,10 @@ def run_folder(done: Run, folder: Path) -> None:
 
 def write_report(done: Run, folder: Path) -> None:
     """report.html and charts/*.svg."""
-    from cohortflow.report.chart.style import WIDE, svg
-    from cohortflow.report.gather import gather
-    from cohortflow.report.page import page_html
+    from cohortflow.report import content_of, files_of
 
-    content = gather(facts_of(done), done.tables)
-    write_text(folder / "report.html", page_html(content))
-    for exhibit in content.exhibits():
-        if exhibit.draw is not None:
-            write_text(folder / "charts" / f"{exhibit.key}.svg", svg(exhibit.draw(WIDE)))
+    for name, text in files_of(content_of(done)).items():
+        write_text(folder / name, text)
 
 
 def record_text(done: Run) -> str:
