@@ -29,6 +29,11 @@ _HOME = {
     "long_run": "projector",
     "time_to_exit": "projector",
     "retention": "projector",
+    "value": "projector",
+    "Change": "whatif",
+    "Scenario": "whatif",
+    "what_if": "whatif",
+    "run": "runs",
 }
 __all__ = ["__version__", *_HOME]
 

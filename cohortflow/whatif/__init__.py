@@ -1,0 +1,9 @@
+"""What if: changes to a model, the levers that matter, the change that a target needs, the arms of an
+experiment.
+"""
+
+from cohortflow.whatif.change import Change as Change
+from cohortflow.whatif.change import changed as changed
+from cohortflow.whatif.compare import WhatIf as WhatIf
+from cohortflow.whatif.scenario import Scenario as Scenario
+from cohortflow.whatif.what_if import what_if as what_if
