@@ -110,11 +110,17 @@ def _check_number(found: int) -> None:
         )
 
 
-def segment_values(segments: dict[str, int], columns: int) -> tuple[tuple[tuple[str, ...], ...], np.ndarray]:
-    """(sorted tuples of values, new code of each old code)."""
+def segment_values(
+    segments: dict[str, int], columns: int, present: np.ndarray
+) -> tuple[tuple[tuple[str, ...], ...], np.ndarray]:
+    """(sorted tuples of the values of the segments present, new code of each old one; -1 = not present)."""
     if columns == 0:
         return ((),), np.zeros(1, dtype=np.int64)
-    named = [tuple(text.split(SEPARATOR)) for text in sorted(segments, key=lambda k: segments[k])]
-    ordered = sorted(set(named))
+    there = set(present.tolist())
+    named = {code: tuple(text.split(SEPARATOR)) for text, code in segments.items() if code in there}
+    ordered = sorted(set(named.values()))
     place = {values: i for i, values in enumerate(ordered)}
-    return tuple(ordered), np.array([place[v] for v in named], dtype=np.int64)
+    codes = np.full(len(segments), -1, dtype=np.int64)
+    for code, values in named.items():
+        codes[code] = place[values]
+    return tuple(ordered), codes

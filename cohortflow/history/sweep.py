@@ -120,9 +120,10 @@ class Sweep:
         """The Tally of all parts; its conservation is checked."""
         reading, study = self.reading, self.reading.study
         columns = reading.loaded.segment_columns
-        values, code = segment_values(self.segments, len(columns))
         level, paths = self.paths.table()
         tables = self.tabulator.tables()
+        present = [np.unique(table["segment"]) for table in tables.values()]
+        values, code = segment_values(self.segments, len(columns), np.unique(np.concatenate(present or [np.empty(0, np.int64)])))
         if paths is not None:
             tables["paths"] = paths
         buckets = np.concatenate(self.buckets) if self.buckets else np.empty(0, dtype=np.int64)
