@@ -18,6 +18,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime
 from decimal import Decimal, InvalidOperation
+from itertools import groupby, pairwise
 from typing import Any
 from zoneinfo import ZoneInfo
 
@@ -73,9 +74,10 @@ class Person:
 
 @dataclass
 class Window:
-    """first: where the log starts; origin: where unknown histories begin to count; last: complete period."""
+    """Periods: the log's first, its first complete one, where unknown histories begin to count, the last."""
 
     first: int
+    complete: int
     origin: int
     last: int
 
@@ -94,6 +96,10 @@ class Told:
     def labels(self) -> list[tuple[str, str, str, bool]]:
         names, label = self.study.states.names, self.study.calendar.label
         return [(p.name, label(t), names[s], counted) for p in self.people for t, s, counted in p.labels]
+
+    @property
+    def segments(self) -> list[tuple[str, ...]]:
+        return sorted({p.segment for p in self.people})
 
     def accounting(self) -> dict[tuple[str, str], int]:
         return dict(Counter(self.outcomes.values()))
@@ -226,11 +232,28 @@ def _tell_events(study: Any, raw: Sequence[Mapping[str, Any]]) -> Told:
                     segment=_segment(study, row),
                 )
             )
+    good = _latest_versions(study, raw, good, outcomes)
     window, good = _window(study, good, outcomes)
     people = [_follow_events(study, window, rows, outcomes) for rows in _by_customer(good, key=_moment)]
     for row in good:
         outcomes.setdefault(row.number, ("used", ""))
     return Told(study, window, people, outcomes, bool(study.input.amount))
+
+
+def _latest_versions(
+    study: Any, raw: Sequence[Mapping[str, Any]], rows: list[Row], outcomes: dict[int, tuple[str, str]]
+) -> list[Row]:
+    """Of rows with one event id, the one loaded last counts, else the last in the extract."""
+    if not study.input.event_id:
+        return rows
+    best: dict[str, Row] = {}
+    for row in sorted(rows, key=lambda r: (_text(raw[r.number - 1], study.input.loaded_at), r.number)):
+        name = _text(raw[row.number - 1], study.input.event_id)
+        before = best.get(name) if name else None
+        if before:
+            outcomes[before.number] = ("duplicate", "superseded")
+        best[name] = row
+    return [row for row in rows if row.number not in outcomes]
 
 
 def _moment(row: Row) -> tuple[Any, ...]:
@@ -269,7 +292,7 @@ def _window(study: Any, rows: list[Row], outcomes: dict[int, tuple[str, str]]) -
             outcomes[row.number] = ("set_aside", "incomplete_period")
         else:
             kept.append(row)
-    return Window(first, complete + _warm_up(study), last), kept
+    return Window(first, complete, complete + _warm_up(study), last), kept
 
 
 def _warm_up(study: Any) -> int:
@@ -331,7 +354,7 @@ def _follow_events(
     person = Person(rows[0].customer, rows[0].segment)
     first = rows[0].period
     joined = first >= window.origin or any(r.event in study.input.joins for r in rows if r.period == first)
-    count_from = first if joined else window.origin
+    count_from = max(first, window.complete) if joined else window.origin
     stay = Stay(first, "joined" if joined else "unknown", known=joined)
     used: list[Row] = []
     memory: list[Row] = []
@@ -368,10 +391,28 @@ def _finish(person: Person, study: Any, count_from: int) -> Person:
     """Labels from all stays; the stays themselves cut to what counts."""
     for stay in person.stays:
         person.labels += [(t, s, False) for t, s in stay.rows if t < count_from]
-    person.stays = [s for s in (_cut(s, study, count_from) for s in person.stays) if s.rows]
-    for stay in person.stays:
+    stays = [s for s in (_cut(s, study, count_from) for s in person.stays) if s.rows]
+    for stay in stays:
         person.labels += [(t, s, True) for t, s in stay.rows]
+    person.stays = [part for stay in stays for part in _parted(stay, study.states)]
     return person
+
+
+def _parted(stay: Stay, states: Any) -> list[Stay]:
+    """A stay without its impossible moves: each is set aside, and what follows it starts as unknown.
+
+    An exit that was entered by such a move is not written: nobody left by a move that cannot be.
+    """
+    parts, rows = [], [stay.rows[0]]
+    kind, from_state = stay.kind, stay.from_state
+    for before, after in pairwise(stay.rows):
+        if not states.allowed[before[1], after[1]]:
+            parts.append(Stay(stay.start, kind, stay.known, from_state, rows))
+            kind, from_state, rows = "unknown", -1, []
+        rows.append(after)
+    if len(parts) == 0 or states.names[rows[0][1]] not in states.exits:
+        parts.append(Stay(stay.start, kind, stay.known, from_state, rows))
+    return parts
 
 
 def _cut(stay: Stay, study: Any, count_from: int) -> Stay:
@@ -392,7 +433,6 @@ def _cut(stay: Stay, study: Any, count_from: int) -> Stay:
 def _tell_history(study: Any, raw: Sequence[Mapping[str, Any]]) -> Told:
     outcomes: dict[int, tuple[str, str]] = {}
     good: list[Row] = []
-    seen: set[tuple[str, ...]] = set()
     for number, row in enumerate(raw, start=1):
         name, state = _text(row, study.input.customer), _text(row, study.input.state)
         period = _period(study, _text(row, study.input.time))
@@ -401,29 +441,40 @@ def _tell_history(study: Any, raw: Sequence[Mapping[str, Any]]) -> Told:
         elif period is None:
             outcomes[number] = ("rejected", "time_unreadable")
         else:
-            row_text = tuple(str(v) for v in row.values())
-            if row_text in seen:
-                outcomes[number] = ("duplicate", "identical")
-                continue
-            seen.add(row_text)
             segment = _segment(study, row)
             amount = _money(_text(row, study.input.amount))
             good.append(Row(number, name, period, period, state=state, segment=segment, amount=amount))
-    steps = study.calendar.kind == "step"
-    last = max((r.period for r in good), default=0) if steps else _last_complete(study)
-    for row in [r for r in good if r.period > last]:
-        late = study.calendar.start(row.period) > study.as_of
-        outcomes[row.number] = ("set_aside", "after_as_of" if late else "incomplete_period")
-    good = [r for r in good if r.period <= last]
+    if study.calendar.kind != "step":
+        complete = _last_complete(study)
+        for row in [r for r in good if r.period > complete]:
+            late = study.calendar.start(row.period) > study.as_of
+            outcomes[row.number] = ("set_aside", "after_as_of" if late else "incomplete_period")
+        good = [r for r in good if r.period <= complete]
+    good = _one_look_a_period(raw, good, outcomes)
     periods = sorted({r.period for r in good})
-    window = Window(periods[0], periods[0], last)
+    window = Window(
+        periods[0], periods[0], periods[0], periods[-1]
+    )  # to the last period that the extract has rows for
     people = [
-        _follow_history(study, window, periods, rows, outcomes)
+        _follow_history(study, window, periods, rows)
         for rows in _by_customer(good, key=lambda r: (r.period, r.number))
     ]
     for row in good:
-        outcomes.setdefault(row.number, ("used", ""))
+        outcomes[row.number] = ("used", "")
     return Told(study, window, people, outcomes, bool(study.input.amount))
+
+
+def _one_look_a_period(
+    raw: Sequence[Mapping[str, Any]], rows: list[Row], outcomes: dict[int, tuple[str, str]]
+) -> list[Row]:
+    """Of several rows for one customer and period the last in the extract counts."""
+    last = {(row.customer, row.period): row for row in rows}
+    for row in rows:
+        counts = last[row.customer, row.period]
+        if row is not counts:
+            again = [r for r in rows if r.number > row.number and raw[r.number - 1] == raw[row.number - 1]]
+            outcomes[row.number] = ("duplicate", "identical" if again else "superseded")
+    return list(last.values())
 
 
 def _period(study: Any, text: str) -> int | None:
@@ -433,9 +484,7 @@ def _period(study: Any, text: str) -> int | None:
         return None
 
 
-def _follow_history(
-    study: Any, window: Window, periods: list[int], rows: list[Row], outcomes: dict[int, tuple[str, str]]
-) -> Person:
+def _follow_history(study: Any, window: Window, periods: list[int], rows: list[Row]) -> Person:
     states, person = study.states, Person(rows[0].customer, rows[0].segment)
     cells = _gaps_filled(study, {r.period: states.index(r.state) for r in rows})
     end = max(cells)
@@ -453,10 +502,7 @@ def _follow_history(
         state = cells[t]
         is_exit = states.names[state] in states.exits
         if left is not None:
-            if is_exit:  # still gone; the exit first reached holds
-                for row in rows:
-                    if row.period == t:
-                        outcomes[row.number] = ("set_aside", "after_exit")
+            if is_exit:  # still gone; the exit first reached holds, the row says nothing new and is used
                 continue
             person.stays.append(stay)
             stay, left = Stay(t, "returned", True, from_state=left), None
@@ -476,9 +522,15 @@ def _gaps_filled(study: Any, cells: dict[int, int]) -> dict[int, int]:
     if rule == "break":
         return cells
     filled: dict[int, int] = {}
+    before = -1
     for t in range(min(cells), max(cells) + 1):
-        carried = filled.get(t - 1, -1) if rule == "carry" else study.states.names.index(rule)
-        filled[t] = cells.get(t, carried)
+        if t in cells:
+            filled[t] = cells[t]
+        elif (
+            study.states.names[before] not in study.states.exits
+        ):  # nothing is filled between exit and return
+            filled[t] = before if rule == "carry" else study.states.names.index(rule)
+        before = filled.get(t, before)
     return filled
 
 
@@ -488,7 +540,7 @@ def _bucket(name: str, bits: int) -> int:
 
 
 def _tables(told: Told, bits: int) -> dict[str, pd.DataFrame]:
-    segments = sorted({p.segment for p in told.people if p.stays or p.memos})
+    segments = told.segments
     sums: Sums = {name: Counter() for name in KEYS}
     extra: Sums = {name: Counter() for name in KEYS}
     squares: Keyed = Counter()
@@ -498,6 +550,9 @@ def _tables(told: Told, bits: int) -> dict[str, pd.DataFrame]:
         b, g = _bucket(person.name, bits), segments.index(person.segment)
         for t, memo, state in person.memos:
             sums["memos"][g, t, MEMOS.index(memo), state] += 1
+        path = _path(person)
+        if path:
+            sums["paths"][g, _level(person.name), path] += 1
         for stay in person.stays:
             _count_moves(told, sums, stay, b, g)
             _count_contexts(told, sums, stay, b, g)
@@ -508,6 +563,20 @@ def _tables(told: Told, bits: int) -> dict[str, pd.DataFrame]:
                 extra["amounts"][key] += money
                 squares[key] += money * money
     return {name: _frame(name, sums[name], extra[name], squares) for name in sums}
+
+
+def _path(person: Person) -> str:
+    """First period, then state*periods; a dash for periods without a row."""
+    at = {t: state for stay in person.stays for t, state in stay.rows}
+    if not at:
+        return ""
+    line = [at.get(t, "-") for t in range(min(at), max(at) + 1)]
+    return " ".join([str(min(at)), *(f"{state}*{len(list(run))}" for state, run in groupby(line))])
+
+
+def _level(name: str) -> int:
+    """Zero bits that the second half of the id's hash begins with."""
+    return 64 - int(hashlib.md5(name.encode()).hexdigest()[16:], 16).bit_length()
 
 
 def _frame(name: str, n: Keyed, total: Keyed, squares: Keyed) -> pd.DataFrame:
@@ -543,7 +612,7 @@ def _count_moves(told: Told, sums: Sums, stay: Stay, b: int, g: int) -> None:
 
 
 def _count_contexts(told: Told, sums: Sums, stay: Stay, b: int, g: int) -> None:
-    """Tenure, periods already spent in the state, the state before it; for consecutive periods."""
+    """Tenure, periods already spent in the state, state one period before; for consecutive periods."""
     at = dict(stay.rows)
     for t, state in stay.rows:
         if t + 1 not in at:
@@ -553,7 +622,7 @@ def _count_contexts(told: Told, sums: Sums, stay: Stay, b: int, g: int) -> None:
             since -= 1
         seen_arriving = since - 1 in at or (since == stay.rows[0][0] and stay.kind != "unknown")
         spell = t - since if seen_arriving else -1
-        previous = at.get(since - 1, -1)
+        previous = at.get(t - 1, -1)
         tenure = t - stay.start if stay.known else -1
         sums["contexts"][b, g, t, tenure, spell, previous, state, at[t + 1]] += 1
 

@@ -93,6 +93,7 @@ def studies(draw: Any) -> Study:
         time="at",
         event="what",
         event_id="row" if draw(optional) else None,
+        loaded_at="loaded" if draw(optional) else None,
         amount="money",
         valid_until="until",
         segments=("shop",) if draw(optional) else (),
@@ -102,8 +103,12 @@ def studies(draw: Any) -> Study:
         tie_order=draw(st.just(()) | st.permutations(EVENTS).map(tuple)),
     )
     others = draw(st.sampled_from(["reject", "ignore"]))
+    names = [r.name for r in rules]
+    no_exit = [r.name for r in rules if r.role != "exit"]
+    pair = st.tuples(st.sampled_from(no_exit), st.sampled_from(names))
+    impossible = draw(st.just([]) | st.lists(pair, max_size=2))
     return Study(
-        as_states(rules),
+        as_states(rules, impossible),
         Calendar(kind),
         as_of=last,
         rules=rules,
@@ -118,7 +123,7 @@ def logs(draw: Any, study: Study) -> list[dict[str, str]]:
 
     How many customers and rows is hypothesis' choice (so that failures shrink); what they hold comes from a
     seed."""
-    sizes = draw(st.lists(st.integers(1, 12), min_size=1, max_size=6))
+    sizes = draw(st.lists(st.integers(1, 12), min_size=1, max_size=12))
     rng = Random(draw(st.integers(0, 2**32 - 1)))
     clock = rng.random() < 0.5
     rows = [
@@ -167,7 +172,8 @@ def _row(study: Study, who: str, day: int, what: str, clock: bool, rng: Random) 
         "until": rng.choice(["", until.isoformat()]),
     }
     if study.input.event_id:
-        row["row"] = "-".join(row.values())
+        row["row"] = f"{who}{day}{what}{rng.randrange(100)}" if rng.random() < 0.9 else ""
+    row["loaded"] = f"2026-01-0{rng.randrange(1, 4)}"
     return row
 
 
@@ -199,20 +205,22 @@ def histories(draw: Any) -> tuple[Study, list[dict[str, str]]]:
         on_gap=draw(st.sampled_from(["break", "carry", "c", "x"])),
         on_absent=draw(st.none() | st.sampled_from(["x", "y"])),
     )
-    states = States(STATE_NAMES, exits=["x", "y"], entries=["a"], away=["c"])
+    impossible = draw(st.just([]) | st.just([("b", "x"), ("a", "c")]))
+    states = States(STATE_NAMES, exits=["x", "y"], entries=["a"], away=["c"], impossible=impossible)
     rules = tuple(StateRule(name, states.role(name)) for name in STATE_NAMES)
     calendar = Calendar("step" if steps else "month")
     as_of = None if steps else FIRST_DAY + timedelta(days=draw(st.integers(280, 400)))
     study = Study(states, calendar, as_of=as_of, rules=rules, input=spec)
-    sizes = draw(st.lists(st.integers(1, LAST_STEP), min_size=1, max_size=6))
+    sizes = draw(st.lists(st.integers(1, LAST_STEP), min_size=1, max_size=12))
     rng = Random(draw(st.integers(0, 2**32 - 1)))
     rows = [row for place, size in enumerate(sizes) for row in _states_of(study, f"c{place}", size, rng)]
     rows += [_look(study, FILLER, t, "a", rng) for t in range(LAST_STEP) if t % 5 != 4 or rng.random() < 0.5]
     if rng.random() < 0.3:
         fault, bad = rng.choice([("who", ""), ("who", "unknown"), ("period", "soon")])
         rows.insert(rng.randrange(len(rows)), {**rows[0], fault: bad})
-    if rng.random() < 0.3:
-        rows.append(dict(rng.choice(rows)))
+    for _ in range(rng.choice([0, 0, 1, 2])):
+        again = dict(rng.choice(rows))  # the same look twice, or another state for the same period
+        rows.insert(rng.randrange(len(rows)), {**again, "state": rng.choice([again["state"], *"abx"])})
     if rng.random() < 0.5:
         rng.shuffle(rows)
     return study, rows

@@ -135,7 +135,7 @@ def _settle_conflicts(reading: Reading) -> None:
             f"WITH base AS ({base}) SELECT base.* FROM base JOIN (SELECT customer, p FROM base GROUP BY 1, 2 "
             "HAVING count(*) > 1) USING (customer, p) ORDER BY r"
         ).df()
-        same = found.duplicated(subset=["customer", "p", "h"], keep="first")
+        same = found.duplicated(subset=["customer", "p", "h"], keep="last")
         mark(engine, found.loc[same, "r"].to_numpy(), "identical")
         rest = found[~same].sort_values(["loaded", "r"], kind="stable")
         older = rest.loc[rest.duplicated(subset=["customer", "p"], keep="last"), "r"].to_numpy()

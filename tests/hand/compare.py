@@ -140,6 +140,6 @@ def _all_periods_written(written: dict[tuple[str, ...], int]) -> bool:
 
 def accounting(check: pd.DataFrame) -> dict[tuple[str, str], int]:
     """(outcome, reason) -> rows, without the rows of what was read."""
-    kept = check[check["outcome"] != "read"]
+    kept = check[(check["outcome"] != "read") & (check["file"] == "all")]
     sums = kept.groupby(["outcome", "reason"])["rows"].sum()
     return {(str(outcome), str(reason or "")): int(n) for (outcome, reason), n in sums.items() if n}

@@ -11,10 +11,10 @@ on_gap = "break", on_absent = "left".
 Moves. D1: reg-reg, reg-paused, paused-reg, then reg-reg two steps long over the gap, and reg at the end.
 D2: new-reg, reg-left, the exit's row at 4; then reg at the end. D3: new-new, new-left, the exit's row at 5.
 D4: reg-reg, and reg at the end.
-Contexts (tenure, steps already spent in the state, state before it; -1 = unknown). D1's tenure is unknown,
-and its first spell began before counting: steps 1 and 2 (-1, -1, -1); paused at 3: just arrived from reg:
-(-1, 0, reg). Step 4 is followed by a gap: none. D2: (0, 0, -1), (1, 0, new). D3: (0, 0, -1), (1, 1, -1).
-D4: (0, 0, -1): the first spell of a stay has no state before it.
+Contexts (tenure, steps already spent in the state, state one step before; -1 = unknown). D1's tenure is
+unknown, and its first spell began before counting: steps 1 and 2 (-1, -1, -1), (-1, -1, reg); paused at 3:
+just arrived from reg: (-1, 0, reg). Step 4 is followed by a gap: none. D2: (0, 0, -1), (1, 0, new).
+D3: (0, 0, -1), (1, 1, new). D4: (0, 0, -1): the first step of a stay has no state before it.
 Ages, from joining or returning on; D1 has none, its beginning is not known.
 Steps ahead: D1 is not seen at 5, so 4 steps from 1, 3 from 2, 2 from 3 and 1 from 4 are missing. D2's exit
 is kept though D2 comes back at 6: from 2 at 4 steps and from 3 at 3 steps it is left.
@@ -59,9 +59,9 @@ WRITTEN = {
     },
     "memos": {(4, MEMOS.index("joined_and_left"), LEFT): 1},
     "contexts": {
-        (1, -1, -1, -1, REG, REG): 1, (2, -1, -1, -1, REG, PAUSED): 1, (3, -1, 0, REG, PAUSED, REG): 1,
+        (1, -1, -1, -1, REG, REG): 1, (2, -1, -1, REG, REG, PAUSED): 1, (3, -1, 0, REG, PAUSED, REG): 1,
         (2, 0, 0, -1, NEW, REG): 1, (3, 1, 0, NEW, REG, LEFT): 1,
-        (3, 0, 0, -1, NEW, NEW): 1, (4, 1, 1, -1, NEW, LEFT): 1, (5, 0, 0, -1, REG, REG): 1,
+        (3, 0, 0, -1, NEW, NEW): 1, (4, 1, 1, NEW, NEW, LEFT): 1, (5, 0, 0, -1, REG, REG): 1,
     },
     "ages": {
         (2, 0, 0, NEW): 1, (2, 0, 1, REG): 1, (2, 0, 2, LEFT): 1,

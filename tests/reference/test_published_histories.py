@@ -242,12 +242,12 @@ NEWCOMBE = {
 
 
 @pytest.mark.parametrize(("x", "n"), NEWCOMBE, ids=[f"{x}-of-{n}" for x, n in NEWCOMBE])
-def test_newcombe_customers_who_left(x, n):
-    tally = read(two_waves([[n - x, x]], ["here", "gone"]), cf.States(["here", "gone"], exits=["gone"]))
+def test_newcombe_customers_who_moved(x, n):
+    tally = read(two_waves([[n - x, x]], ["here", "there"]), cf.States(["here", "there"]))
     fit = cf.fit(tally)
     for method, published in zip(("wilson", "clopper-pearson"), NEWCOMBE[x, n], strict=True):
         frame = fit.interval(level=0.95, method=method).to_frame()
-        cell = frame[(frame["from"] == "here") & (frame["to"] == "gone")].iloc[0]
+        cell = frame[(frame["from"] == "here") & (frame["to"] == "there")].iloc[0]
         assert (cell["count"], cell["at_risk"]) == (x, n)
         assert (cell["low"], cell["high"]) == pytest.approx(published, abs=5.001e-5)
 
