@@ -12,10 +12,19 @@ from cohortflow.states import States
 from cohortflow.tally import ENDS, KINDS, Meta, Tally
 
 STATES = States(
-    ["fresh", "steady", "paused", "left", "lapsed"], exits=["left", "lapsed"], entries=["fresh"], away=["paused"]
+    ["fresh", "steady", "paused", "left", "lapsed"],
+    exits=["left", "lapsed"],
+    entries=["fresh"],
+    away=["paused"],
 )
 P = np.array(
-    [[0, 0.8, 0, 0.15, 0.05], [0, 0.8, 0.1, 0.1, 0], [0, 0.5, 0.4, 0.05, 0.05], [0, 0, 0, 1, 0], [0, 0, 0, 0, 1.0]]
+    [
+        [0, 0.8, 0, 0.15, 0.05],
+        [0, 0.8, 0.1, 0.1, 0],
+        [0, 0.5, 0.4, 0.05, 0.05],
+        [0, 0, 0, 1, 0],
+        [0, 0, 0, 0, 1.0],
+    ]
 )
 CHAIN = Chain(STATES, P)
 MONTHS = Calendar("month")
@@ -70,9 +79,9 @@ def dirichlet_draws(matrix, at_risk, size, seed=1):
 
 
 def tally_of_stays(stays, *, states=STATES, first=1, last=6, memos=(), calendar=None):
-    """Tally from stays written out by hand: (kind, from_state, [(period, state), ...]) each, in calendar steps.
+    """Tally from stays written out by hand: (kind, from_state, [(period, state), ...]) each.
 
-    Consecutive rows that are not neighbours are a gap; a stay that stops before `last` without an exit is unseen.
+    Consecutive rows that are not neighbours are a gap; a stay that stops early without an exit is unseen.
     """
     moves, starts, ages = [], [], []
     index = {name: i for i, name in enumerate(states.names)}
@@ -94,7 +103,8 @@ def tally_of_stays(stays, *, states=STATES, first=1, last=6, memos=(), calendar=
         ),
         "ages": pd.DataFrame(ages, columns=["segment", "joined", "kind", "age", "state", "n"]),
         "memos": pd.DataFrame(
-            [(0, p, k, index[s], n) for p, k, s, n in memos], columns=["segment", "period", "kind", "state", "n"]
+            [(0, p, k, index[s], n) for p, k, s, n in memos],
+            columns=["segment", "period", "kind", "state", "n"],
         ),
     }
     meta = Meta(states, calendar or Calendar("step"), first, last, len(stays), "hand", bucket_bits=8)

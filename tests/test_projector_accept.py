@@ -25,7 +25,9 @@ def test_counts_by_name_or_by_place():
     assert accept.as_counts([1, 2, 3, 0, 0], STATES).tolist() == [1, 2, 3, 0, 0]
     with pytest.raises(CallError, match=r'Unknown state "pauzed" \(did you mean "paused"'):
         accept.as_counts({"pauzed": 1}, STATES)
-    with pytest.raises(CallError, match=r"start has shape \(2,\); it takes one number for each of the 5 states"):
+    with pytest.raises(
+        CallError, match=r"start has shape \(2,\); it takes one number for each of the 5 states"
+    ):
         accept.as_counts([1, 2], STATES)
     with pytest.raises(CallError, match='start of state "steady" is -1; it must be a number not below 0'):
         accept.as_counts([0, -1, 0, 0, 0], STATES)
@@ -49,7 +51,9 @@ def test_first_step_counts_from_the_models_first_period():
     assert accept.first_step(cycle, SEPTEMBER + 3) == 3 and accept.first_step(cycle, SEPTEMBER - 1) == -1
     assert accept.first_step(CHAIN.schedule, SEPTEMBER) == 0 == accept.first_step(cycle, None)
     held = seasonal([P, P], tail="hold")
-    with pytest.raises(CallError, match="The model's matrices begin in 2026-09, after the base period 2026-07"):
+    with pytest.raises(
+        CallError, match="The model's matrices begin in 2026-09, after the base period 2026-07"
+    ):
         accept.first_step(held, SEPTEMBER - 2)
 
 
@@ -104,5 +108,7 @@ def test_totals_are_sums_of_those_who_are_there():
 
 def test_a_model_without_a_single_departure_is_refused():
     empty = np.vstack([np.full((3, 5), np.nan), np.eye(5)[3:]])
-    with pytest.raises(NotIdentified, match="A projection needs rates, and no state has a single observed departure"):
+    with pytest.raises(
+        NotIdentified, match="A projection needs rates, and no state has a single observed departure"
+    ):
         accept.refuse_unknown(Chain(STATES, empty).schedule, "A projection")

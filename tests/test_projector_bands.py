@@ -61,7 +61,7 @@ def test_closed_cohort_has_the_multinomial_covariance():
 
 
 def test_poisson_joiners_leave_independent_poisson_counts():
-    # a base that only Poisson joiners fill: counts are independent Poissons (Bartholomew): covariance diag(mean)
+    # a base that only Poisson joiners fill: independent Poisson counts (Bartholomew), covariance diag(mean)
     inflow = Inflow(np.full(6, 25.0), np.zeros((6, 6)), np.tile([0.6, 0.4, 0, 0, 0], (6, 1)))
     joiners = Joiners(STATES, MONTHS, None, "test", {"joined": inflow})
     exact = moments(CHAIN.schedule, np.zeros(5), 6, joiners=joiners)

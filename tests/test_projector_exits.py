@@ -38,7 +38,7 @@ def test_drunkards_walk():
 
 def test_by_hand_and_as_a_table():
     frame = time_to_exit(CHAIN).to_frame().set_index(["from", "measure", "exit"])
-    # steady: tau = 1 + .8 tau + .1 rho, paused: rho = 1 + .5 tau + .4 rho -> tau = rho = 10; fresh 1 + .8 x 10
+    # steady: t = 1 + .8 t + .1 r, paused: r = 1 + .5 t + .4 r -> t = r = 10; fresh 1 + .8 x 10
     assert frame.loc[("steady", "mean_time", ""), "value"] == pytest.approx(10)
     assert frame.loc[("fresh", "mean_time", ""), "value"] == pytest.approx(9)
     # at most half left: fresh keeps .8 x .9^(t-1): .472 after 6, .525 after 5
@@ -109,7 +109,7 @@ def test_delta_interval_of_a_geometric_time_by_hand():
 
 def test_delta_and_draws_agree():
     covariance = multinomial(P, 800)
-    M = dirichlet_draws(P, 800, 600)
+    M = dirichlet_draws(P, 800, 400)
     by_delta = time_to_exit(CHAIN, covariance=covariance)
     by_draws = time_to_exit(CHAIN, draws=Draws.of_matrices(CHAIN.schedule, [M[:, None]]))
     assert (by_delta.method, by_draws.method) == ("delta", "draws")

@@ -29,17 +29,19 @@ def tally(numbers=(3, 2, 4, 3, 5, 4), returned=0):
 
 
 def test_constant_by_hand():
-    # 90 110 100 100: mean 100, s^2 = 200/3, widened by 3/1 to 200; beyond Poisson 100; error of the mean 200/4
+    # 90 110 100 100: mean 100, s^2 = 200/3, widened by 3/1 to 200; beyond Poisson 100; mean off by 200/4
     mean, extra = constant(np.array([5.0, 90, 110, 100, 100]), 3, 4)
     assert mean.tolist() == [100] * 3
     np.testing.assert_allclose(extra, 100 * np.eye(3) + 50)
     # calmer than Poisson: no spread of periods, the mean's own error is Poisson's, 100/4
     np.testing.assert_allclose(constant(np.full(4, 100.0), 2, 4)[1], 25 * np.ones((2, 2)))
-    np.testing.assert_allclose(constant(np.array([100.0]), 1, 4)[1], [[100.0]])  # one period tells its Poisson error
+    np.testing.assert_allclose(
+        constant(np.array([100.0]), 1, 4)[1], [[100.0]]
+    )  # one period tells its Poisson error
 
 
 def test_constant_predicts_with_the_stated_error():
-    # 3,000 histories of 12 Poisson(40) counts with a log-normal rate of SD .2: the nominal 90 % range of the next two
+    # 3,000 histories of 12 Poisson(40) counts, log-normal rates of SD .2: nominal 90 % range of the next two
     rng = np.random.default_rng(4)
     rates = 40 * np.exp(0.2 * rng.standard_normal((3000, 14)) - 0.02)
     numbers = rng.poisson(rates).astype(float)
@@ -56,7 +58,9 @@ def test_last_year_repeats_and_widens():
     mean, extra = last_year(growing, 4, 2)
     assert mean.tolist() == [121, 242, 121, 242]
     # every repetition was 10 % short: one cycle ahead log 1.1, two cycles ahead twice that, fully shared
-    np.testing.assert_allclose(np.sqrt(np.diag(extra)) / mean, np.log(1.1) * np.array([1, 1, 2, 2]), rtol=1e-6)
+    np.testing.assert_allclose(
+        np.sqrt(np.diag(extra)) / mean, np.log(1.1) * np.array([1, 1, 2, 2]), rtol=1e-6
+    )
     with pytest.raises(NotIdentified, match='"last_year" needs one cycle of 12 periods and 3 more'):
         last_year(growing, 4, 12)
 

@@ -20,14 +20,14 @@ def test_share_projection_of_beasley():
 
 
 def test_land_of_oz_after_three_steps():
-    # Grinstead & Snell, Introduction to Probability, Table 11.1: from N after 3 steps .40625 .1875 .40625 (VERIFIED)
+    # Grinstead & Snell, Introduction to Probability, Table 11.1: after 3 steps from N (VERIFIED)
     oz = Chain(States(["rain", "nice", "snow"]), [[0.5, 0.25, 0.25], [0.5, 0, 0.5], [0.25, 0.25, 0.5]])
     assert step_counts(oz, [0, 1, 0], 3)[3].tolist() == [0.40625, 0.1875, 0.40625]
 
 
 def test_base_with_joiners_by_hand():
     found = walk(CHAIN.schedule, {"steady": 100}, 2, [[10, 0, 0, 0, 0], [0, 0, 5, 0, 0]])
-    # period 1: 80 stay steady, 10 pause, 10 leave, 10 join; period 2: steady 80 x .8 + 10 x .5 + 10 x .8 = 77,
+    # period 1: 80 stay, 10 pause, 10 leave, 10 join; period 2: steady 80 x .8 + 10 x .5 + 10 x .8 = 77,
     # paused 80 x .1 + 10 x .4 + 5 = 17, left 10 + 8 + .5 + 1.5 = 20, lapsed .5 + .5 = 1
     np.testing.assert_allclose(found.counts[1], [10, 80, 10, 10, 0])
     np.testing.assert_allclose(found.counts[2], [0, 77, 17, 20, 1])
@@ -87,7 +87,7 @@ def test_nobody_is_lost_on_the_way(chain, base, joining):
     found = walk(chain.schedule, [*base, 0], 12, [joining, 0, 0, 0])
     total = sum(base) + joining * np.arange(13)
     np.testing.assert_allclose(found.counts.sum(axis=1), total, rtol=1e-9, atol=1e-9)
-    np.testing.assert_allclose(found.counts[:-1] , found.flows.sum(axis=2), rtol=1e-9, atol=1e-9)
+    np.testing.assert_allclose(found.counts[:-1], found.flows.sum(axis=2), rtol=1e-9, atol=1e-9)
 
 
 @settings(max_examples=50, deadline=None)
@@ -100,5 +100,7 @@ def test_n_steps_are_the_power_of_the_matrix(chain, steps):
 def test_refusals():
     with pytest.raises(CallError, match=r"inflow must be finite numbers of shape \(5,\) or \(3, 5\)"):
         as_inflow(np.zeros((2, 5)), 3, 5)
-    with pytest.raises(CallError, match="entry is a law over the states and must add up to 1; it adds up to 2"):
+    with pytest.raises(
+        CallError, match="entry is a law over the states and must add up to 1; it adds up to 2"
+    ):
         cohort_shares(CHAIN.schedule, [2, 0, 0, 0, 0], 1)

@@ -6,8 +6,6 @@ from types import SimpleNamespace
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 from cohortflow.chain import Chain, Draws
 from cohortflow.errors import CallError
@@ -20,7 +18,6 @@ from tests.projector_cases import (
     SEPTEMBER,
     STATES,
     P,
-    chains,
     dirichlet_draws,
     tally_of_stays,
 )
@@ -32,7 +29,9 @@ def fit_like(size=800, tally=None):
     """What the projector needs to know of a Fit."""
 
     def draws(n, *, rng, covariance="customer"):
-        return Draws.of_matrices(CHAIN.schedule, [dirichlet_draws(P, size, n, seed=int(rng.integers(1e6)))[:, None]])
+        return Draws.of_matrices(
+            CHAIN.schedule, [dirichlet_draws(P, size, n, seed=int(rng.integers(1e6)))[:, None]]
+        )
 
     return SimpleNamespace(schedule=CHAIN.schedule, draws=draws, tally=tally, P=P)
 
@@ -43,37 +42,6 @@ def test_share_projection_of_beasley_through_the_table():
     frame = project(chain, start=[0.25, 0.75], periods=2).to_frame().set_index(["state", "periods_ahead"])
     assert frame.loc[("ours", 1), "share"] == pytest.approx(0.3325, abs=1e-15)
     assert frame.loc[("theirs", 2), "customers"] == pytest.approx(0.607275, abs=1e-15)
-
-
-def test_rows_and_columns_of_the_contract():
-    found = project(CHAIN, start=BASE, periods=3, totals={"boxes": ["fresh", "steady"]}, base_period="2026-09",
-                    joiners={"fresh": 20}, draws=200)  # fmt: skip
-    frame = found.to_frame()
-    assert frame.columns.tolist() == [
-        "segment", "period", "periods_ahead", "state", "customers", "low", "high", "share", "share_low",
-        "share_high", "level",
-    ]  # fmt: skip
-    assert frame["state"].unique().tolist() == ["fresh", "steady", "paused", "all_live", "boxes", "left", "lapsed"]
-    assert frame["period"].tolist()[:4] == ["2026-09", "2026-10", "2026-11", "2026-12"]
-    opening = frame[frame["periods_ahead"] == 0]
-    assert (opening["low"] == opening["customers"]).all() and (opening["high"] == opening["customers"]).all()
-    inside = frame[(frame["low"] - 1 <= frame["customers"]) & (frame["customers"] <= frame["high"] + 1)]
-    assert len(inside) == len(frame)
-    assert found.about() == {
-        "level": 0.9, "parts": ["chance", "joiners"], "draws": 200, "base_period": "2026-09",
-        "joiners": "planned", "reasons": [],
-    }  # fmt: skip
-    assert "projection of 3 periods (month): all_live 340 to" in repr(found)
-
-
-def test_totals_and_shares_by_hand():
-    frame = project(CHAIN, start=BASE, periods=1).to_frame().set_index(["state", "periods_ahead"])
-    # steady 40 x .8 + 300 x .8 + 60 x .5 = 302, paused 30 + 24 = 54, left 6 + 30 + 3 = 39, lapsed 2 + 3 = 5
-    assert frame.loc[("all_live", 1), "customers"] == pytest.approx(302)
-    assert frame.loc[("paused", 1), "share"] == pytest.approx(54 / 356)
-    assert frame.loc[("left", 1), "customers"] == pytest.approx(39)
-    assert frame.loc[("left", 1), "share"] == pytest.approx(39 / 400)
-    assert project(CHAIN, start=BASE, periods=1).exits_lost["lapsed"].tolist() == pytest.approx([0, 5])
 
 
 def test_chance_band_of_one_binomial():
@@ -132,18 +100,6 @@ def test_the_same_seed_the_same_table():
     assert not one["low"].equals(other["low"])
 
 
-def test_states_reached_from_a_row_without_data_are_missing_and_the_rest_stands():
-    gap = P.copy()
-    gap[2] = np.nan
-    states = States(STATES.names, exits=STATES.exits, away=STATES.away, impossible=[("paused", "lapsed")])
-    found = project(Chain(states, gap), start={"steady": 100}, periods=3, draws=50)
-    frame = found.to_frame().set_index(["state", "periods_ahead"])
-    assert found.reasons == ("rows_without_data:paused",)
-    assert frame.loc[("steady", 1), "customers"] == 80 and np.isnan(frame.loc[("steady", 2), "customers"])
-    assert frame.loc[("steady", 2), ["low", "high"]].isna().all()
-    assert np.isnan(found.band_parts.set_index(["quantity", "periods_ahead"]).loc[("steady", 2), "chance"])
-
-
 def test_thousands_of_draws_in_well_under_a_second():
     rng = np.random.default_rng(0)
     matrix = rng.dirichlet(np.ones(8), size=8)
@@ -154,26 +110,13 @@ def test_thousands_of_draws_in_well_under_a_second():
     assert time.process_time() - begin < 2.0  # measured .3 s; the bound leaves room for a loaded machine
 
 
-@settings(max_examples=25, deadline=None)
-@given(chains(), st.integers(0, 400), st.integers(1, 8))
-def test_roll_forward_closes_for_every_state(chain, customers, periods):
-    found = project(chain, start=[customers, 10, 0, 0], periods=periods, joiners={"s1": 7}, draws=2)
-    frame = found.rollforward
-    frame = frame.assign(step=frame.groupby(["state", "line", "exit"]).cumcount())
-    wide = frame.groupby(["state", "step", "line"])["customers"].sum().unstack()
-    closing = wide["opening"] + wide["joined"] + wide["returned"] - wide["lost"] + wide["moved_in"] - wide["moved_out"]
-    np.testing.assert_allclose(wide["closing"], closing, atol=1e-9)
-    later = wide["opening"].unstack().iloc[:, 1:].to_numpy()
-    np.testing.assert_allclose(later, wide["closing"].unstack().iloc[:, :-1].to_numpy(), atol=1e-9)
-
-
 def test_refusals():
     with pytest.raises(CallError, match='The part "rates" needs to know how uncertain the rates are'):
         project(CHAIN, start=BASE, periods=2, parts=["rates"])
     with pytest.raises(CallError, match='The part "common_shocks" needs draws of future periods'):
         project(CHAIN, start=BASE, periods=2, parts=["common_shocks"])
     shocks = Draws.of_matrices(CHAIN.schedule, [np.tile(P, (4, 2, 1, 1))], part="rates and common shocks")
-    with pytest.raises(CallError, match='Draws of shocks hold the error of the rates as well'):
+    with pytest.raises(CallError, match="Draws of shocks hold the error of the rates as well"):
         project(CHAIN, start=BASE, periods=2, shocks=shocks, parts=["common_shocks"])
     with pytest.raises(CallError, match="draws is 1; it takes Draws, or a whole number of draws, at least 2"):
         project(CHAIN, start=BASE, periods=2, draws=1)
@@ -181,5 +124,7 @@ def test_refusals():
     with pytest.raises(CallError, match="The joiners and the model have different states"):
         project(CHAIN, start=BASE, periods=2, joiners=other)
     late = planned_numbers(STATES, {"fresh": 1}, periods=2, calendar=MONTHS, base=SEPTEMBER + 1)
-    with pytest.raises(CallError, match="The joiners are forecast from 2026-10, the base is counted in 2026-09"):
+    with pytest.raises(
+        CallError, match="The joiners are forecast from 2026-10, the base is counted in 2026-09"
+    ):
         project(CHAIN, start=BASE, periods=2, joiners=late, base_period="2026-09")

@@ -28,7 +28,10 @@ def test_churn_retention_and_return_by_hand():
     # into period 3: ten at risk (one of them away), two left and one lapsed
     churn = rate(frame, "churn", "3")
     assert (churn["numerator"], churn["denominator"], churn["value"]) == (3, 10, 0.3)
-    assert rate(frame, "churn", "3", "left")["value"] == 0.2 and rate(frame, "churn", "3", "lapsed")["value"] == 0.1
+    assert (
+        rate(frame, "churn", "3", "left")["value"] == 0.2
+        and rate(frame, "churn", "3", "lapsed")["value"] == 0.1
+    )
     assert rate(frame, "retention", "3")["value"] == pytest.approx(0.7)
     # three had left by the end of period 4; one came back in period 5, so two are left to return in period 6
     back = rate(frame, "return", "5")
@@ -65,7 +68,9 @@ def test_forecast_rates_are_expected_losses_over_the_base():
     frame = rates_forecast(found)
     # first month: 10 + 1 left, 1 lapsed of 120
     first = rate(frame, "churn", "2026-10")
-    assert (first["numerator"], first["denominator"]) == (pytest.approx(12), 120) and first["low"] < 0.1 < first["high"]
+    assert (first["numerator"], first["denominator"]) == (pytest.approx(12), 120) and first[
+        "low"
+    ] < 0.1 < first["high"]
     assert rate(frame, "churn", "2026-10", "lapsed")["value"] == pytest.approx(1 / 120)
     kept = rate(frame, "retention", "2026-10")
     assert kept["value"] == pytest.approx(0.9) and kept["low"] == pytest.approx(1 - first["high"])

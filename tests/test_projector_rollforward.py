@@ -5,8 +5,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from cohortflow.projector.mix import walk
 from cohortflow.projector.joiners import planned_numbers
+from cohortflow.projector.mix import walk
 from cohortflow.projector.rollforward import counted_lines, forecast_lines, rollforward_actual
 from tests.projector_cases import CHAIN, STATES, tally_of_stays
 
@@ -30,7 +30,7 @@ def test_every_line_on_paper():
     assert lines("fresh", "2") == {
         ("opening", ""): 1, ("joined", ""): 2, ("moved_out", ""): 1, ("closing", ""): 2
     }  # fmt: skip
-    # period 3: one of two fresh leaves, the other has no row; a history that began before the log comes in sight
+    # period 3: one of two fresh leaves, the other has no row; a history from before the log comes in sight
     assert lines("fresh", "3") == {("opening", ""): 2, ("lost", "left"): 1, ("unobserved_out", ""): 1}
     assert lines("steady", "3") == {("opening", ""): 1, ("unobserved_in", ""): 1, ("closing", ""): 2}
     # period 4: one pauses, one comes back into sight after the gap
@@ -39,7 +39,8 @@ def test_every_line_on_paper():
     }  # fmt: skip
     # period 5: back from the pause, one returns, one is not seen any more
     assert lines("steady", "5") == {
-        ("opening", ""): 2, ("returned", ""): 1, ("moved_in", ""): 1, ("unobserved_out", ""): 1, ("closing", ""): 3
+        ("opening", ""): 2, ("returned", ""): 1, ("moved_in", ""): 1, ("unobserved_out", ""): 1,
+        ("closing", ""): 3,
     }  # fmt: skip
     assert lines("steady", "6") == {("opening", ""): 3, ("lost", "lapsed"): 1, ("closing", ""): 2}
     # all_live: the pause is a move out of the live states
@@ -91,7 +92,7 @@ def test_forecast_lines_by_hand():
     frame = forecast_lines(STATES, found, plan, ["2026-10"])
     steady = frame[frame["state"] == "steady"].set_index(["line", "exit"])["customers"]
     assert steady.to_dict() == pytest.approx(
-        {("opening", ""): 100, ("joined", ""): 0, ("returned", ""): 1, ("lost", "left"): 10, ("lost", "lapsed"): 0,
-         ("moved_in", ""): 0, ("moved_out", ""): 10, ("closing", ""): 81}
+        {("opening", ""): 100, ("joined", ""): 0, ("returned", ""): 1, ("lost", "left"): 10,
+         ("lost", "lapsed"): 0, ("moved_in", ""): 0, ("moved_out", ""): 10, ("closing", ""): 81}
     )  # fmt: skip
     assert list(frame.columns) == ["segment", "period", "kind", "state", "line", "exit", "customers"]

@@ -18,7 +18,7 @@ def test_a_cycle_leads_round_and_a_held_sequence_stays_with_its_last():
     other = P.copy()
     other[1] = [0, 0.5, 0.3, 0.2, 0]
     cycle = unroll(seasonal([P, other]), first_step=1)
-    # first block acts with `other` (step 1), the second with P; live states 0..2, exits absorb where they stand
+    # first block acts with `other` (step 1), the second with P; exits absorb where they stand
     assert np.array_equal(cycle.P[:3, 5:], other[:3]) and np.array_equal(cycle.P[5:8, :5], P[:3])
     assert cycle.exits == (3, 4, 8, 9) and (np.diag(cycle.P)[[3, 4, 8, 9]] == 1).all()
     held = unroll(seasonal([P, other], tail="hold"))

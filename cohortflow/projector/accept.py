@@ -18,7 +18,7 @@ from cohortflow.periods import Calendar
 from cohortflow.states import States
 from cohortflow.tally import Tally
 
-Array = NDArray[np.float64]
+Array = NDArray[Any]
 Flags = NDArray[np.bool_]
 
 
@@ -48,8 +48,8 @@ def tally_of(model: Any) -> Tally | None:
 def covariance_of(model: Any, covariance: Any = None) -> Any:
     """An object with `.matrix` (K*K, K*K) and `.df` for a model that is one chain; else None.
 
-    `covariance`: None (the Fit's own choice), a kind's name, or such an object itself. A Fit whose chain is not
-    made of its pooled rates (a shrunk one) has no such covariance: its draws tell.
+    `covariance`: None (the Fit's own choice), a kind's name, or such an object itself. A Fit whose chain is
+    not made of its pooled rates (a shrunk one) has no such covariance: its draws tell.
     """
     if not as_schedule(model).is_plain:
         return None

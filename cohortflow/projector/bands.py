@@ -129,7 +129,7 @@ def moments(
 def drawn_means(
     draws: Draws, start: Array, periods: int, *, inflow: Array | None = None, first_step: int = 0
 ) -> Array:
-    """Expected customers by state under each draw's rates, shape (D, periods + 1, K); inflow (H, K) as expected."""
+    """Expected customers by state under each draw's rates, (D, periods + 1, K); inflow (H, K) as expected."""
     schedule = draws.schedule
     fold = [c.collapse(len(schedule.states)) for c in schedule.components]
     parts = [np.broadcast_to(start @ law, (draws.size, law.shape[-1])) for law in draws.start]
@@ -162,7 +162,7 @@ def _laws(schedule: Schedule, draws: Draws | None, side: str) -> list[Array]:
 
 
 def _matrices(schedule: Schedule, draws: Draws | None, component: int, step: int, ahead: int) -> Array:
-    """(D or 1, m, m) matrices of a step; draws of future shocks count from the base period, not the calendar."""
+    """(D or 1, m, m) matrices of a step; draws of future shocks count from the base period."""
     if draws is None:
         return filled(schedule.components[component].matrix(step))[None]
     return filled(draws.matrix(component, ahead if "common shocks" in draws.part else step))

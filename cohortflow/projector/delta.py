@@ -17,8 +17,10 @@ from typing import Any
 import numpy as np
 from scipy import special
 
+from cohortflow.chain import Draws
 from cohortflow.errors import CallError, listed, nearest
 from cohortflow.markov.gradient import Derivative, delta_variance
+from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
 
 SCALES = ("log", "logit", "plain")
@@ -58,6 +60,31 @@ class Spread:
         """(T,) low and high of the derivative's targets."""
         variance = [self.variance(derivative.gradient(t)) for t in range(len(derivative.value))]
         return interval(derivative.value, np.array(variance), self.quantile, scale)
+
+
+@dataclass(frozen=True, eq=False)
+class Doubt:
+    """What is known of the error of a model's rates: a covariance (one chain), else draws, else nothing."""
+
+    spread: Spread | None
+    draws: Draws | None
+    level: float
+
+    @property
+    def method(self) -> str:
+        """delta | draws | none."""
+        return "delta" if self.spread is not None else "none" if self.draws is None else "draws"
+
+
+def doubt_of(
+    model: Any, covariance: Any, draws: Draws | int, rng: int | np.random.Generator, level: float
+) -> Doubt:
+    """From what a call was given and what a Fit brings: see accept.covariance_of and accept.draws_of."""
+    size = len(accept.as_schedule(model).states)
+    found = accept.covariance_of(model, covariance)
+    if found is not None:
+        return Doubt(Spread.of(found, size, accept.as_level(level)), None, level)
+    return Doubt(None, accept.draws_of(model, draws, accept.as_rng(rng), covariance), accept.as_level(level))
 
 
 def interval(value: Array, variance: Array, quantile: float, scale: str) -> tuple[Array, Array]:

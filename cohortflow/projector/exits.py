@@ -5,8 +5,8 @@
     median   first whole period by which half have left
     which    (N R)_ke
 
-For a model of several matrices or kinds of customers these are those of its unrolled chain, weighted by the law
-of a customer who is in the state now. Source: Kemeny & Snell (1960), Finite Markov Chains, ch. 3.
+For a model of several matrices or kinds of customers these are those of its unrolled chain, weighted by the
+law of a customer who is in the state now. Source: Kemeny & Snell (1960), Finite Markov Chains, ch. 3.
 """
 
 from __future__ import annotations
@@ -31,7 +31,7 @@ from cohortflow.markov.gradient import Derivative
 from cohortflow.markov.powers import first_time
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array, Flags
-from cohortflow.projector.delta import Spread, interval, quantiles
+from cohortflow.projector.delta import Doubt, Spread, doubt_of, interval, quantiles
 from cohortflow.projector.unroll import Unrolled, drawn_schedule, unroll
 from cohortflow.record import Record, frozen_mapping
 
@@ -105,7 +105,8 @@ def time_to_exit(
     schedule = accept.as_schedule(model)
     if not schedule.states.exits:
         raise NotIdentified(
-            "Time to exit needs an exit, and no state of this model is one: name it, States(..., exits=[...])."
+            "Time to exit needs an exit, and no state of this model is one: name it, "
+            "States(..., exits=[...])."
         )
     accept.refuse_unknown(schedule, "Time to exit")
     base = accept.base_period(model, None, base_period, schedule.calendar)
@@ -113,13 +114,14 @@ def time_to_exit(
     chain = unroll(schedule, first_step=first)
     found = absorb(chain.P, chain.exits)
     values = _values(schedule, chain, found)
-    low, high, method = _limits(model, schedule, found, values, level, covariance, draws, rng, first)
+    doubt = doubt_of(model, covariance, draws, rng, level)
+    low, high = _limits(schedule, found, values, doubt, first)
     clouded = chain.undefined()[~schedule.states.exit_mask]
     for table in (values, low, high):
         for numbers in table.values():
             numbers[clouded] = np.nan
     return ExitTimes(
-        schedule, frozen_mapping(values), frozen_mapping(low), frozen_mapping(high), level, method,
+        schedule, frozen_mapping(values), frozen_mapping(low), frozen_mapping(high), level, doubt.method,
         (*_reasons(schedule, chain, found), *(f"rows_without_data:{s}" for s in schedule.unknown)), segment,
     )  # fmt: skip
 
@@ -158,34 +160,20 @@ def _medians(chain: Unrolled, laws: Array, found: Absorption) -> Array:
 
 
 def _limits(
-    model: Any,
-    schedule: Schedule,
-    found: Absorption,
-    values: Mapping[str, Array],
-    level: float,
-    covariance: Any,
-    draws: Draws | int,
-    rng: int | np.random.Generator,
-    first: int,
-) -> tuple[dict[str, Array], dict[str, Array], str]:
-    accept.as_level(level)
+    schedule: Schedule, found: Absorption, values: Mapping[str, Array], doubt: Doubt, first: int
+) -> tuple[dict[str, Array], dict[str, Array]]:
     low = {m: np.full_like(v, np.nan) for m, v in values.items()}
     high = {m: v.copy() for m, v in low.items()}
-    cov = accept.covariance_of(model, covariance)
-    if cov is not None:
-        _by_delta(schedule, found, values, Spread.of(cov, len(schedule.states), level), low, high)
-        return low, high, "delta"
-    drawn = accept.draws_of(model, draws, accept.as_rng(rng), covariance)
-    if drawn is None:
-        return low, high, "none"
-    for measure, sample in _drawn(drawn, first).items():
-        low[measure], high[measure] = quantiles(sample, level)
-    return low, high, "draws"
+    if doubt.spread is not None:
+        _by_delta(found, values, doubt.spread, low, high)
+    elif doubt.draws is not None:
+        for measure, sample in _drawn(doubt.draws, first).items():
+            low[measure], high[measure] = quantiles(sample, doubt.level)
+    return low, high
 
 
 # ---- delta method, for one chain ----
 def _by_delta(
-    schedule: Schedule,
     found: Absorption,
     values: Mapping[str, Array],
     spread: Spread,

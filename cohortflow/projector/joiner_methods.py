@@ -2,10 +2,11 @@
 
 Every method gives the expected number of each period, and the covariance of its rate beyond Poisson chance:
 
-    constant   mean y of the last n periods; Cov = e 1{h=k} + max(s^2, y) / n,  e = (s^2 - y)+ spread of periods,
+    constant   mean y of the last n periods; Cov = e 1{h=k} + max(s^2, y) / n,  e = (s^2 - y)+ by period,
                s^2 widened by (n-1)/(n-3), the variance of Student's law with n-1 degrees of freedom
-    last_year  y of the same place a cycle ago; errors as past ones were, on the log scale: with the mean m and the
-               variance v of log y_t - log y_{t-c},  Cov = y_h y_k (g_h g_k m^2 + 1{h=k} g_h v), g = cycles ahead
+    last_year  y of the same place a cycle ago; errors as past ones were, on the log scale: with mean m and
+               variance v of log y_t - log y_{t-c}, and g cycles ahead,
+               Cov = y_h y_k (g_h g_k m^2 + 1{h=k} g_h v)
     smoothing  additive damped trend (and season, from two cycles on) on log y, fitted by maximum likelihood;
                Cov of log y_{T+h}: sigma^2 Psi Psi', Psi the weights of past errors
     planned    the plan is the expected number, joining at random (Poisson)
@@ -45,8 +46,8 @@ def joiner_forecast(
     window : for constant, periods averaged (default: one cycle of seasons);  plan : for planned, rows with
         period, kind (joined or returned), state, customers
 
-    The split over entry states is pooled over the last cycle, kept apart from the number; it varies from period to
-    period as it did there (Dirichlet). Raises NotIdentified when the history is too short for the method.
+    The split over entry states is pooled over the last cycle, kept apart from the number; it varies from
+    period to period as it did there (Dirichlet). Raises NotIdentified when the history is too short.
     """
     if method not in METHODS:
         raise CallError(f'Unknown method "{method}"{nearest(method, METHODS)}. Allowed: {listed(METHODS)}.')
@@ -64,10 +65,11 @@ def joiner_forecast(
 
 
 def planned(states: States, plan: Any, periods: int, *, calendar: Calendar, base: int) -> Joiners:
-    """Joiners from a plan: a DataFrame (or rows) of period, kind, state, customers; every period must be there.
+    """Joiners from a plan: rows of period, kind, state, customers (a DataFrame, say), for every period.
 
     >>> months = Calendar("month")
-    >>> rows = [{"period": f"2026-{m}", "kind": "joined", "state": "fresh", "customers": 40} for m in (10, 11)]
+    >>> row = {"kind": "joined", "state": "fresh", "customers": 40}
+    >>> rows = [{"period": "2026-10", **row}, {"period": "2026-11", **row}]
     >>> states = States(["fresh", "left"], exits=["left"])
     >>> planned(states, rows, 2, calendar=months, base=months.parse("2026-09")).expected()[:, 0]
     array([40., 40.])
@@ -121,8 +123,8 @@ def last_year(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:
     """
     if len(numbers) < cycle + LEAST_ERRORS:
         raise NotIdentified(
-            f'The method "last_year" needs one cycle of {cycle} periods and {LEAST_ERRORS} more to see how wrong it '
-            f'is; the history has {len(numbers)}. Use "constant", or a plan.'
+            f'The method "last_year" needs one cycle of {cycle} periods and {LEAST_ERRORS} more to see how '
+            f'wrong it is; the history has {len(numbers)}. Use "constant", or a plan.'
         )
     ahead = np.arange(periods)
     mean = numbers[-cycle:][ahead % cycle]
@@ -138,12 +140,12 @@ def last_year(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:
 def smoothing(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:
     """(H,) mean and (H, H) covariance of log-normal numbers, from damped exponential smoothing of their logs.
 
-    NotIdentified when there are fewer than eight periods, or the likelihood has no maximum that could be found.
+    NotIdentified when there are fewer than eight periods, or no maximum of the likelihood was found.
     """
     if len(numbers) < LEAST_SMOOTHED:
         raise NotIdentified(
-            f'The method "smoothing" needs at least {LEAST_SMOOTHED} periods; the history has {len(numbers)}. '
-            'Use "constant", or a plan.'
+            f'The method "smoothing" needs at least {LEAST_SMOOTHED} periods; the history has '
+            f'{len(numbers)}. Use "constant", or a plan.'
         )
     fitted, season = _smoothed(np.log(np.maximum(numbers, 0.5)), cycle)
     ahead = np.asarray(fitted.forecast(periods), dtype=float)
@@ -160,8 +162,8 @@ def smoothing(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:
 def error_covariance(params: Mapping[str, float], season: int, periods: int) -> Array:
     """(H, H) covariance of forecast errors over sigma^2, for additive errors, damped trend and season.
 
-    Psi is lower triangular with 1 on its diagonal and c_j below: c_j = alpha + beta (phi + .. + phi^j) + gamma at
-    every full season.
+    Psi is lower triangular with 1 on its diagonal and c_j below: c_j = alpha + beta (phi + .. + phi^j), and
+    gamma more at every full season.
 
     >>> error_covariance({"smoothing_level": 0.5}, 0, 2)
     array([[1.  , 0.5 ],
@@ -213,7 +215,7 @@ def _forecast(
 
 
 def _with_mix(counts: Array, mean: Array, extra: Array, states: States, cycle: int) -> Inflow:
-    """The number of each period with the entry mix of the last cycle (of all periods when nobody joined there)."""
+    """The number of each period with the entry mix of the last cycle (of all if nobody joined there)."""
     recent = counts[-max(cycle, CONSTANT_WINDOW) :]
     used = recent if recent.any() else counts
     if not used.any():
@@ -223,7 +225,7 @@ def _with_mix(counts: Array, mean: Array, extra: Array, states: States, cycle: i
 
 
 def _concentration(counts: Array) -> float:
-    """Of a Dirichlet law around a common mix, from the chi-square of periods by states; inf: no excess seen."""
+    """Of a Dirichlet law around a common mix, from the chi-square of periods by states; inf: no excess."""
     table = counts[counts.sum(axis=1) > 0][:, counts.any(axis=0)].astype(float)
     df = (table.shape[0] - 1) * (table.shape[1] - 1)
     if df <= 0:

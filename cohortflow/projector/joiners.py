@@ -1,10 +1,10 @@
 """Who joins and who returns: how many a period, and where they start, kept apart, each with its uncertainty.
 
     N_h | rate ~ Poisson(rate_h),   E rate_h = mean_h,   Cov(rate_h, rate_k) = extra_hk
-    customers by state | N_h ~ multinomial(N_h, q),   q ~ Dirichlet(concentration x mix_h), infinite: q = mix_h
+    customers by state | N_h ~ multinomial(N_h, q),  q ~ Dirichlet(concentration x mix_h); infinite: q = mix_h
 
-so that Cov(N_h, N_k) = extra_hk + 1{h=k} mean_h. Rates are drawn log-normal with these two moments, hence never
-negative. Joiners and returners are forecast separately and taken as independent.
+so that Cov(N_h, N_k) = extra_hk + 1{h=k} mean_h. Rates are drawn log-normal with these two moments, hence
+never negative. Joiners and returners are forecast separately and taken as independent.
 """
 
 from __future__ import annotations
@@ -46,7 +46,8 @@ class Inflow:
         periods = len(self.mean)
         if self.extra.shape != (periods, periods) or len(self.mix) != periods or (self.mean < 0).any():
             raise CallError(
-                f"An inflow of {periods} periods needs mean (H,) not below 0, extra (H, H) and mix (H, K); got "
+                f"An inflow of {periods} periods needs mean (H,) not below 0, extra (H, H) and mix (H, K); "
+                "got "
                 f"{self.mean.shape}, {self.extra.shape} and {self.mix.shape}."
             )
 
@@ -63,7 +64,7 @@ class Inflow:
     def state_noise(self) -> Array:
         """(H, K, K) covariance of customers by state that comes from the split alone, given the numbers.
 
-        E[N](diag q - qq') + E[N(N-1)] (diag q - qq') / (concentration + 1), the second term 0 for a fixed mix.
+        E[N](diag q - qq') + E[N(N-1)] (diag q - qq') / (concentration + 1); the second is 0 for a fixed mix.
         """
         split = np.einsum("hk,kl->hkl", self.mix, np.eye(self.mix.shape[1]))
         split = split - np.einsum("hk,hl->hkl", self.mix, self.mix)
@@ -89,7 +90,8 @@ class Inflow:
 class Joiners(Record):
     """Forecast of joiners and returners for the H periods after a base period.
 
-    inflows : "joined" and "returned" to their Inflow;  base : ordinal of the base period, None outside a calendar
+    inflows : "joined" and "returned" to their Inflow
+    base : ordinal of the base period, None outside a calendar
 
     >>> from cohortflow import States
     >>> states = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
@@ -120,11 +122,11 @@ class Joiners(Record):
         return sum((i.expected for i in self.inflows.values()), np.zeros((self.periods, len(self.states))))
 
     def a_period(self) -> Array:
-        """(K,) expected customers by state a period, averaged over the last full cycle of seasons (or all)."""
+        """(K,) expected customers by state a period, averaged over the last cycle of seasons (or all)."""
         return self.expected()[-min(self.periods, self.calendar.cycle) :].mean(axis=0)
 
     def relative_error(self) -> float:
-        """Variance of the long-run rate over its square: what the periods ahead share, not what averages out."""
+        """Variance of the long-run rate over its square: what the periods share, not what averages out."""
         if self.periods < 2 or not self.expected().any():
             return 0.0
         pairs = self.periods * (self.periods - 1)
@@ -162,7 +164,7 @@ class Joiners(Record):
             frames.append(
                 pd.DataFrame(
                     {
-                        "period": [period_label(self.calendar, self.base, h + 1) for h in ahead],
+                        "period": [period_label(self.calendar, self.base, int(h) + 1) for h in ahead],
                         "periods_ahead": ahead + 1,
                         "kind": kind,
                         "state": np.array(self.states.names, dtype=object)[state],
@@ -197,7 +199,7 @@ def planned_numbers(
     base: int | None = None,
     method: str = "planned",
 ) -> Joiners:
-    """Joiners from numbers given by hand: (K,), a mapping by state, or (H, K). Taken as rates: Poisson around them.
+    """Joiners from numbers given by hand: (K,), a mapping by state, or (H, K); Poisson around them.
 
     >>> from cohortflow import States
     >>> states = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])

@@ -6,7 +6,7 @@
     a periodic group                        no_limit: the mix cycles; only a time average exists
     only exits                              exits_only: everybody leaves; ask for the mix of those remaining
 
-Source: Kemeny & Snell (1960), Finite Markov Chains; Darroch & Seneta (1965) J. Appl. Prob. 2 (those remaining);
+Source: Kemeny & Snell (1960), Finite Markov Chains; Darroch & Seneta (1965) J. Appl. Prob. 2 (remaining);
 Bartholomew (1982), Stochastic Models for Social Processes, ch. 3 (a base with joiners).
 """
 
@@ -22,7 +22,7 @@ import pandas as pd
 from cohortflow.chain import Draws, Schedule
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
-from cohortflow.projector.delta import Spread, quantiles
+from cohortflow.projector.delta import doubt_of, quantiles
 from cohortflow.projector.joiners import Joiners
 from cohortflow.projector.longrun_delta import delta_limits
 from cohortflow.projector.longrun_figures import figures
@@ -112,7 +112,6 @@ def long_run(
     """
     schedule = accept.as_schedule(model)
     accept.refuse_unknown(schedule, "The long run")
-    accept.as_level(level)
     base = accept.base_period(model, start, base_period, schedule.calendar)
     coming, rate_error = _constant(joiners, schedule)
 
@@ -127,24 +126,16 @@ def long_run(
 
     prospect = seen(schedule)
     rows = tuple(figures(prospect))
-    cov = accept.covariance_of(model, covariance)
-    if cov is not None:
-        limits = delta_limits(prospect, Spread.of(cov, len(schedule.states), level), rate_error)
-        return _record(prospect, rows, limits, level, "delta", segment)
-    drawn = accept.draws_of(model, draws, accept.as_rng(rng), covariance)
-    if drawn is None:
-        return _record(prospect, rows, {}, level, "none", segment)
-    samples = [{f.key: f.value for f in figures(seen(drawn_schedule(drawn, d)))} for d in range(drawn.size)]
-    return _record(prospect, rows, _by_draws(rows, samples, level), level, "draws", segment)
-
-
-def _record(
-    at: Prospect, rows: tuple[Figure, ...], limits: Mapping[Key, tuple[float, float]], level: float,
-    method: str, segment: str,
-) -> LongRun:  # fmt: skip
+    doubt = doubt_of(model, covariance, draws, rng, level)
+    limits: Mapping[Key, tuple[float, float]] = {}
+    if doubt.spread is not None:
+        limits = delta_limits(prospect, doubt.spread, rate_error)
+    elif doubt.draws is not None:
+        each = (seen(drawn_schedule(doubt.draws, d)) for d in range(doubt.draws.size))
+        limits = _by_draws(rows, [{f.key: f.value for f in figures(one)} for one in each], level)
     fixed = ("closed_group", "group_period")
     kept = {key: pair for key, pair in limits.items() if key[0] not in fixed}
-    return LongRun(at.schedule, at.verdict, _reasons(at), rows, kept, level, method, segment)
+    return LongRun(schedule, prospect.verdict, _reasons(prospect), rows, kept, level, doubt.method, segment)
 
 
 def _by_draws(

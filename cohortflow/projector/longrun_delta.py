@@ -20,7 +20,7 @@ Limits = dict[Key, tuple[float, float]]
 
 
 def delta_limits(at: Prospect, spread: Spread, rate_error: float) -> Limits:
-    """key -> (low, high) for every figure that has a derivative; rate_error: relative variance of the joiners."""
+    """key -> (low, high) of every figure with a derivative; rate_error: relative variance of the joiners."""
     found: Limits = {}
     for number, (group, _) in enumerate(at.groups, start=1):
         found.update(_group(at, list(group), f"group {number}", spread))
@@ -28,12 +28,12 @@ def delta_limits(at: Prospect, spread: Spread, rate_error: float) -> Limits:
         found.update(_remaining(at, spread))
         found.update(_exit_split(at, spread))
     if at.joiners is not None:
-        found.update(_settled(at, spread, rate_error))
+        found.update(_settled(at, at.joiners, spread, rate_error))
     return _matched(at, found)
 
 
 def _matched(at: Prospect, found: Limits) -> Limits:
-    """Only figures that stand in the table, under their own notes; a limit of one group is that group's law."""
+    """Only figures of the table, under their own notes; the limit of a single group is that group's law."""
     out: Limits = {}
     alone = at.verdict == "unique_limit"
     for figure in figures(at):
@@ -89,30 +89,29 @@ def _exit_split(at: Prospect, spread: Spread) -> Limits:
         for origin, law in at.starts.items():
             weights = law[inside]
             variance = spread.variance(slope.along(weights))
-            pair = _pair(weights @ slope.value, variance, spread, "logit")
+            pair = _pair(float(weights @ slope.value), variance, spread, "logit")
             out["limit_from_start", at.schedule.states.names[state], origin, ""] = pair
     return out
 
 
-def _settled(at: Prospect, spread: Spread, rate_error: float) -> Limits:
+def _settled(at: Prospect, joiners: Array, spread: Spread, rate_error: float) -> Limits:
     states = at.schedule.states
-    assert at.joiners is not None
-    try:
-        slope = settled_base_derivative(at.chain.P, at.chain.exits, at.joiners) if states.exits else None
-    except NotIdentified:
+    if not states.exits:
         return {}
-    if slope is None:
+    try:
+        slope = settled_base_derivative(at.chain.P, at.chain.exits, joiners)
+    except NotIdentified:
         return {}
     out: Limits = {}
     inside = np.flatnonzero(at.chain.inside)
     for name, weights in _sums(at, inside):
-        value = weights @ slope.value
+        value = float(weights @ slope.value)
         variance = spread.variance(slope.along(weights)) + rate_error * value**2
         out["settled_base", name, "", ""] = _pair(value, variance, spread, "log")
-    whole, total = slope.along(np.ones(len(inside))), slope.value.sum()
-    for t, state in enumerate(inside):
-        share = slope.value[t] / total if total > 0 else np.nan
-        variance = spread.variance((slope.gradient(t) - share * whole) / total) if total > 0 else np.nan
+    whole, total = slope.along(np.ones(len(inside))), float(slope.value.sum())
+    for t, state in enumerate(inside if total > 0 else []):
+        share = float(slope.value[t]) / total
+        variance = spread.variance((slope.gradient(t) - share * whole) / total)
         out["settled_mix", states.names[state], "", ""] = _pair(share, variance, spread, "logit")
     return out
 

@@ -11,7 +11,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from cohortflow.markov.stationary import cycle_limits, stationary_laws, time_average_matrix
+from cohortflow.markov.stationary import cycle_limits, stationary_laws
 from cohortflow.projector.accept import Array
 from cohortflow.projector.longrun_remaining import remaining_figures
 from cohortflow.projector.longrun_settled import settled_figures
@@ -25,13 +25,13 @@ def figures(prospect: Prospect) -> Iterator[Figure]:
     if prospect.schedule.states.exits:
         yield from remaining_figures(prospect)
     if prospect.joiners is not None:
-        yield from settled_figures(prospect)
+        yield from settled_figures(prospect, prospect.joiners)
 
 
 # ---- closed groups ----
 def _groups(at: Prospect) -> Iterator[Figure]:
     names = at.schedule.states.names
-    laws = stationary_laws(at.chain.P)
+    laws = stationary_laws(at.chain.P) if at.groups else np.zeros((0, len(at.chain.P)))
     for number, (group, period) in enumerate(at.groups, start=1):
         origin = f"group {number}"
         members = sorted({int(at.chain.report[s]) for s in group})
@@ -57,18 +57,22 @@ def _stationary(
 
 # ---- limits from a start ----
 def _from_starts(at: Prospect) -> Iterator[Figure]:
-    averages = time_average_matrix(at.chain.P)
     for origin, law in at.starts.items():
         if at.clouded(law):
             yield Figure("limit_from_start", "", origin, math.nan, "rows_without_data")
-            continue
-        begin = law @ at.chain.start
-        laws = np.array([at.fold(x) for x in cycle_limits(at.chain.P, begin)])
-        yield from _limits(at, origin, laws)
-        if len(laws) > 1 and np.abs(laws - laws[0]).max() > SAME:
-            yield from _shares(at, "time_average", origin, at.fold(begin @ averages), "")
-        if at.verdict != "exits_only":
-            yield Figure("periods_to_settle", "", origin, _settles(at, begin, laws))
+        elif at.verdict == "exits_only":
+            yield from _shares(at, "limit_from_start", origin, law @ at.exit_split, "")
+        else:
+            yield from _settling(at, origin, law @ at.chain.start)
+
+
+def _settling(at: Prospect, origin: str, begin: Array) -> Iterator[Figure]:
+    """Limit, time average and time to settle where somebody stays for ever."""
+    laws = np.array([at.fold(x) for x in cycle_limits(at.chain.P, begin)])
+    yield from _limits(at, origin, laws)
+    if len(laws) > 1 and np.abs(laws - laws[0]).max() > SAME:
+        yield from _shares(at, "time_average", origin, at.fold(begin @ at.time_average), "")
+    yield Figure("periods_to_settle", "", origin, _settles(at, begin, laws))
 
 
 def _limits(at: Prospect, origin: str, laws: Array) -> Iterator[Figure]:

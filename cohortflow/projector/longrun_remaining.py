@@ -1,8 +1,8 @@
 """The mix of those who have not left, and the share of them that is kept, in the long run.
 
-The right mix of one component keeps itself, u Q = lambda u. Of several kinds of customers the one that keeps the
-most is all that remains in the end; with seasons there is one mix for each place of the cycle, and the retention
-is the average over it, lambda^(1/length) of the cycle's product.
+The right mix of one component keeps itself, u Q = lambda u. Of several kinds of customers the one that keeps
+the most is all that remains in the end; with seasons there is one mix for each place of the cycle, and the
+retention is the average over it, lambda^(1/length) of the cycle's product.
 Source: Darroch & Seneta (1965) J. Appl. Prob. 2, 88.
 """
 

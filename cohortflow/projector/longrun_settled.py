@@ -16,16 +16,15 @@ from cohortflow.projector.prospect import Figure, Prospect
 from cohortflow.states import ALL_LIVE
 
 
-def settled_figures(at: Prospect) -> Iterator[Figure]:
+def settled_figures(at: Prospect, joiners: Array) -> Iterator[Figure]:
     """settled_base and settled_mix; "grows_without_limit" where joiners can get to a place nobody leaves."""
     states = at.schedule.states
-    assert at.joiners is not None
-    if at.chain.undefined(joining=True)[at.joiners > 0].any():
+    if (at.chain.undefined(joining=True) & (joiners > 0)).any():
         yield Figure("settled_base", ALL_LIVE, "", math.nan, "rows_without_data")
         return
-    entering = _entering(at)
-    inside = at.chain.inside
-    reached = at.structure.reachable[entering > 0].any(axis=0)
+    entering = _entering(at, joiners)
+    inside = np.asarray(at.chain.inside)
+    reached = np.asarray(at.structure.reachable[entering > 0].any(axis=0))
     if any(reached[list(group)].any() for group, _ in at.groups):
         yield Figure("settled_base", ALL_LIVE, "", math.nan, "grows_without_limit")
         return
@@ -47,14 +46,14 @@ def settled_figures(at: Prospect) -> Iterator[Figure]:
             yield Figure("settled_mix", name, "", share, note)
 
 
-def _entering(at: Prospect) -> Array:
+def _entering(at: Prospect, joiners: Array) -> Array:
     """(S,) joiners a period, entering every place of a cycle and the last place of a held sequence."""
     out = np.zeros(len(at.chain.report))
     for number, part in enumerate(at.schedule.components):
         own = at.chain.component == number
         places = np.unique(at.chain.place[own])
         for place in places if part.tail == "cycle" else places[-1:]:
-            out[own & (at.chain.place == place)] = at.joiners @ part.join
+            out[own & (at.chain.place == place)] = joiners @ part.join
     return out
 
 

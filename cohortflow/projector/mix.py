@@ -39,7 +39,7 @@ class Walk:
 def step_counts(model: Any, start: Any, periods: int, inflow: Any = None, *, first_step: int = 0) -> Array:
     """Expected customers by state after 0, 1, ..., `periods` periods, shape (periods + 1, K).
 
-    start : counts by state; inflow : (periods, K) expected joiners of each period, or (K,) the same each period
+    start : counts by state; inflow : (periods, K) expected joiners, or (K,) the same each period
     first_step : which of the model's matrices acts first
 
     A state that can be reached from one without data is NaN.
@@ -120,10 +120,8 @@ def as_inflow(inflow: Any, periods: int, size: int) -> Array:
 
 def filled(matrix: Array) -> Array:
     """The matrix with rows of NaN ("no data") replaced by staying; works on stacks (..., m, m)."""
-    missing = np.isnan(matrix).any(axis=-1)
-    if not missing.any():
-        return matrix
-    return np.where(missing[..., None], np.eye(matrix.shape[-1]), matrix)
+    missing = np.isnan(matrix).any(axis=-1, keepdims=True)
+    return np.where(missing, np.eye(matrix.shape[-1]), matrix) if missing.any() else matrix
 
 
 class _Part:

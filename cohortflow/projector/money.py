@@ -5,8 +5,9 @@ Period p (p = 1, 2, ...) runs from the end of period p-1 to its own end and pays
     y_ij = w r_i + (1 - w) r_j + g_ij          i at its start, j at its end; r per period, g on the move
     timing  start w = 1,  middle w = 1/2,  end w = 0
 
-discounted by b^(p - 1 + lag), b = (1 + rate)^(-1 / periods a year); lag 0, 1/2 or 1 as the timing says, or 1 / 0
-when the first period is said to be discounted by a whole period or not at all. With rho_i = sum_j p_ij y_ij:
+discounted by b^(p - 1 + lag), b = (1 + rate)^(-1 / periods a year); lag 0, 1/2 or 1 as the timing says, or
+1 / 0 when the first period is said to be discounted by a whole period or not at all.
+With rho_i = sum_j p_ij y_ij:
 
     V = rho + b P V_next                       finite horizon: V_H = 0;  for ever: (I - b P) V = rho
     S = sum_j p_ij (y^2 + 2 b y V_j) + b^2 P S    second moment of one customer's total
@@ -111,17 +112,20 @@ def worth(schedule: Schedule, terms: Terms, *, horizon: int | None, first_step: 
         mean, second = _until(chain.P, y, terms.factor, horizon)
         endless = np.zeros(len(mean), dtype=bool)
     scale = terms.factor**terms.lag
-    out = []
-    for laws in (chain.start, chain.join):
+
+    def of(laws: Array) -> tuple[Array, Array]:
         lost = ((laws > 0) @ chain.clouded) | ((laws > 0) @ endless)
         v = laws @ np.where(endless, 0.0, mean)
-        s = laws @ np.where(endless, 0.0, second)
-        out += [np.where(lost, np.nan, x) for x in (scale * v, scale * np.sqrt(np.maximum(s - v**2, 0.0)))]
+        spread = np.sqrt(np.maximum(laws @ np.where(endless, 0.0, second) - v**2, 0.0))
+        return np.where(lost, np.nan, scale * v), np.where(lost, np.nan, scale * spread)
+
     names = schedule.states.names
     unclear = chain.undefined()
     stuck = [n for k, n in enumerate(names) if chain.start[k][endless].any() and not unclear[k]]
     reasons = [f"no_exit_no_discount:{n}" for n in stuck if n not in schedule.states.exits]
-    return Worth(*out, (*reasons, *(f"rows_without_data:{s}" for s in schedule.unknown)))
+    return Worth(
+        *of(chain.start), *of(chain.join), (*reasons, *(f"rows_without_data:{s}" for s in schedule.unknown))
+    )
 
 
 def value_derivative(P: Array, terms: Terms, *, horizon: int | None) -> Derivative:

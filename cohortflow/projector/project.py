@@ -108,8 +108,8 @@ def as_joiners(joiners: Any, schedule: Schedule, base: int | None, periods: int)
             raise CallError("The joiners and the model have different states; forecast them from one tally.")
         if base is not None and joiners.base is not None and joiners.base != base:
             raise CallError(
-                f"The joiners are forecast from {schedule.calendar.label(joiners.base)}, the base is counted in "
-                f"{schedule.calendar.label(base)}; both must start from one period."
+                f"The joiners are forecast from {schedule.calendar.label(joiners.base)}, the base is counted "
+                f"in {schedule.calendar.label(base)}; both must start from one period."
             )
         return joiners.cut(periods)
     return planned_numbers(schedule.states, joiners, periods=periods, calendar=schedule.calendar, base=base)
@@ -139,7 +139,7 @@ def _size(draws: Draws | int, drawn: Draws | None, shocks: Draws | None) -> int:
         return shocks.size
     if drawn is not None:
         return drawn.size
-    if isinstance(draws, Draws) or isinstance(draws, bool) or draws < 2:
+    if isinstance(draws, (Draws, bool)) or draws < 2:
         raise CallError(f"draws is {draws!r}; it takes Draws, or a whole number of draws, at least 2.")
     return int(draws)
 
@@ -155,7 +155,7 @@ def _variances(
     weights: Mapping[str, Array],
     first: int,
 ) -> dict[str, Array]:
-    """part -> (H+1, Q) variances: chance and joiners exact, rates and shocks over the draws' expected counts."""
+    """part -> (H+1, Q) variances: chance and joiners exact, rates and shocks over the draws' means."""
     exits = schedule.states.exit_mask
     exact = moments(schedule, counts, periods, joiners=joiners, first_step=first)
     over = {

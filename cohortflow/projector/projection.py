@@ -87,7 +87,7 @@ class Projection(Record):
 
     @cached_property
     def band_parts(self) -> pd.DataFrame:
-        """segment, period, periods_ahead, quantity, rates, chance, common_shocks, joiners, total (variances)."""
+        """Variances: segment, period, periods_ahead, quantity, the four parts, total."""
         steps = self.periods + 1
         rows = {
             "segment": self.segment,
@@ -100,7 +100,7 @@ class Projection(Record):
 
     @cached_property
     def rollforward(self) -> pd.DataFrame:
-        """The table `rollforward`, forecast rows: closing = opening + joined + returned - lost + moved in - out."""
+        """The table `rollforward`, forecast rows; every state closes (see rollforward.py)."""
         return forecast_lines(
             self.schedule.states, self.walk, self.joiners, self.labels[1:], segment=self.segment
         )
@@ -109,8 +109,8 @@ class Projection(Record):
         live = self.expected("all_live")
         low, high = quantile_band(self.paths("all_live")[:, -1], self.level)
         return (
-            f"projection of {self.periods} periods ({self.schedule.calendar.kind}): all_live {live[0]:,.0f} to "
-            f"{live[-1]:,.0f}, {self.level:.0%} band {low:,.0f} to {high:,.0f}"
+            f"projection of {self.periods} periods ({self.schedule.calendar.kind}): all_live {live[0]:,.0f} "
+            f"to {live[-1]:,.0f}, {self.level:.0%} band {low:,.0f} to {high:,.0f}"
         )
 
     def about(self) -> Mapping[str, Any]:

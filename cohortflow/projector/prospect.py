@@ -10,6 +10,8 @@ from functools import cached_property
 import numpy as np
 
 from cohortflow.chain import Schedule
+from cohortflow.markov.absorption import absorb
+from cohortflow.markov.stationary import time_average_matrix
 from cohortflow.markov.structure import Structure, analyse
 from cohortflow.projector.accept import Array
 from cohortflow.projector.unroll import Unrolled, unroll
@@ -60,6 +62,21 @@ class Prospect:
     def cycle(self) -> int:
         """Length of the season's cycle, 1 when there is none."""
         return math.lcm(*(len(c.matrices) for c in self.schedule.components if c.tail == "cycle"))
+
+    @cached_property
+    def time_average(self) -> Array:
+        """(S, S) share of time in column, in the long run, from row."""
+        return time_average_matrix(self.chain.P)
+
+    @cached_property
+    def exit_split(self) -> Array:
+        """(K, K) probability of ending in each declared exit, from each declared state."""
+        found = absorb(self.chain.P, self.chain.exits)
+        whole = np.zeros((len(self.chain.P), len(self.schedule.states)))
+        fold = np.eye(len(self.schedule.states))[self.chain.report]
+        whole[list(found.inside)] = found.exit_probability @ fold[list(found.exits)]
+        whole[list(found.exits)] = fold[list(found.exits)]
+        return self.chain.start @ whole
 
     @cached_property
     def groups(self) -> list[tuple[tuple[int, ...], int]]:

@@ -1,15 +1,17 @@
 """Churn, retention and return, period by period, with formula and denominator: as counted and as forecast.
 
-    churn      left in the period / at risk: there (live or away) at the end of the period before, and seen again
+    churn      left in the period / at risk: there (live or away) at the end of the one before, and seen again
     retention  1 - churn
     return     came back in the period / had left by the end of the period before and not come back
-    churn_year, retention_year   the period's rate kept up for a year, compounded: 1 - (1 - churn)^(periods a year)
+    churn_year, retention_year   the rate kept up for a year, compounded: 1 - (1 - churn)^(periods a year)
 
 Renewal (renewed / due) needs to know who is due; counts do not, so it is not here.
 Interval: Wilson (1927) for what was counted, the projection's draws for what is forecast.
 """
 
 from __future__ import annotations
+
+from collections.abc import Sequence
 
 import numpy as np
 import pandas as pd
@@ -27,7 +29,7 @@ COLUMNS = [
 
 
 def rates_actual(tally: Tally, *, level: float = 0.90, segment: str = "all") -> pd.DataFrame:
-    """The table `rates`, kind actual: one row a period, measure and exit (exit empty: all of them together)."""
+    """The table `rates`, kind actual: one row a period, measure and exit (exit empty: all together)."""
     states, first, last = tally.states, tally.meta.first, tally.meta.last
     labels = tally.calendar.labels(np.arange(first + 1, last + 1))
     lines = counted_lines(tally)
@@ -93,7 +95,7 @@ def _rows(
     exit_name: str,
     numerator: Array,
     denominator: Array,
-    labels: list[str],
+    labels: Sequence[str | None],
     level: float,
     segment: str,
 ) -> pd.DataFrame:
@@ -106,7 +108,7 @@ def _rows(
 
 def _frame(
     measure: str, exit_name: str, numerator: Array, denominator: Array, value: Array, low: Array, high: Array,
-    labels: list[str],
+    labels: Sequence[str | None],
 ) -> pd.DataFrame:  # fmt: skip
     return pd.DataFrame(
         {

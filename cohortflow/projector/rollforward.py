@@ -22,7 +22,7 @@ COLUMNS = ["segment", "period", "kind", "state", "line", "exit", "customers"]
 
 @dataclass(frozen=True, eq=False)
 class Lines:
-    """The causes of T periods: opening, closing (T, K); flows (T, K, K); extra lines in order, each (T, K)."""
+    """The causes of T periods: opening, closing (T, K); flows (T, K, K); further lines, each (T, K)."""
 
     opening: Array
     closing: Array
@@ -41,17 +41,21 @@ def forecast_lines(
 
 
 def rollforward_actual(tally: Tally, *, segment: str = "all") -> pd.DataFrame:
-    """The table `rollforward` of what was counted, in whole customers, from the second period of the window on.
+    """The table `rollforward` of what was counted, whole customers, from the second period of the window on.
 
-    unobserved_in : rows after a gap, and histories that began before the log; unobserved_out : customers with a
-    row in the period before, none in this one, and no exit. Memo (not part of the sum): joined_and_left, those
-    whose stay began and ended within the period, under the exit they took.
+    unobserved_in : rows after a gap, and histories that began before the log
+    unobserved_out : customers with a row in the period before, none in this one, and no exit
+    Memo, not part of the sum: joined_and_left, whose stay began and ended within the period, by exit.
 
     >>> import cohortflow as cf
     >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
-    >>> history = cf.read_history([("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "left")], states)
-    >>> lines = rollforward_actual(cf.count(history))
-    >>> lines[(lines.period == "3") & (lines.customers > 0)][["state", "line", "exit", "customers"]]
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> lines = rollforward_actual(cf.count(cf.read_history(frame, states)))
+    >>> third = lines.query("state == 'steady' and period == '3'")
+    >>> list(zip(third["line"], third["exit"], third["customers"]))  # doctest: +NORMALIZE_WHITESPACE
+    [('opening', '', 1), ('joined', '', 0), ('returned', '', 0), ('lost', 'left', 1), ('moved_in', '', 0),
+     ('moved_out', '', 0), ('unobserved_in', '', 0), ('unobserved_out', '', 0), ('closing', '', 0)]
     """
     states, first, last = tally.states, tally.meta.first, tally.meta.last
     periods = np.arange(first + 1, last + 1)

@@ -1,8 +1,8 @@
-"""A Schedule as one ordinary chain: every (component, place in the sequence, expanded state) is a state of it.
+"""A Schedule as one ordinary chain: every (component, place in sequence, expanded state) is a state of it.
 
 A held sequence walks through its matrices and stays with the last; a cycle comes back to the first. Exits are
-absorbing wherever they are entered. All mathematics of `markov/` then applies to every model, seasonal, tenured
-or mixed, and what it says is folded back to the declared states.
+absorbing wherever they are entered. All mathematics of `markov/` then applies to every model, seasonal,
+tenured or mixed, and what it says is folded back to the declared states.
 """
 
 from __future__ import annotations
@@ -95,7 +95,7 @@ def drawn_schedule(draws: Draws, number: int) -> Schedule:
 
 
 def _positions(schedule: Schedule, component: int, first_step: int) -> list[int]:
-    """Which matrices of a component act, in order, from `first_step` on; the last one leads on (hold) or back."""
+    """Which matrices of a component act from `first_step` on; the last leads to itself (hold) or back."""
     part = schedule.components[component]
     length = len(part.matrices)
     if part.tail == "cycle":

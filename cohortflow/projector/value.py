@@ -15,7 +15,7 @@ import pandas as pd
 from cohortflow.chain import Draws, Schedule
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
-from cohortflow.projector.delta import Spread, interval, quantiles
+from cohortflow.projector.delta import Doubt, Spread, doubt_of, interval, quantiles
 from cohortflow.projector.money import Terms, Worth, money_terms, value_derivative, worth
 from cohortflow.projector.unroll import drawn_schedule, unroll
 from cohortflow.record import Record, frozen_mapping
@@ -28,8 +28,8 @@ DRAWS = 400
 class Value(Record):
     """Money per customer and in sum.
 
-    customer, spread : (R,) value of a customer now in each state that is not an exit, and its standard deviation
-        from customer to customer; NaN with a reason where undefined
+    customer, spread : (R,) value of a customer now in each state that is not an exit, and its standard
+        deviation from customer to customer; NaN with a reason where undefined
     sums : "joining_cohort" and "base" to (value, sd over customers)
     limits : (measure, state) -> (low, high);  horizon : periods, None = for ever
     reasons : "no_exit_no_discount:x", "rows_without_data:x"
@@ -115,12 +115,12 @@ def value(
     per_period : contribution a customer a period by state (states not named: 0)
     on_move : (from, to, amount) rows, or objects with from_, to, amount
     discount_rate : a year;  timing : "start", "middle" or "end" of the period
-    first_period_discounted : True: its money is discounted by one whole period, False: not at all; default by timing
+    first_period_discounted : True: by one whole period, False: not at all; default: as the timing says
     horizon : periods, None = for ever
     start, joiners : customers by state; give the sums over the base and over one joining cohort
 
-    Intervals: log scale where all amounts are 0 or more, else plain; delta method for one chain, else quantiles
-    over draws. NaN where the chain never lets go and nothing is discounted ("no_exit_no_discount").
+    Intervals: log scale where all amounts are 0 or more, else plain; delta method for one chain, else
+    quantiles over draws. NaN where the chain never lets go and nothing is discounted ("no_exit_no_discount").
 
     >>> from cohortflow import Chain, States
     >>> states = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
@@ -130,7 +130,6 @@ def value(
     """
     schedule = accept.as_schedule(model)
     accept.refuse_unknown(schedule, "Value")
-    accept.as_level(level)
     base = accept.base_period(model, start, base_period, schedule.calendar)
     first = accept.first_step(schedule, base)
     terms = money_terms(
@@ -146,13 +145,14 @@ def value(
     people = _people(model, start, joiners, schedule.states)
     found = worth(schedule, terms, horizon=steps, first_step=first)
     figures = _figures(found, people, schedule.states)
-    limits, method = _limits(model, schedule, terms, steps, people, covariance, draws, rng, level, first)
+    doubt = doubt_of(model, covariance, draws, rng, level)
+    limits = _limits(schedule, terms, steps, people, doubt, first)
     inside = ~schedule.states.exit_mask
     return Value(
         schedule, terms, steps, found.now[inside], found.sd_now[inside],
         {m: (figures[m, ""], figures[f"{m}_sd", ""]) for m in people},
         frozen_mapping({k: limits[k] for k in figures if k in limits and np.isfinite(figures[k])}),
-        level, method, currency, found.reasons, segment,
+        level, doubt.method, currency, found.reasons, segment,
     )  # fmt: skip
 
 
@@ -180,32 +180,24 @@ def _figures(found: Worth, people: Mapping[str, Array], states: States) -> dict[
 
 
 def _limits(
-    model: Any,
     schedule: Schedule,
     terms: Terms,
     horizon: int | None,
     people: Mapping[str, Array],
-    covariance: Any,
-    draws: Draws | int,
-    rng: int | np.random.Generator,
-    level: float,
+    doubt: Doubt,
     first: int,
-) -> tuple[dict[tuple[str, str], tuple[float, float]], str]:
-    states = schedule.states
-    cov = accept.covariance_of(model, covariance)
-    if cov is not None:
-        spread = Spread.of(cov, len(states), level)
-        return _by_delta(schedule, terms, horizon, people, spread, first), "delta"
-    drawn = accept.draws_of(model, draws, accept.as_rng(rng), covariance)
-    if drawn is None:
-        return {}, "none"
+) -> dict[tuple[str, str], tuple[float, float]]:
+    if doubt.spread is not None:
+        return _by_delta(schedule, terms, horizon, people, doubt.spread, first)
+    if doubt.draws is None:
+        return {}
     samples = []
-    for d in range(drawn.size):
-        found = worth(drawn_schedule(drawn, d), terms, horizon=horizon, first_step=first)
-        samples.append(_figures(found, people, states))
+    for d in range(doubt.draws.size):
+        found = worth(drawn_schedule(doubt.draws, d), terms, horizon=horizon, first_step=first)
+        samples.append(_figures(found, people, schedule.states))
     keys = list(samples[0])
-    low, high = quantiles(np.array([[s[k] for k in keys] for s in samples]), level)
-    return {k: (float(a), float(b)) for k, a, b in zip(keys, low, high, strict=True)}, "draws"
+    low, high = quantiles(np.array([[s[k] for k in keys] for s in samples]), doubt.level)
+    return {k: (float(a), float(b)) for k, a, b in zip(keys, low, high, strict=True)}
 
 
 def _by_delta(
