@@ -179,10 +179,39 @@ def accounting() -> pd.DataFrame:
     rows = [
         ("file", "read", "", "events-1.csv.gz", 41250, 9102),
         ("file", "used", "", "events-1.csv.gz", 40800, 9033),
-        ("file", "rejected", "bad_date", "events-1.csv.gz", 120, 118),
+        ("file", "rejected", "time_unreadable", "events-1.csv.gz", 120, 118),
         ("file", "rejected", "id_missing", "events-1.csv.gz", 60, 0),
         ("file", "duplicate", "", "events-1.csv.gz", 150, 149),
         ("file", "set_aside", "after_as_of", "events-1.csv.gz", 70, 66),
         ("file", "set_aside", "after_exit", "events-1.csv.gz", 50, 41),
     ]
     return pd.DataFrame(rows, columns=["stage", "outcome", "reason", "file", "rows", "customers"])
+
+
+def approach(states: States, ahead: int = 40) -> pd.DataFrame:
+    rows = projection(states, ahead=ahead)
+    return rows[rows["state"].isin(states.remaining)].reset_index(drop=True)
+
+
+def tables(states: States) -> dict[str, pd.DataFrame]:
+    """Everything that a whole run has."""
+    return {
+        "accounting": accounting(),
+        "transitions": transitions(states),
+        "projection": projection(states),
+        "rollforward": rollforward(states),
+        "long_run": long_run(states),
+        "exits": exits(states),
+        "retention": retention(),
+    }
+
+
+def facts(states: States, **changes):
+    from cohortflow.report.content import Facts
+
+    settings = {
+        "title": "Hollin Weir veg box", "states": states, "calendar": CAL, "level": 0.9, "horizon": 8, "first": "2024-11",
+        "last": "2026-10", "as_of": "2026-10-31", "seed": 7, "customers": 9033, "moves": 9133, "verdict": "exits_only",
+        "parts": ("rates", "chance"), "version": "0.1.0",
+    }  # fmt: skip
+    return Facts(**{**settings, **changes})

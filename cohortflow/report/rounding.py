@@ -60,7 +60,7 @@ def count(number: float) -> str:
         return "no limit"
     if abs(number) <= EXACT:
         return "0"
-    if abs(number) < 0.5:
+    if abs(number) <= 0.5:
         return "under 1"
     return f"{round(float(number)):,}"
 

@@ -163,12 +163,12 @@ def rollforward_table(
 
 def _roll_column(rows: pd.DataFrame) -> dict[tuple[str, str], int]:
     """(line, exit) -> whole customers of one period, signed and footing; lines of zeros are left out."""
-    sums = rows.groupby(["line", "exit"], sort=False)["customers"].sum().astype(float)
+    sums = rows.groupby(["line", "exit"], sort=False)["customers"].sum(min_count=1).astype(float)
     opening, closing = float(sums.get(("opening", ""), 0.0)), float(sums.get(("closing", ""), 0.0))
     parts = {
         (str(line), str(leaving)): float(value) * (-1 if line in MINUS else 1)
         for (line, leaving), value in sums.items()
-        if line in ROLL_LINES and abs(value) > 1e-9
+        if line in ROLL_LINES and not abs(value) <= 1e-9
     }
     if np.isnan([opening, closing, *parts.values()]).any():
         return {("opening", ""): opening, **parts, ("closing", ""): closing}  # type: ignore[dict-item]

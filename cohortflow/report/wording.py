@@ -5,6 +5,7 @@ Everything is said for a reader who never heard of a Markov chain, and so that o
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from types import MappingProxyType
 from typing import Any
@@ -198,6 +199,15 @@ NOTES: Mapping[str, str] = MappingProxyType(
         "log_start_assumed": "The study does not say when the log became complete; its first period was assumed.",
         "ties_decided_by_order": "{rows} times several events of a customer share one instant; the order of the study's "
                                  "rules decided.",
+        "extract_ends_early": "The extract's last rows are of {last_rows}, before the last day that counts ({as_of}): what "
+                              "is missing looks like customers who left.",
+        "two_states_in_a_period": "{rows} rows were replaced because their customer has another row for the same period; "
+                                  "the last one counts.",
+        "empty_rows": "For {state} some of the model's finer rates rest on no departure at all; the pooled rates stand in "
+                      "for them.",
+        "place_not_seen": "No move was counted at place {place} of the season's cycle; the pooled rates stand in for it.",
+        "seasons_thin": "Seasons rest on few moves; their rates are drawn towards the pooled ones.",
+        "no_exit_no_discount": "The value of a customer in {state} has no bound: some never leave and nothing is discounted.",
         "joined_without_join_event": "{customers} customers appear without an event that marks joining; their history "
                                      "before is not known.",
     }
@@ -226,14 +236,15 @@ def note(finding: Any) -> str:
     kind, _, state = code.partition(":")
     if " " in kind:
         return code
-    detail = getattr(finding, "detail", {})
-    state, segment = str(detail.get("state", state)), str(detail.get("segment", ""))
+    detail = {"state": state, "place": state, **getattr(finding, "detail", {})}
+    state, segment = str(detail["state"]), str(detail.get("segment", ""))
     words = NOTES.get(kind)
     if words is None:
         words = upper_first(f"{kind.replace('_', ' ')}{f': {label(state)}' if state else ''}{_size(finding)}.")
     for key in ("rows", "customers"):
         words = words.replace(f"{{{key}}}", count(getattr(finding, key, 0)))
-    words = words.replace("{state}", label(state))
+    for key in re.findall(r"\{([a-z_]+)\}", words):
+        words = words.replace(f"{{{key}}}", label(detail.get(key, "")), 1)
     return f"{label(segment)}: {words}" if segment else words
 
 

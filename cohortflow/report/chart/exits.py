@@ -27,7 +27,7 @@ def exit_time_chart(exits: Any, *, kind: str = "month", segment: str = ALL, widt
     exits : ExitTimes or the contract's frame. A state from which some never leave has no mean: said in words.
     """
     rows = frame_of(exits, COLUMNS, segment=segment)
-    table = _by_state(rows, "mean_time").join(_by_state(rows, "median_time"), rsuffix="_median")
+    table = _by_state(rows, "mean_time").join(_by_state(rows, "median_time").add_suffix("_median"))
     names = list(table.index)
     title = _time_title(table, kind)
     subtitle = (

@@ -78,11 +78,12 @@ def steps_of(rollforward: Any, *, quantity: str = ALL_LIVE, segment: str = ALL) 
     out = []
     for kind, place in (("actual", -1), ("forecast", 0)):
         periods = pd.unique(own.loc[own["kind"] == kind, "period"])
-        if len(periods):
-            out.append(_step(own[(own["kind"] == kind) & (own["period"] == periods[place])]))
+        chosen = own[(own["kind"] == kind) & (own["period"] == periods[place])] if len(periods) else own.iloc[:0]
+        if len(chosen) and chosen["customers"].notna().all():
+            out.append(_step(chosen))
     if not out:
         known = listed(pd.unique(frame["state"]))
-        raise CallError(f'The roll-forward has no period of "{quantity}"; it has {known}.')
+        raise CallError(f'The roll-forward has no known period of "{quantity}"; it has {known}.')
     return out
 
 
