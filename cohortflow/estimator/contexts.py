@@ -101,7 +101,7 @@ def build_contexts(
         possible[owner],
         window.weight(table["period"].to_numpy()),
     )
-    shrink = shrink_rows(counts, owner, customer_noise(rates))
+    shrink = shrink_rows(counts, owner, customer_noise(rates), bar_missed=True)
     now = present(tally)
     start = _law(now, model.code(now), table.assign(context=code), model, states)
     reached, index = _reachable(model, states, start, possible)

@@ -64,10 +64,13 @@ class ShakenDraws(Draws):
         return out / out.sum(axis=2, keepdims=True)
 
 
-def future_rates(fitted: Fit | Tally, periods: int, n: int, *, rng: int | np.random.Generator) -> ShakenDraws:
+def future_rates(
+    fitted: Fit | Tally, periods: int, n: int, *, rng: int | np.random.Generator, shocks: Shocks | None = None
+) -> ShakenDraws:
     """n draws of the matrices of the next `periods` steps: estimation error and common shocks together.
 
     fitted : a Fit of any model, or a Tally (then of its plain model)
+    shocks : their law, when it was estimated before: `shocks_of` a fit of the same tally and seasons
     Step 0 is the one after the last period of the tally. NotIdentified when the history cannot tell
     (see estimate_shocks); CallError when `periods` or `n` is below 1.
     """
@@ -75,7 +78,7 @@ def future_rates(fitted: Fit | Tally, periods: int, n: int, *, rng: int | np.ran
         raise CallError(f"The number of periods ahead is at least 1; got {periods}.")
     model = fit(fitted) if isinstance(fitted, Tally) else fitted
     random = generator(rng)
-    shocks = shocks_of(model)
+    shocks = shocks_of(model) if shocks is None else shocks
     base = model.draws(n, rng=random)
     averages, which = averaging(model, shocks, periods)
     lag = model.tally.meta.last - (shocks.first + shocks.times - 1)

@@ -26,6 +26,7 @@ from cohortflow.estimator.rows import RowCounts
 Array = NDArray[np.float64]
 
 LEAST_SHARE = 0.05
+SURELY_EXPECTED = 10.0  # chance of none: exp(-10)
 
 
 @dataclass(frozen=True, eq=False)
@@ -33,11 +34,13 @@ class Shrink:
     """Which rows belong together and how much of itself each keeps.
 
     state : (R,) which pool a row belongs to;  n : (R,) its departures;  w : (R,) share it keeps, 0 .. 1
+    barred : (R, K) moves that the row cannot make though its pool can, or None
     """
 
     state: NDArray[np.int64]
     n: Array
     w: Array
+    barred: NDArray[np.bool_] | None = None
 
     def apply(self, rates: Array, *, pools_of: Array | None = None) -> Array:
         """(..., R, K) shrunk rows of (..., R, K) rates; pools without any departure stay NaN.
@@ -51,7 +54,11 @@ class Shrink:
         pooled = self.pooled(rates if pools_of is None else pools_of)[..., self.state, :]
         own = np.where(np.isnan(rates), 0.0, rates)
         w = np.where(np.isnan(rates).any(axis=-1), 0.0, self.w)[..., None]
-        return w * own + (1 - w) * pooled
+        mixed = w * own + (1 - w) * pooled
+        if self.barred is None:
+            return mixed
+        mixed = np.where(self.barred & ~np.isnan(mixed), 0.0, mixed)
+        return mixed / mixed.sum(axis=-1, keepdims=True)
 
     def pooled(self, rates: Array) -> Array:
         """(..., S, K) means of the rows of each pool, weighted by departures."""
@@ -66,10 +73,13 @@ class Shrink:
         return 1.0 / np.maximum(self.w, LEAST_SHARE)
 
 
-def shrink_rows(counts: RowCounts, state: NDArray[np.int64], noise: Array) -> Shrink:
+def shrink_rows(
+    counts: RowCounts, state: NDArray[np.int64], noise: Array, *, bar_missed: bool = False
+) -> Shrink:
     """Shrink with the amount estimated for each pool.
 
     state : (R,) pool of each row, 0 .. S-1;  noise : (S,) variance relative to the multinomial one
+    bar_missed : a move not seen from a row from which the pool's share let expect 10 or more stays out there
     """
     n = counts.effective
     w = np.zeros(len(state))
@@ -77,7 +87,11 @@ def shrink_rows(counts: RowCounts, state: NDArray[np.int64], noise: Array) -> Sh
         rows = np.flatnonzero((state == pool) & (n > 0))
         if len(rows):
             w[rows] = kept(counts.P[rows], n[rows], float(noise[pool]))
-    return Shrink(state, n, w)
+    shrink = Shrink(state, n, w)
+    if not bar_missed:
+        return shrink
+    expected = np.nan_to_num(shrink.pooled(counts.P))[state] * n[:, None]
+    return Shrink(state, n, w, (counts.N == 0) & (expected >= SURELY_EXPECTED * noise[state][:, None]))
 
 
 def kept(p: Array, n: Array, noise: float) -> Array:

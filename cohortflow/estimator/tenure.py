@@ -1,7 +1,8 @@
 """Rates by periods since joining, in bands: newer customers leave faster.
 
 Expanded states are (periods since joining, state) up to the last band, which is for ever; the rates of a band
-are shared by its periods. Customers of unknown history joined before the log and count in the last band.
+are shared by its periods. Customers of unknown history joined before the log began, nobody knows when: they
+have rates of their own.
 """
 
 from __future__ import annotations
@@ -33,17 +34,17 @@ def tenure(tally: Tally, window: Window, rates: RowCounts, *, bands: Sequence[in
     table = moves_with_context(tally, window)
     cuts = _chosen(table, rates) if bands is None else _given(bands)
     top, size = (cuts[-1] if cuts else 0), len(tally.states)
-    band = np.searchsorted(cuts, np.arange(top + 1), side="right")
+    band = np.append(np.searchsorted(cuts, np.arange(top + 1), side="right"), len(cuts) + 1)
 
     def code(rows: pd.DataFrame) -> np.ndarray:
         at = rows["tenure"].to_numpy()
-        return np.where(at < 0, top, np.minimum(at, top))
+        return np.where(at < 0, top + 1, np.minimum(at, top))
 
-    older = np.minimum(np.arange(top + 1) + 1, top)
+    older = np.append(np.minimum(np.arange(top + 1) + 1, top), top + 1)
     model = ContextModel(
-        contexts=top + 1,
+        contexts=top + 2,
         code=code,
-        follow=np.broadcast_to(older[:, None, None], (top + 1, size, size)).copy(),
+        follow=np.broadcast_to(older[:, None, None], (top + 2, size, size)).copy(),
         joined=np.zeros(size, dtype=np.int64),
         rows=band[:, None] * size + np.arange(size)[None, :],
     )
@@ -63,16 +64,18 @@ def _given(bands: Sequence[int]) -> list[int]:
 
 
 def _chosen(table: pd.DataFrame, rates: RowCounts) -> list[int]:
-    """Cuts that tell bands apart; candidates without enough moves on both sides are not looked at."""
-    size = rates.shape[0]
-    at = table["tenure"].to_numpy()
-    known = int(table["n"].to_numpy()[at >= 0].sum())
+    """Cuts that tell bands apart; candidates without enough moves on both sides are not looked at.
+
+    Only customers whose tenure is known are asked.
+    """
+    table = table[table["tenure"] >= 0]
+    size, at, known = rates.shape[0], table["tenure"].to_numpy(), int(table["n"].sum())
     cuts = [
         c for c in CANDIDATES if LEAST_MOVES <= table["n"].to_numpy()[at >= c].sum() <= known - LEAST_MOVES
     ]
     if not cuts:
         return []
-    group = np.searchsorted(cuts, np.where(at < 0, cuts[-1], at), side="right")
+    group = np.searchsorted(cuts, at, side="right")
     cell = (group * size + table["state"].to_numpy()) * size + table["next_state"].to_numpy()
     cube = np.bincount(cell, table["n"], minlength=(len(cuts) + 1) * size**2).reshape(-1, size, size)
     return [cuts[first - 1] for first in joined(cube.astype(float), customer_noise(rates)) if first > 0]

@@ -34,16 +34,18 @@ def time_in_state(tally: Tally, window: Window, rates: RowCounts, *, ladder: int
     table, size = moves_with_context(tally, window), len(tally.states)
     tops = np.full(size, ladder - 1) if ladder else _chosen(table, rates)
     tops = np.where(tally.states.exit_mask, 0, tops)
-    rungs = int(tops.max()) + 1
-    spell, here = np.arange(rungs)[:, None, None], np.eye(size, dtype=bool)[None]
-    follow = np.where(here, np.minimum(spell + 1, tops[None, :, None]), 0)
-    rows = np.minimum(np.arange(rungs)[:, None], tops) * size + np.arange(size)
+    rungs = int(tops.max()) + 1  # and one more context: time in the state not known
+    up = np.minimum(np.arange(rungs)[:, None] + 1, tops)
+    up = np.vstack([up, np.full(size, rungs)])[:, :, None]
+    follow = np.where(np.eye(size, dtype=bool)[None], up, 0)
+    rows = np.vstack([np.minimum(np.arange(rungs)[:, None], tops), np.full(size, rungs)]) * size
+    rows = rows + np.arange(size)
 
     def code(rows_in: pd.DataFrame) -> np.ndarray:
         at, top = rows_in["spell"].to_numpy(), tops[rows_in["state"].to_numpy(int)]
-        return np.where(at < 0, top, np.minimum(at, top))
+        return np.where(at < 0, rungs, np.minimum(at, top))
 
-    model = ContextModel(rungs, code, follow, np.zeros(size, dtype=np.int64), rows)
+    model = ContextModel(rungs + 1, code, follow, np.zeros(size, dtype=np.int64), rows)
     lengths = {
         n: int(t) + 1 for n, t in zip(tally.states.names, tops, strict=True) if n in tally.states.remaining
     }
