@@ -353,7 +353,15 @@ def test_a_reader_that_stops_early_is_no_error(study):
     assert (done.returncode, done.stderr) == (0, "")
 
 
-def test_interrupted_it_leaves_nothing_half_written(study, tmp_path):
+def test_signs_that_the_terminal_lacks_are_no_fault(study):
+    study.write_text(STUDY.replace('name = "b"', 'name = "ł"'), encoding="utf-8")
+    study.with_name("panel.csv").write_text(PANEL.replace(",b\n", ",ł\n"), encoding="utf-8")
+    done = real("fit", str(study), "--format", "csv", env={"PYTHONIOENCODING": "latin-1"})
+    assert done.returncode == 0 and "\\u0142" in done.stdout
+
+
+@pytest.mark.parametrize("how", [signal.SIGINT, signal.SIGTERM])
+def test_interrupted_it_leaves_nothing_half_written(study, tmp_path, how):
     command = [
         sys.executable,
         "-m",
@@ -366,7 +374,7 @@ def test_interrupted_it_leaves_nothing_half_written(study, tmp_path):
     child = subprocess.Popen(command, cwd=ROOT, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
     while not (tmp_path / "out" / ".run.part").exists():
         time.sleep(0.01)
-    os.kill(child.pid, signal.SIGINT)
+    os.kill(child.pid, how)
     out, err = child.communicate(timeout=60)
     assert (child.returncode, out) == (130, "")
     assert err.strip() == "cohortflow: stopped; nothing half-written is left."

@@ -256,6 +256,8 @@ def test_planned_joiners_are_those_of_the_file_and_of_the_segment(tmp_path):
     tally = cf.count(cf.read(study))
     assert joiners_study(study, tally).expected()[:, 0].tolist() == [15.0] * 3
     assert joiners_study(study, tally, "south").expected()[:, 0].tolist() == [5.0] * 3
+    with pytest.raises(CallError, match='plan.csv has no planned joiners for the segment "east"; give rows'):
+        joiners_study(study, tally, "east")
 
 
 def test_run_is_a_record(made):

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import io
 import os
 import signal
 import sys
@@ -26,7 +28,7 @@ class UnknownCommand(CohortflowError):
 
 def guarded(group: click.Group, arguments: Sequence[str] | None) -> int:
     """Run the group; the exit code of the process. Every way to end is told in one line on stderr."""
-    signal.signal(signal.SIGTERM, _terminated)
+    _prepare()
     try:
         code = group.main(args=arguments, prog_name="cohortflow", standalone_mode=False)
         sys.stdout.flush()
@@ -47,6 +49,15 @@ def guarded(group: click.Group, arguments: Sequence[str] | None) -> int:
         return _told("cohortflow: input: not enough memory; free some, or read fewer files at once.", REFUSED)
     except Exception as error:
         return _told(_fault(error), FAULT)
+
+
+def _prepare() -> None:
+    """A polite kill ends like Ctrl-C; a terminal that lacks a sign gets its code instead of a fault."""
+    with contextlib.suppress(ValueError):  # not the main thread: somebody else minds the signals
+        signal.signal(signal.SIGTERM, _terminated)
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
 
 
 def _told(text: str, code: int) -> int:

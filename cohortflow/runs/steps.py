@@ -158,4 +158,9 @@ def joiners_study(study: Study, tally: Tally, segment: str = ALL) -> Joiners:
         for row in study.joiners.rows
         if segment in (ALL, row.segment)
     ]
+    if method == "planned" and not plan:
+        of = "" if segment == ALL else f' for the segment "{segment}"'
+        raise CallError(
+            f"{study.joiners.file} has no planned joiners{of}; give rows for it, or another [joiners] method."
+        )
     return joiner_forecast(tally, study.horizon, method=method, plan=plan if method == "planned" else None)
