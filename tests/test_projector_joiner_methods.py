@@ -57,12 +57,33 @@ def test_last_year_repeats_and_widens():
     growing = np.array([100.0, 200, 110, 220, 121, 242])
     mean, extra = last_year(growing, 4, 2)
     assert mean.tolist() == [121, 242, 121, 242]
-    # every repetition was 10 % short: one cycle ahead log 1.1, two cycles ahead twice that, fully shared
-    np.testing.assert_allclose(
-        np.sqrt(np.diag(extra)) / mean, np.log(1.1) * np.array([1, 1, 2, 2]), rtol=1e-6
-    )
+    # every repetition was 10 % short, 693 for 630: shared by all periods is log(1.1)^2 less the Poisson noise of
+    # that growth, (693 + 1.1^2 x 630) / 693^2, once for one cycle ahead, doubled (as a factor) for two
+    noise = (693 + 1.1**2 * 630) / 693**2
+    ahead = mean * [1, 1, 2, 2]
+    shared = np.outer(ahead, ahead) * (np.log(1.1) ** 2 - noise)
+    np.testing.assert_allclose(extra, shared + np.diag(mean), rtol=1e-9)
+    # nobody in the first cycle says nothing against the method that could be put in numbers but growth from one
+    assert np.isfinite(last_year(np.array([0.0, 0, 0, 3, 2, 4]), 3, 3)[1]).all()
     with pytest.raises(NotIdentified, match='"last_year" needs one cycle of 12 periods and 3 more'):
         last_year(growing, 4, 12)
+
+
+def test_last_year_sees_how_much_months_differ_beyond_chance():
+    # 4,000 histories of two cycles of 4: Poisson around rates with a log-normal SD of .3; the next
+    # cycle's errors must be as large as stated, singly and summed
+    rng = np.random.default_rng(6)
+    numbers = rng.poisson(400 * np.exp(0.3 * rng.standard_normal((4000, 12)) - 0.045)).astype(float)
+    one, whole = [], []
+    for row in numbers:
+        mean, extra = last_year(row[:8], 4, 4)
+        error, stated = row[8:] - mean, extra + np.diag(mean)
+        one.append((error[0] ** 2, stated[0, 0]))
+        whole.append((error.sum() ** 2, stated.sum()))
+    # the sum is stated too wide rather than too narrow: growth that is noise is not always known as such
+    for pairs, most in ((one, 1.3), (whole, 1.9)):
+        seen, said = np.mean(pairs, axis=0)
+        assert 0.85 < said / seen < most
 
 
 def test_smoothing_errors_agree_with_statsmodels():

@@ -4,9 +4,9 @@ Every method gives the expected number of each period, and the covariance of its
 
     constant   mean y of the last n periods; Cov = e 1{h=k} + max(s^2, y) / n,  e = (s^2 - y)+ by period,
                s^2 widened by (n-1)/(n-3), the variance of Student's law with n-1 degrees of freedom
-    last_year  y of the same place a cycle ago; errors as past ones were, on the log scale: with mean m and
-               variance v of log y_t - log y_{t-c}, and g cycles ahead,
-               Cov = y_h y_k (g_h g_k m^2 + 1{h=k} g_h v)
+    last_year  y of the same place a cycle ago; errors as past ones were: with m^2 the square of the growth
+               log (sum y_t / sum y_{t-c}) less its noise, v the relative variance around that growth beyond
+               Poisson's, and g cycles ahead,  Cov = y_h y_k (g_h g_k m^2 + 1{h=k} g_h v) + 1{h=k} y_h
     smoothing  additive damped trend (and season, from two cycles on) on log y, fitted by maximum likelihood;
                Cov of log y_{T+h}: sigma^2 Psi Psi', Psi the weights of past errors
     planned    the plan is the expected number, joining at random (Poisson)
@@ -117,9 +117,10 @@ def constant(numbers: Array, periods: int, window: int) -> tuple[Array, Array]:
 def last_year(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:
     """(H,) the numbers a cycle before, and the covariance that past repetitions were wrong by.
 
-    >>> mean, extra = last_year(np.array([100.0, 200, 110, 220, 121, 242]), 2, 2)  # grew by 10 % each time
+    >>> grows = np.array([1e6, 2e6, 1.1e6, 2.2e6, 1.21e6, 2.42e6])  # by 10 % each time
+    >>> mean, extra = last_year(grows, 2, 2)
     >>> mean, (np.sqrt(extra.diagonal()) / mean).round(3)  # log 1.1
-    (array([121., 242.]), array([0.095, 0.095]))
+    (array([1210000., 2420000.]), array([0.095, 0.095]))
     """
     if len(numbers) < cycle + LEAST_ERRORS:
         raise NotIdentified(
@@ -127,14 +128,16 @@ def last_year(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:
             f'wrong it is; the history has {len(numbers)}. Use "constant", or a plan.'
         )
     ahead = np.arange(periods)
-    mean = numbers[-cycle:][ahead % cycle]
-    logs = np.log(np.maximum(numbers, 0.5))
-    errors = logs[cycle:] - logs[:-cycle]
-    turns = 1.0 + ahead // cycle
-    own = np.diag(turns) * errors.var(ddof=1)
-    shared = np.outer(turns, turns) * errors.mean() ** 2
-    extra = np.outer(mean, mean) * (shared + own)
-    return mean, _beyond_poisson(extra, mean)
+    mean, turns = numbers[-cycle:][ahead % cycle], 1.0 + ahead // cycle
+    before, after = numbers[:-cycle], numbers[cycle:]
+    grown = before * max(after.sum(), 1.0) / max(before.sum(), 1.0)
+    growth = np.log(max(after.sum(), 1.0) / max(before.sum(), 1.0))
+    chance = grown + grown**2 / np.maximum(before, 1.0)
+    spread = (after - grown) ** 2 * len(after) / (len(after) - 1) - chance
+    own = max(float(spread.sum() / max((grown**2).sum(), 1.0)), 0.0)
+    noise = (own * (grown**2).sum() + chance.sum()) / max(grown.sum(), 1.0) ** 2
+    shared = max(growth**2 - noise, 0.0)
+    return mean, np.outer(turns * mean, turns * mean) * shared + np.diag(own * turns * mean**2 + mean)
 
 
 def smoothing(numbers: Array, periods: int, cycle: int) -> tuple[Array, Array]:

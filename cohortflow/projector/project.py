@@ -49,7 +49,8 @@ def project(
     totals : named sums of states that get their own band, beside `all_live`
     level : of the bands;  rng : seed or Generator
     draws : how many, or Draws made before;  covariance : which kind the Fit draws from
-    shocks : Draws with matrices for each period ahead ("common_shocks"); they hold the rates part as well
+    shocks : Draws with matrices for each period ahead ("common_shocks"); they hold the rates part as well,
+        told apart by their own `.rates` where they have it, else by the draws of the model
     parts : which of rates, chance, common_shocks, joiners make the band; default: all that are known
     base_period : label or ordinal, where the Fit or the start does not tell
 
@@ -72,7 +73,8 @@ def project(
     first = accept.first_step(schedule, base)
     generator = accept.as_rng(rng)
     coming = as_joiners(joiners, schedule, base, steps)
-    drawn = accept.draws_of(model, draws, generator, covariance)
+    paired = getattr(shocks, "rates", None)
+    drawn = paired if isinstance(paired, Draws) else accept.draws_of(model, draws, generator, covariance)
     chosen = _choose_parts(parts, drawn, shocks, coming)
     weights = accept.weights_of(states, totals)
     central = walk(schedule, counts, steps, coming.expected(), first_step=first)
