@@ -179,6 +179,24 @@ def concerned(schedule: Schedule, change: Change) -> list[int]:
     return [c for c in everyone if schedule.components[c].name == change.segment] or everyone
 
 
+def feasible(schedule: Schedule, change: Change) -> tuple[float, float]:
+    """The least and the largest `add` that every row concerned can take, in every matrix of the model.
+
+    >>> from cohortflow import Chain, States
+    >>> chain = Chain(States(["here", "gone"], exits=["gone"]), [[0.9, 0.1], [0, 1]])
+    >>> feasible(chain.schedule, Change("here", "gone", add=0.0))
+    (-0.1, 0.9)
+    """
+    low, high = -1.0, 1.0
+    for part in (schedule.components[c] for c in concerned(schedule, change)):
+        for origin in change.origins(schedule.states):
+            held = part.matrices[:, part.report == schedule.states.index(origin)]
+            if held.size and not np.isnan(held).any():
+                room = Room.of(held, part, schedule.states, change, origin)
+                low, high = max(low, -float(room.here.min())), min(high, float(room.pool.min()))
+    return low, high
+
+
 def apply(
     matrices: Array, component: Component, states: States, change: Change, *, clip: bool = False
 ) -> tuple[Array, float]:
