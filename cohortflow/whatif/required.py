@@ -38,6 +38,7 @@ Figure = Callable[[Schedule, float], float]
 
 DRAWS = 200
 SIZES, COARSE = 24, 6
+JUST_SHORT = 1e-9
 AT_HORIZON = ("base", "value")
 
 
@@ -253,12 +254,22 @@ def _solve(figure: Callable[[float], float], room: tuple[float, float]) -> _Foun
 
 def _along(figure: Callable[[float], float], now: float, end: float, count: int = SIZES) -> _Found:
     """The first zero on the way from 0 to `end`, and the value that goes farthest towards it or beyond."""
+    end = _within(figure, end)
     sizes = [0.0, *(end * np.linspace(0.0, 1.0, count + 1)[1:])]
     values = [now, *(figure(size) for size in sizes[1:])]
     best = int(np.argmin(np.sign(now) * np.array(values)))
     crossed = next((k for k in range(1, len(sizes)) if values[k] * now <= 0), None)
     size = float("nan") if crossed is None else _zero(figure, sizes[crossed - 1], sizes[crossed])
     return _Found(size, now, values[best], float(sizes[best]))
+
+
+def _within(figure: Callable[[float], float], end: float) -> float:
+    """`end`, or just short of it where the figure ceases to exist there (nobody leaves any more)."""
+    try:
+        figure(end)
+    except NotIdentified:
+        return end * (1.0 - JUST_SHORT)
+    return end
 
 
 def _zero(figure: Callable[[float], float], first: float, last: float) -> float:
@@ -288,6 +299,7 @@ def _one_draw(
         if start * now <= 0:
             return 0.0
         end = feasible(schedule, change)[0 if towards < 0 else 1]
+        end = _within(lambda s: figure(schedule, s) - mark, end) if end else end
         if end and (figure(schedule, end) - mark) * start <= 0:
             return _zero(lambda s: figure(schedule, s) - mark, 0.0, end)
         size = _along(lambda s: figure(schedule, s) - mark, start, end, COARSE).size if end else float("nan")
