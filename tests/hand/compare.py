@@ -9,6 +9,7 @@ from typing import Any
 
 import pandas as pd
 
+from cohortflow.projector.rollforward import rollforward_actual
 from cohortflow.tally import ENDS, KINDS, MEMOS
 
 HERE = Path(__file__).parent
@@ -118,6 +119,19 @@ def check_rollforward(folder: str, tables: Any, study: Any) -> None:
         assert written["opening"] + inflow - outflow == written["closing"], key
         counted = {line: found[key].get(line, 0) for line in written}
         assert counted == written, key
+
+
+def check_printed_rollforward(folder: str, tally: Any) -> None:
+    """The table `rollforward` that the program prints, from the second period on; "all" is a sum of ours."""
+    frame = rollforward_actual(tally)
+    frame = frame[~frame["line"].str.startswith("joined_and_left")]
+    lines = frame.groupby(["period", "state", "line"])["customers"].sum()
+    for row in rows_of(folder, "rollforward.csv"):
+        period, state = row.pop("period"), row.pop("state")
+        if state == "all" or tally.calendar.parse(period) == tally.meta.first:
+            continue
+        assert {line: int(lines[period, state, line]) for line in row} == {k: int(n) for k, n in row.items()}
+        assert lines[period, state, "unobserved_out"] == 0
 
 
 def check_tables(folder: str, tables: Any, study: Any) -> None:

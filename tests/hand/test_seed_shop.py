@@ -84,3 +84,4 @@ def test_history_room_accounts_and_counts_as_written(study):
     tally = cf.count(history)
     tally.check_conservation()
     compare.check_tables(FOLDER, tally.tables, study)
+    compare.check_printed_rollforward(FOLDER, tally)

