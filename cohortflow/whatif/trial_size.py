@@ -108,7 +108,7 @@ def trial_size(
     >>> chain = Chain(states, [[0.68, 0.12, 0.2], [0.1, 0.9, 0], [0, 0, 1]])
     >>> need = trial_size(chain, Change("quiet", "weekly", add=0.05), start={"quiet": 400, "weekly": 2000})
     >>> need
-    <"quiet" to "weekly" 0.12 -> 0.17: 778 departures in the treated arm, 5 periods>
+    <"quiet" to "weekly" 0.12 -> 0.17: 778 departures in the treated arm, 4 periods>
     """
     for name, number in (("power", power), ("level", level), ("share", share)):
         if not 0 < number < 1:
