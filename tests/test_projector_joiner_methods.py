@@ -57,13 +57,13 @@ def test_last_year_repeats_and_widens():
     growing = np.array([100.0, 200, 110, 220, 121, 242])
     mean, extra = last_year(growing, 4, 2)
     assert mean.tolist() == [121, 242, 121, 242]
-    # every repetition was 10 % short, 693 for 630: shared by all periods is log(1.1)^2 less the Poisson noise of
-    # that growth, (693 + 1.1^2 x 630) / 693^2, once for one cycle ahead, doubled (as a factor) for two
+    # every repetition was 10 % short, 693 for 630: shared by all periods is log(1.1)^2 less the Poisson noise
+    # of that growth, (693 + 1.1^2 x 630) / 693^2, once for one cycle ahead, doubled (as a factor) for two
     noise = (693 + 1.1**2 * 630) / 693**2
     ahead = mean * [1, 1, 2, 2]
     shared = np.outer(ahead, ahead) * (np.log(1.1) ** 2 - noise)
     np.testing.assert_allclose(extra, shared + np.diag(mean), rtol=1e-9)
-    # nobody in the first cycle says nothing against the method that could be put in numbers but growth from one
+    # nobody in the first cycle: growth from one
     assert np.isfinite(last_year(np.array([0.0, 0, 0, 3, 2, 4]), 3, 3)[1]).all()
     with pytest.raises(NotIdentified, match='"last_year" needs one cycle of 12 periods and 3 more'):
         last_year(growing, 4, 12)

@@ -1,6 +1,8 @@
 """Chain or Schedule -> futures: the mix period by period, where it settles, how long customers stay."""
 
 from cohortflow.projector.accept import as_schedule as as_schedule
+from cohortflow.projector.amounts import Amounts as Amounts
+from cohortflow.projector.amounts import observed_amounts as observed_amounts
 from cohortflow.projector.exits import ExitTimes as ExitTimes
 from cohortflow.projector.exits import time_to_exit as time_to_exit
 from cohortflow.projector.joiner_methods import joiner_forecast as joiner_forecast
@@ -18,6 +20,10 @@ from cohortflow.projector.rates import rates_actual as rates_actual
 from cohortflow.projector.rates import rates_forecast as rates_forecast
 from cohortflow.projector.retention import Retention as Retention
 from cohortflow.projector.retention import retention as retention
+from cohortflow.projector.revenue import revenue_actual as revenue_actual
+from cohortflow.projector.revenue import revenue_forecast as revenue_forecast
+from cohortflow.projector.revenue import revenue_retention as revenue_retention
+from cohortflow.projector.revenue import revenue_retention_actual as revenue_retention_actual
 from cohortflow.projector.rollforward import rollforward_actual as rollforward_actual
 from cohortflow.projector.value import Value as Value
 from cohortflow.projector.value import value as value

@@ -21,7 +21,7 @@ Marketing 14(2); Sobel (1982) J. Appl. Prob. 19 (spread of the discounted total)
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -32,6 +32,7 @@ from cohortflow.errors import CallError, listed, nearest
 from cohortflow.markov.gradient import Derivative
 from cohortflow.markov.structure import analyse, leads_to
 from cohortflow.projector.accept import Array, Flags
+from cohortflow.projector.amounts import Amounts
 from cohortflow.projector.unroll import unroll
 from cohortflow.states import States
 
@@ -45,6 +46,8 @@ class Terms:
     per_period : (K,) contribution a customer a period;  on_move : (K, K) amount paid on a move
     factor : discount factor a period, 1 = none;  weight : w, share of the state at the period's start
     lag : periods by which the first period's money is discounted
+    error : (K, K) covariance of per_period where it was estimated, else None
+    once : (K,) flags of exits that pay in the period of leaving only (observed amounts), else None
     """
 
     per_period: Array
@@ -52,12 +55,14 @@ class Terms:
     factor: float = 1.0
     weight: float = 0.5
     lag: float = 0.5
+    error: Array | None = None
+    once: Flags | None = None
 
     def amounts(self) -> Array:
         """(K, K) y_ij."""
-        return (
-            self.weight * self.per_period[:, None] + (1 - self.weight) * self.per_period[None] + self.on_move
-        )
+        w, r = self.weight, self.per_period
+        y = w * r[:, None] + (1 - w) * r[None] + self.on_move
+        return y if self.once is None else np.where(self.once[:, None], 0.0, y)
 
 
 def money_terms(
@@ -88,7 +93,10 @@ def money_terms(
     if first_period_discounted is not None:
         lag = 1.0 if first_period_discounted else 0.0
     factor = (1.0 + discount_rate) ** (-1.0 / periods_a_year) if discount_rate else 1.0
-    return Terms(_by_state(per_period, states), _by_move(on_move, states), factor, weight, lag)
+    terms = Terms(amounts_by_state(per_period, states), _by_move(on_move, states), factor, weight, lag)
+    if isinstance(per_period, Amounts):
+        return replace(terms, error=np.nan_to_num(per_period.covariance), once=states.exit_mask)
+    return terms
 
 
 @dataclass(frozen=True, eq=False)
@@ -186,7 +194,10 @@ def _settled(P: Array, y: Array, b: float) -> Flags:
 
 
 # ---- the amounts as given ----
-def _by_state(per_period: Any, states: States) -> Array:
+def amounts_by_state(per_period: Any, states: States) -> Array:
+    """(K,) amounts from a mapping by state name (not named: 0), Amounts, or one number a state."""
+    if isinstance(per_period, Amounts):
+        return np.nan_to_num(per_period.mean)
     out = np.zeros(len(states))
     if isinstance(per_period, (Mapping, pd.Series)):
         for name, amount in per_period.items():

@@ -5,16 +5,18 @@ How a customer's money is counted stands in money.py.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass, replace
 from typing import Any, ClassVar
 
 import numpy as np
 import pandas as pd
 
 from cohortflow.chain import Draws, Schedule
+from cohortflow.errors import CallError
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
+from cohortflow.projector.amounts import Amounts, observed_amounts
 from cohortflow.projector.delta import Doubt, Spread, doubt_of, interval, quantiles
 from cohortflow.projector.money import Terms, Worth, money_terms, value_derivative, worth
 from cohortflow.projector.unroll import drawn_schedule, unroll
@@ -52,7 +54,7 @@ class Value(Record):
     def to_frame(self) -> pd.DataFrame:
         """segment, measure, state, value, low, high, currency.
 
-        Measures: customer_value and customer_sd by state; joining_cohort, joining_cohort_sd, base, base_sd.
+        Measures: customer_value and customer_sd by state (what moves do; not what customers of one state pay); joining_cohort, joining_cohort_sd, base, base_sd.
         """
         names = self.schedule.states.remaining
         cells = [("customer_value", n, v) for n, v in zip(names, self.customer, strict=True)]
@@ -93,6 +95,7 @@ def value(
     model: Any,
     *,
     per_period: Any,
+    margin: float = 1.0,
     on_move: Iterable[Any] = (),
     discount_rate: float = 0.0,
     timing: str = "middle",
@@ -112,7 +115,8 @@ def value(
 
     Parameters
     ----------
-    per_period : contribution a customer a period by state (states not named: 0)
+    per_period : contribution a customer a period by state (states not named: 0); or "observed": the amounts
+        of the Fit's tally times `margin`; or Amounts: their error is part of the intervals
     on_move : (from, to, amount) rows, or objects with from_, to, amount
     discount_rate : a year;  timing : "start", "middle" or "end" of the period
     first_period_discounted : True: by one whole period, False: not at all; default: as the timing says
@@ -134,7 +138,7 @@ def value(
     first = accept.first_step(schedule, base)
     terms = money_terms(
         schedule.states,
-        per_period,
+        _observed(model, margin) if isinstance(per_period, str) else per_period,
         on_move=on_move,
         discount_rate=discount_rate,
         periods_a_year=schedule.calendar.per_year,
@@ -145,8 +149,9 @@ def value(
     people = _people(model, start, joiners, schedule.states)
     found = worth(schedule, terms, horizon=steps, first_step=first)
     figures = _figures(found, people, schedule.states)
-    doubt = doubt_of(model, covariance, draws, rng, level)
-    limits = _limits(schedule, terms, steps, people, doubt, first)
+    generator = accept.as_rng(rng)
+    doubt = doubt_of(model, covariance, draws, generator, level)
+    limits = _limits(schedule, terms, steps, people, doubt, first, generator)
     inside = ~schedule.states.exit_mask
     return Value(
         schedule, terms, steps, found.now[inside], found.sd_now[inside],
@@ -154,6 +159,16 @@ def value(
         frozen_mapping({k: limits[k] for k in figures if k in limits and np.isfinite(figures[k])}),
         level, doubt.method, currency, found.reasons, segment,
     )  # fmt: skip
+
+
+def _observed(model: Any, margin: float) -> Amounts:
+    tally = accept.tally_of(model)
+    if tally is None:
+        raise CallError(
+            'per_period="observed" reads the amounts that a Fit\'s tally holds; a bare '
+            f"{type(model).__name__} has none. Give amounts by state."
+        )
+    return observed_amounts(tally, margin=margin)
 
 
 def _people(model: Any, start: Any, joiners: Any, states: States) -> dict[str, Array]:
@@ -186,14 +201,15 @@ def _limits(
     people: Mapping[str, Array],
     doubt: Doubt,
     first: int,
+    rng: np.random.Generator,
 ) -> dict[tuple[str, str], tuple[float, float]]:
     if doubt.spread is not None:
         return _by_delta(schedule, terms, horizon, people, doubt.spread, first)
     if doubt.draws is None:
         return {}
     samples = []
-    for d in range(doubt.draws.size):
-        found = worth(drawn_schedule(doubt.draws, d), terms, horizon=horizon, first_step=first)
+    for d, money in enumerate(_drawn_terms(terms, doubt.draws.size, rng)):
+        found = worth(drawn_schedule(doubt.draws, d), money, horizon=horizon, first_step=first)
         samples.append(_figures(found, people, schedule.states))
     keys = list(samples[0])
     low, high = quantiles(np.array([[s[k] for k in keys] for s in samples]), doubt.level)
@@ -213,14 +229,37 @@ def _by_delta(
     scale = "log" if (terms.amounts()[P > 0] >= 0).all() else "plain"
     weights = {("customer_value", n): np.eye(len(states))[states.index(n)] for n in states.remaining}
     weights |= {(measure, ""): counts for measure, counts in people.items()}
+    per_unit = _per_unit(schedule, terms, horizon, first) if terms.error is not None else np.zeros(0)
     out = {}
     for key, w in weights.items():
         there = w > 0
         mean = w[there] @ slope.value[there]
         if not np.isfinite(mean):
             continue
-        low, high = interval(
-            np.array([mean]), np.array([spread.variance(slope.along(w))]), spread.quantile, scale
-        )
+        variance = spread.variance(slope.along(w))
+        if terms.error is not None:
+            by_price = w @ per_unit
+            variance += by_price @ terms.error @ by_price
+        low, high = interval(np.array([mean]), np.array([variance]), spread.quantile, scale)
         out[key] = (float(low[0]), float(high[0]))
     return out
+
+
+def _per_unit(schedule: Schedule, terms: Terms, horizon: int | None, first: int) -> Array:
+    """(K, K) value in row's state of one unit of money a period in column's; undefined ones count 0."""
+    units = np.eye(len(schedule.states))
+    nothing = np.zeros_like(terms.on_move)
+    found = [
+        worth(schedule, replace(terms, per_period=u, on_move=nothing), horizon=horizon, first_step=first).now
+        for u in units
+    ]
+    return np.nan_to_num(np.column_stack(found))
+
+
+def _drawn_terms(terms: Terms, size: int, rng: np.random.Generator) -> Iterator[Terms]:
+    """The terms of each draw: amounts scatter by their error where they were estimated."""
+    if terms.error is None:
+        yield from (terms for _ in range(size))
+        return
+    for amounts in rng.multivariate_normal(terms.per_period, terms.error, size):
+        yield replace(terms, per_period=amounts)
