@@ -30,6 +30,8 @@ _HOME = {
     "time_to_exit": "projector",
     "retention": "projector",
     "value": "projector",
+    "adequacy": "assessment",
+    "backtest": "assessment",
     "Change": "whatif",
     "Scenario": "whatif",
     "what_if": "whatif",
