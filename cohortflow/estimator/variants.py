@@ -10,6 +10,7 @@ import numpy as np
 
 from cohortflow.errors import CallError, listed, nearest
 from cohortflow.estimator.layout import Built, Part, build, with_exits
+from cohortflow.estimator.mixture import mixture, mover_stayer
 from cohortflow.estimator.rows import RowCounts
 from cohortflow.estimator.seasonal import seasonal
 from cohortflow.estimator.second_order import second_order
@@ -55,6 +56,8 @@ MODELS: dict[str, Builder] = {
     "time_in_state": time_in_state,
     "segment": segment,
     "second_order": second_order,
+    "mover_stayer": mover_stayer,
+    "mixture": mixture,
 }
 
 
