@@ -12,7 +12,7 @@ import pandas as pd
 import pytest
 
 import cohortflow as cf
-from cohortflow.errors import CallError, NotIdentified, OutputError
+from cohortflow.errors import CallError, InputError, NotIdentified, OutputError
 from cohortflow.runs.folder import Run, run
 from cohortflow.runs.steps import fit_study, joiners_study
 from cohortflow.study import read_study
@@ -237,6 +237,63 @@ def test_observed_value_is_refused_as_a_table_not_as_a_run(tmp_path):
     )
     done = run(study, upto="project")
     assert "value" not in done.tables and '"observed" is read and checked' in done.absent["value"]
+
+
+# ---- layouts ----
+COUNTS = """\
+[study]
+period = "month"
+as_of = "2026-03-31"
+horizon = 2
+[input]
+layout = "counts"
+files = ["counts.csv"]
+time = "month"
+from = "was"
+to = "is"
+n = "customers"
+[[state]]
+name = "in"
+[[state]]
+name = "out"
+role = "exit"
+"""
+
+
+def test_bare_counts_make_a_run_without_what_only_customers_can_tell(tmp_path):
+    (tmp_path / "counts.csv").write_text(
+        "month,was,is,customers\n2026-01,in,in,90\n2026-01,in,out,10\n2026-02,in,in,72\n2026-02,in,out,18\n"
+    )
+    (tmp_path / "bare.toml").write_text(COUNTS)
+    done = run(tmp_path / "bare.toml", out=tmp_path / "out")
+    assert done.fit.P[0].tolist() == [162 / 190, 28 / 190]  # (90 + 72) of (100 + 90) stayed
+    live = done.tables["projection"].query("state == 'in'")["customers"].tolist()
+    assert live == pytest.approx([72, 72 * 162 / 190, 72 * (162 / 190) ** 2])  # nobody joins
+    assert {"cohorts"}.isdisjoint(done.tables) and done.tally.meta.definitions == done.study.digest()
+    assert done.tables["accounting"].query("outcome == 'used' and file == 'all'")["rows"].item() == 4
+    assert [finding.code for finding in done.findings if not finding.serious]  # no_buckets among them
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "text"),
+    [
+        ('n = "customers"', 'n = "customers"\nsegments = ["town"]', "Bare counts are read without segments"),
+        (
+            '"counts"',
+            '"spells"',
+            'The layout "spells" is checked in the study file, but this version does not read',
+        ),
+    ],
+)
+def test_layouts_that_are_not_read_yet_are_refused(tmp_path, old, new, text):
+    keys = 'time = "month"\nfrom = "was"\nto = "is"\nn = "customers"'
+    changed = COUNTS.replace(old, new)
+    if "spells" in new:
+        changed = changed.replace(keys, 'customer = "c"\ntime = "a"\nend = "b"\nstate = "s"')
+    (tmp_path / "counts.csv").write_text("month,was,is,customers\n2026-01,in,in,90\n")
+    (tmp_path / "bare.toml").write_text(changed)
+    with pytest.raises(InputError, match=text):
+        run(tmp_path / "bare.toml", upto="check")
 
 
 # ---- steps ----

@@ -11,18 +11,20 @@ from typing import Any
 import pandas as pd
 
 from cohortflow.errors import CallError, InputError, listed
+from cohortflow.history.check import Check, balanced
 from cohortflow.history.counts import tally_of_counts
 from cohortflow.history.engine import Engine, opened
 from cohortflow.history.events import read_event_rows
 from cohortflow.history.histories import read_state_rows
 from cohortflow.history.load import load, refuse_unknown_names
-from cohortflow.history.reading import History, Reading
+from cohortflow.history.reading import History, InputFile, Reading
 from cohortflow.history.sources import Source, file_source, found_files, frame_source, is_frame
 from cohortflow.periods import Calendar
 from cohortflow.states import States
 from cohortflow.study import EventSpec, InputSpec, StateRule, Study
 from cohortflow.tally import Tally
 
+READ = ("events", "history", "counts")
 UNPACKED = 6  # a gzip extract is taken to be this many times larger
 Progress = Callable[[str, float], None]
 
@@ -71,6 +73,7 @@ def read(
     >>> cf.count(history).counts().tolist()
     [[0, 0], [1, 2]]
     """
+    _refuse_unread(study.input.layout)
     files = found_files(study.input.files, study.folder)
     size = sum(path.stat().st_size * (UNPACKED if path.name.endswith(".gz") else 1) for _, path in files)
     with opened(input_bytes=size, memory_mb=memory_mb, threads=threads) as engine:
@@ -79,6 +82,8 @@ def read(
             file_source(engine, name, path, i, encoding=spec.encoding, delimiter=_delimiter(spec, path))
             for i, (name, path) in enumerate(files)
         ]
+        if spec.layout == "counts":
+            return _counts_history(engine, study, sources)
         return _history(engine, study, sources, progress, keep_values)
 
 
@@ -369,6 +374,35 @@ def _as_table(rule: StateRule | Mapping[str, Any]) -> dict[str, Any]:
     if isinstance(rule, StateRule):
         raise CallError("Give all rules as StateRule or all as tables like those of a study file, not both.")
     return dict(rule)
+
+
+def _refuse_unread(layout: str) -> None:
+    """InputError for layouts that a study file may name but that are not read yet."""
+    if layout not in READ:
+        raise InputError(
+            f'The layout "{layout}" is checked in the study file, but this version does not read it yet. '
+            f"Layouts read: {listed(READ)}."
+        )
+
+
+def _counts_history(engine: Engine, study: Study, sources: list[Source]) -> History:
+    """Bare counts of a study as a History: every row is used, no customer is known."""
+    spec = study.input
+    if spec.segments or spec.attributes or spec.arm or spec.weight:
+        raise InputError(
+            "Bare counts are read without segments, attributes, arm or weight in this version; leave these "
+            "keys out of [input], or make one file of counts for each segment."
+        )
+    parts = [_text_rows(engine, [source], spec) for source in sources]
+    rows = pd.concat(parts, ignore_index=True)
+    tally = tally_of_counts(rows, study.states, calendar=study.calendar, definitions=study.digest())
+    lines = [("used", "", s.name, len(part), 0) for s, part in zip(sources, parts, strict=True)]
+    inputs = tuple(
+        InputFile(s.name, s.size, s.sha256, len(part), s.shown)
+        for s, part in zip(sources, parts, strict=True)
+    )
+    rejected = pd.DataFrame(columns=["file", "line", "column", "reason"])
+    return History(study.states, study.calendar, Check(balanced(lines, {}), ()), rejected, inputs, tally)
 
 
 def _text_rows(engine: Engine, sources: list[Source], spec: InputSpec) -> pd.DataFrame:
