@@ -54,7 +54,8 @@ def test_counted_money_on_paper():
 
 def test_a_price_change_stands_apart():
     tally = tally_of_stays([("joined", "", [(1, "steady"), (2, "steady")])] * 2, last=2)
-    rows = pd.DataFrame({"bucket": 0, "segment": 0, "period": [1, 2], "state": 1, "n": 2, "total": [4000, 5000],
+    rows = pd.DataFrame({"bucket": 0, "segment": 0, "period": [1, 2], "state": 1, "n": 2,
+                         "total": [4000, 5000],
                          "squares": 0})  # fmt: skip
     frame = revenue_actual(Tally.build(tally.meta, {**tally.tables, "amounts": rows}), margin=0.5)
     # two customers pay 20, then 25 each; half counts

@@ -68,7 +68,7 @@ stays_drawn = st.lists(
 )
 
 
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=30, deadline=None)
 @given(stays_drawn)
 def test_it_closes_in_whole_customers_whatever_happens(drawn):
     stays = []

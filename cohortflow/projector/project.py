@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -11,6 +11,7 @@ from cohortflow.chain import Draws, Schedule
 from cohortflow.errors import CallError
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
+from cohortflow.projector.adjust import as_adjustments, overlaid
 from cohortflow.projector.bands import check_parts, drawn_means, moments, simulate
 from cohortflow.projector.joiners import Joiners, nobody, planned_numbers
 from cohortflow.projector.mix import walk
@@ -34,6 +35,7 @@ def project(
     parts: Sequence[str] | None = None,
     covariance: str | None = None,
     base_period: str | int | None = None,
+    adjustments: Iterable[Any] = (),
     segment: str = "all",
 ) -> Projection:
     """Project a base: expected customers by state (exact), with bands from simulation.
@@ -53,6 +55,7 @@ def project(
         told apart by their own `.rates` where they have it, else by the draws of the model
     parts : which of rates, chance, common_shocks, joiners make the band; default: all that are known
     base_period : label or ordinal, where the Fit or the start does not tell
+    adjustments : (period, state, customers) laid over by hand, a line of their own in the roll-forward
 
     Raises CallError for unusable arguments. A state that can be reached from one without data is NaN.
 
@@ -77,7 +80,9 @@ def project(
     drawn = paired if isinstance(paired, Draws) else accept.draws_of(model, draws, generator, covariance)
     chosen = _choose_parts(parts, drawn, shocks, coming)
     weights = accept.weights_of(states, totals)
+    added = as_adjustments(adjustments, schedule, base, steps)
     central = walk(schedule, counts, steps, coming.expected(), first_step=first)
+    central, overlay = overlaid(central, schedule, added, first)
     simulated = simulate(
         schedule,
         counts,
@@ -90,13 +95,14 @@ def project(
         joiners_vary="joiners" in chosen,
         first_step=first,
     )
+    simulated = np.maximum(simulated + overlay, 0.0)
     simulated[:, central.undefined] = np.nan
     spread = _variances(schedule, counts, steps, coming, drawn, shocks, chosen, weights, first)
     for values in spread.values():
         values[np.isnan(_by_quantity(central.counts, weights, states.exit_mask))] = np.nan
     return Projection(
         schedule, coming, base, accept.as_level(level), chosen, central, frozen_array(simulated),
-        frozen_mapping(weights), frozen_mapping(spread), segment,
+        frozen_mapping(weights), frozen_mapping(spread), added, segment,
         tuple(f"rows_without_data:{s}" for s in schedule.unknown),
     )  # fmt: skip
 

@@ -28,6 +28,7 @@ class Projection(Record):
     simulated : (D, H+1, K) drawn customers by state; exits: lost since the opening
     weights : quantity -> (K,): each state but the exits, `all_live`, the named totals
     variances : part -> (H+1, Q) variance of each quantity of `weights`, then of each exit
+    adjusted : (H, K) customers laid over by hand
     reasons : codes, for instance "rows_without_data:paused"
     """
 
@@ -40,6 +41,7 @@ class Projection(Record):
     simulated: Array
     weights: Mapping[str, Array]
     variances: Mapping[str, Array]
+    adjusted: Array
     segment: str = "all"
     reasons: tuple[str, ...] = ()
     kind: ClassVar[str] = "projection"
@@ -102,7 +104,12 @@ class Projection(Record):
     def rollforward(self) -> pd.DataFrame:
         """The table `rollforward`, forecast rows; every state closes (see rollforward.py)."""
         return forecast_lines(
-            self.schedule.states, self.walk, self.joiners, self.labels[1:], segment=self.segment
+            self.schedule.states,
+            self.walk,
+            self.joiners,
+            self.labels[1:],
+            adjusted=self.adjusted,
+            segment=self.segment,
         )
 
     def headline(self) -> str:

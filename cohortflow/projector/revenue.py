@@ -26,7 +26,7 @@ from cohortflow.projector.delta import Doubt, doubt_of, interval, quantiles
 from cohortflow.projector.mix import filled, walk
 from cohortflow.projector.money import amounts_by_state
 from cohortflow.projector.projection import Projection
-from cohortflow.projector.rollforward import Lines, counted_lines
+from cohortflow.projector.rollforward import Lines, counted_lines, forecast_causes
 from cohortflow.states import States
 from cohortflow.tally import Tally
 
@@ -50,8 +50,7 @@ def revenue_forecast(projection: Projection, per_period: Any, *, currency: str =
     """
     states, steps = projection.schedule.states, projection.periods
     prices = np.tile(amounts_by_state(per_period, states), (steps + 1, 1))
-    inflow = {kind: projection.joiners.expected(kind) for kind in ("joined", "returned")}
-    counted = Lines(projection.mean[:-1], projection.mean[1:], projection.walk.flows, inflow)
+    counted = forecast_causes(projection.walk, projection.joiners, projection.adjusted)
     frame = _lines(states, counted, prices, projection.labels[1:])
     return frame.assign(segment=projection.segment, kind="forecast", currency=currency)[COLUMNS]
 

@@ -20,6 +20,9 @@ from cohortflow.tally import ENDS, KINDS, Tally
 COLUMNS = ["segment", "period", "kind", "state", "line", "exit", "customers"]
 
 
+LATE = ("unobserved_in", "adjustment")  # lines that stand after the moves
+
+
 @dataclass(frozen=True, eq=False)
 class Lines:
     """The causes of T periods: opening, closing (T, K); flows (T, K, K); further lines, each (T, K)."""
@@ -32,12 +35,25 @@ class Lines:
 
 
 def forecast_lines(
-    states: States, walk: Walk, joiners: Joiners, labels: Sequence[str | None], *, segment: str = "all"
+    states: States,
+    walk: Walk,
+    joiners: Joiners,
+    labels: Sequence[str | None],
+    *,
+    adjusted: Array | None = None,
+    segment: str = "all",
 ) -> pd.DataFrame:
     """The table `rollforward` of a projection (kind forecast); NaN where the walk is undefined."""
-    inflow = {kind: joiners.expected(kind) for kind in ("joined", "returned")}
-    lines = Lines(walk.counts[:-1], walk.counts[1:], walk.flows, inflow)
+    lines = forecast_causes(walk, joiners, adjusted)
     return table(states, lines, labels, kind="forecast", segment=segment)
+
+
+def forecast_causes(walk: Walk, joiners: Joiners, adjusted: Array | None = None) -> Lines:
+    """The causes of the periods ahead; a line for adjustments only where there are any."""
+    inflow = {kind: joiners.expected(kind) for kind in ("joined", "returned")}
+    if adjusted is not None and adjusted.any():
+        inflow["adjustment"] = adjusted
+    return Lines(walk.counts[:-1], walk.counts[1:], walk.flows, inflow)
 
 
 def rollforward_actual(tally: Tally, *, segment: str = "all") -> pd.DataFrame:
@@ -119,16 +135,12 @@ def _causes(states: States, lines: Lines, members: list[int]) -> list[tuple[str,
     inside = states.mask([states.names[m] for m in members])
     others = ~inside & ~states.exit_mask
     out = [("opening", "", lines.opening[:, members].sum(axis=1))]
-    out += [
-        (line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line != "unobserved_in"
-    ]
+    out += [(line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line not in LATE]
     for name in states.exits:
         out.append(("lost", name, lines.flows[:, members, states.index(name)].sum(axis=1)))
     out.append(("moved_in", "", lines.flows[:, others][:, :, members].sum(axis=(1, 2))))
     out.append(("moved_out", "", lines.flows[:, members][:, :, others].sum(axis=(1, 2))))
-    out += [
-        (line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line == "unobserved_in"
-    ]
+    out += [(line, "", v[:, members].sum(axis=1)) for line, v in lines.inflow.items() if line in LATE]
     out += [(line, "", v[:, members].sum(axis=1)) for line, v in lines.outflow.items()]
     out.append(("closing", "", lines.closing[:, members].sum(axis=1)))
     return out

@@ -54,7 +54,8 @@ class Value(Record):
     def to_frame(self) -> pd.DataFrame:
         """segment, measure, state, value, low, high, currency.
 
-        Measures: customer_value and customer_sd by state (what moves do; not what customers of one state pay); joining_cohort, joining_cohort_sd, base, base_sd.
+        Measures: customer_value and customer_sd by state (from moves alone);
+        joining_cohort, joining_cohort_sd, base, base_sd.
         """
         names = self.schedule.states.remaining
         cells = [("customer_value", n, v) for n, v in zip(names, self.customer, strict=True)]
