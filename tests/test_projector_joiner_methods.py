@@ -122,6 +122,13 @@ def test_joiners_and_returners_apart_from_a_tally():
     assert joiner_forecast(tally(), 2, method="constant", window=2).inflows["joined"].mean[0] == 4.5
 
 
+def test_periods_in_which_everybody_is_new_to_the_log_do_not_count():
+    old = [("unknown", "", [(p, "steady") for p in range(1, 7)])] * 9
+    stays = [*old, *(("joined", "", [(p, "fresh") for p in range(begin, 7)]) for begin in (2, 3, 3, 4, 5))]
+    found = joiner_forecast(tally_of_stays(stays), 1, method="constant").inflows["joined"]
+    assert found.mean[0] == 1  # five joined in the five periods 2 to 6
+
+
 def test_mix_varies_as_it_did():
     same = np.tile([30, 20, 10], (8, 1))
     assert _concentration(same) == np.inf

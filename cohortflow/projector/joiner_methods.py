@@ -48,6 +48,15 @@ def joiner_forecast(
 
     The split over entry states is pooled over the last cycle, kept apart from the number; it varies from
     period to period as it did there (Dirichlet). Raises NotIdentified when the history is too short.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "steady")]
+    >>> rows += [("b", 2, "fresh"), ("b", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> tally = cf.count(cf.read_history(frame, states))
+    >>> joiner_forecast(tally, 2, method="constant").inflows["joined"].mean  # one new customer in two periods
+    array([0.5, 0.5])
     """
     if method not in METHODS:
         raise CallError(f'Unknown method "{method}"{nearest(method, METHODS)}. Allowed: {listed(METHODS)}.')
@@ -58,7 +67,7 @@ def joiner_forecast(
         return planned(tally.states, plan, steps, calendar=calendar, base=base)
     inflows = {}
     for kind in INFLOWS:
-        counts = tally.joiners(kind)[1] * ~tally.states.exit_mask
+        counts = _seen(tally, kind)
         mean, extra = _forecast(method, counts.sum(axis=1).astype(float), steps, calendar, window, kind)
         inflows[kind] = _with_mix(counts, mean, extra, tally.states, calendar.cycle)
     return Joiners(tally.states, calendar, base, method, inflows)
@@ -197,6 +206,14 @@ def _smoothed(logs: Array, cycle: int) -> tuple[Any, int]:
             'Exponential smoothing found no fit for these numbers. Use "constant" or "last_year".'
         )
     return fitted, season
+
+
+def _seen(tally: Tally, kind: str) -> Array:
+    """(T, K) stays that began, without the first periods of the log, in which everybody is new to it."""
+    counts = tally.joiners(kind)[1] * ~tally.states.exit_mask
+    blind = (tally.joiners("joined")[1].sum(axis=1) == 0) & (tally.joiners("unknown")[1].sum(axis=1) > 0)
+    seeing = np.flatnonzero(~blind)
+    return counts[seeing[0] :] if len(seeing) else counts[:0]
 
 
 def _forecast(

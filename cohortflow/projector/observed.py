@@ -47,6 +47,16 @@ def observed_retention(tally: Tally, *, level: float = 0.90) -> Observed:
     """The product-limit curve of those who joined within the window (kind joined), with intervals.
 
     NotIdentified when the counts have no ages, or nobody joined within the window.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "steady")]
+    >>> rows += [("b", 2, "fresh"), ("b", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> tally = cf.count(cf.read_history(frame, states))
+    >>> seen = observed_retention(tally)  # one customer joined within the window, and left in the next period
+    >>> seen.at_risk.tolist(), seen.share.tolist()
+    ([1.0, 1.0, 0.0], [1.0, 0.0, nan])
     """
     present, left, joined = _by_age(tally)
     sizes = joined.sum()
@@ -70,6 +80,15 @@ def cohort_table(tally: Tally, *, segment: str = "all") -> pd.DataFrame:
 
     live : there (not in an exit);  lost : in an exit by then;  complete : the age has been reached within the
     window; beyond it the cell is immature and its numbers are missing.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "steady")]
+    >>> rows += [("b", 2, "fresh"), ("b", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> tally = cf.count(cf.read_history(frame, states))
+    >>> cohort_table(tally)[["joined", "periods_since_joining", "live", "lost", "complete"]].values.tolist()
+    [['2', 0, 1, 0, True], ['2', 1, 0, 1, True], ['2', 2, <NA>, <NA>, False]]
     """
     ages = tally.table("ages")
     first, last = tally.meta.first, tally.meta.last

@@ -29,7 +29,18 @@ COLUMNS = [
 
 
 def rates_actual(tally: Tally, *, level: float = 0.90, segment: str = "all") -> pd.DataFrame:
-    """The table `rates`, kind actual: one row a period, measure and exit (exit empty: all together)."""
+    """The table `rates`, kind actual: one row a period, measure and exit (exit empty: all together).
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "steady")]
+    >>> rows += [("b", 2, "fresh"), ("b", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> tally = cf.count(cf.read_history(frame, states))
+    >>> third = rates_actual(tally).query("period == '3' and measure == 'churn' and exit == ''")
+    >>> third[["numerator", "denominator", "value"]].values.tolist()
+    [[1.0, 2.0, 0.5]]
+    """
     states, first, last = tally.states, tally.meta.first, tally.meta.last
     labels = tally.calendar.labels(np.arange(first + 1, last + 1))
     lines = counted_lines(tally)
@@ -46,7 +57,17 @@ def rates_actual(tally: Tally, *, level: float = 0.90, segment: str = "all") -> 
 
 
 def rates_forecast(projection: Projection) -> pd.DataFrame:
-    """The table `rates`, kind forecast: expected numerator over expected denominator, band from the draws."""
+    """The table `rates`, kind forecast: expected numerator over expected denominator, band from the draws.
+
+    >>> from cohortflow import Chain, States
+    >>> from cohortflow.projector import project
+    >>> states = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> chain = Chain(states, [[0, 0.8, 0.2], [0, 0.9, 0.1], [0, 0, 1]])
+    >>> rates = rates_forecast(project(chain, start={"fresh": 10, "steady": 30}, periods=1))
+    >>> churn = rates.query("measure == 'churn' and exit == ''")
+    >>> churn[["numerator", "denominator"]].round(6).values.tolist()
+    [[5.0, 40.0]]
+    """
     states = projection.schedule.states
     labels = projection.labels[1:]
     base = (~states.exit_mask).astype(float)
@@ -83,10 +104,12 @@ def _away_for_good(tally: Tally) -> Array:
     moves = tally.table("moves")
     exits = moves[moves["end"] == ENDS.index("exit")]
     first, last = tally.meta.first, tally.meta.last
-    left = np.array([exits.loc[exits["period"] <= p, "n"].sum() for p in range(first, last)], dtype=float)
+    left = np.array([exits.loc[exits["period"] <= p, "n"].sum() for p in range(first, last)], dtype=np.int64)
     starts = tally.table("starts")
     back = starts[starts["kind"] == 1]
-    returned = np.array([back.loc[back["period"] <= p, "n"].sum() for p in range(first, last)], dtype=float)
+    returned = np.array(
+        [back.loc[back["period"] <= p, "n"].sum() for p in range(first, last)], dtype=np.int64
+    )
     return left - returned
 
 

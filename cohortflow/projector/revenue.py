@@ -62,6 +62,16 @@ def revenue_actual(
 
     With observed amounts a change of what a state pays stands as price_change (closing customers, new less
     old amount); where a state had nobody, its last known amount holds.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "steady")]
+    >>> rows += [("b", 2, "fresh"), ("b", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> tally = cf.count(cf.read_history(frame, states))
+    >>> lines = revenue_actual(tally, {"fresh": 5, "steady": 20}).query("period == '3' and amount > 0")
+    >>> dict(zip(lines["line"], lines["amount"]))
+    {'opening': 25.0, 'lost': 5.0, 'closing': 20.0}
     """
     states, length = tally.states, tally.meta.last - tally.meta.first + 1
     if per_period is None:
@@ -130,6 +140,16 @@ def revenue_retention_actual(
 
     Cohort: customers there at the end of the period and followed to its end (their stay's exit included); a
     return counts as a new customer. CallError when the counts hold no moves over so many periods.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [("a", 1, "fresh"), ("a", 2, "steady"), ("a", 3, "steady")]
+    >>> rows += [("b", 2, "fresh"), ("b", 3, "left")]
+    >>> frame = pd.DataFrame(rows, columns=["customer", "period", "state"])
+    >>> tally = cf.count(cf.read_history(frame, states))
+    >>> kept = revenue_retention_actual(tally, {"fresh": 5, "steady": 20}, window=1)
+    >>> kept.query("cohort == '2'")[["measure", "value"]].values.tolist()  # 20 of 25
+    [['gross', 0.8], ['net', 0.8]]
     """
     steps = tally.table("steps")
     found = steps[steps["k"] == window]
