@@ -16,6 +16,7 @@ SUMMARY = {
     "fit": "Rates of every move, with intervals.",
     "project": "The mix period by period, where it settles, time to exit.",
     "run": "All of it into one folder, with the report.",
+    "sql": "The counting statement for a warehouse.",
 }
 EXAMPLES = """\
   cohortflow demo veg                     write the demo scenario into the folder veg

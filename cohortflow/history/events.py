@@ -100,10 +100,7 @@ def _clock(reading: Reading) -> Clock:
 
 def _settle_repeats(reading: Reading) -> None:
     engine, has = reading.engine, reading.loaded.has
-    clocked = bool(
-        reading.study.calendar.kind != "step"
-        and engine.one("SELECT coalesce(bool_or(t % 86400000000 <> 0), false) FROM rows WHERE clock")
-    )
+    clocked = reading.whole.clocked if reading.whole else has_clock_times(reading)
     repeats = find_repeats(
         engine,
         rows=reading.loaded.rows,
@@ -121,16 +118,31 @@ def _settle_repeats(reading: Reading) -> None:
         reading.found("identical_rows_kept", rows=len(repeats.kept), lines=reading.shown(repeats.kept))
 
 
+def has_clock_times(reading: Reading) -> bool:
+    """Whether any instant carries a time of day."""
+    if reading.study.calendar.kind == "step":
+        return False
+    sql = "SELECT coalesce(bool_or(t % 86400000000 <> 0), false) FROM rows WHERE clock"
+    return bool(reading.engine.one(sql))
+
+
+def instants_present(reading: Reading) -> tuple[int | None, int | None]:
+    """First and last instant of good rows."""
+    low, high = reading.engine.rows("SELECT min(t), max(t) FROM rows WHERE fault = 0 AND code >= 0")[0]
+    return low, high
+
+
 def _window(reading: Reading, clock: Clock) -> Window:
     """The counted window; InputError when nothing lies in it."""
     study, calendar = reading.study, reading.study.calendar
-    low, high = reading.engine.rows("SELECT min(t), max(t) FROM rows WHERE fault = 0 AND code >= 0")[0]
+    low, high = reading.whole.instants if reading.whole else instants_present(reading)
     if low is None:
         raise InputError(
             "No row of the extract can be used: none has a readable time, an id and an event that the study names. "
             f"The events known are {listed(study.known_events)}; the accounting of `check` says what the rows lack."
         )
     if calendar.kind == "step":
+        assert high is not None
         last = int(high)
         return _with_warm_up(study, int(low), int(low), last, -(2**62), last + 1, last + 1)
     if study.as_of is None:

@@ -34,7 +34,7 @@ def read_state_rows(reading: Reading) -> Sweep:
     """Label and count the loaded rows of a history of states."""
     engine = reading.engine
     reading.refuse_missing_ids()
-    _map_labels(reading)
+    map_labels(reading)
     first, last, periods = _window(reading)
     reading.outcome = _outcome_sql(reading, last)
     engine.run("CREATE TABLE IF NOT EXISTS aside_rows (r BIGINT)")
@@ -53,7 +53,7 @@ def read_state_rows(reading: Reading) -> Sweep:
 
 
 # ---- periods ----
-def _map_labels(reading: Reading) -> None:
+def map_labels(reading: Reading) -> None:
     """Fill `labels` (label, p); rows whose label cannot be read get a fault."""
     engine, spec = reading.engine, reading.study.input
     found = engine.rows(f"SELECT DISTINCT label FROM rows WHERE fault = 0 ORDER BY 1 LIMIT {MOST_LABELS + 1}")
@@ -79,10 +79,7 @@ def _map_labels(reading: Reading) -> None:
 def _window(reading: Reading) -> tuple[int, int, list[int]]:
     """(first, last, periods with rows): ordinals of the counted window."""
     study, calendar = reading.study, reading.study.calendar
-    found = reading.engine.rows(
-        "SELECT DISTINCT p FROM rows JOIN labels USING (label) WHERE fault = 0 AND code >= 0 ORDER BY 1"
-    )
-    periods = [int(r[0]) for r in found]
+    periods = list(reading.whole.periods) if reading.whole else periods_present(reading)
     if study.input.log_start is not None and calendar.kind != "step":
         periods = [p for p in periods if p >= calendar.ordinal(study.input.log_start)]
     last = study.last_complete
@@ -97,6 +94,14 @@ def _window(reading: Reading) -> tuple[int, int, list[int]]:
     if last is not None and kept[-1] < last:
         reading.found("extract_ends_early", last_rows=calendar.label(kept[-1]), as_of=str(study.as_of))
     return kept[0], kept[-1], kept
+
+
+def periods_present(reading: Reading) -> list[int]:
+    """Ordinals of the periods with good rows, ascending."""
+    found = reading.engine.rows(
+        "SELECT DISTINCT p FROM rows JOIN labels USING (label) WHERE fault = 0 AND code >= 0 ORDER BY 1"
+    )
+    return [int(r[0]) for r in found]
 
 
 def _outcome_sql(reading: Reading, last: int) -> str:

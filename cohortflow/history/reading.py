@@ -15,6 +15,7 @@ from cohortflow.history.columns import FAULTS, id_missing_sql
 from cohortflow.history.engine import Engine
 from cohortflow.history.lines import LineFinder
 from cohortflow.history.load import Loaded, Progress
+from cohortflow.history.whole import Whole
 from cohortflow.periods import Calendar
 from cohortflow.record import Record
 from cohortflow.states import States
@@ -84,6 +85,7 @@ class Reading:
     """A reading in progress on one engine.
 
     outcome : SQL giving the outcome code of a row of `rows`: 0 used, else FAULTS or SET_ASIDE
+    whole : what must be known of the whole extract when this is a part of it (see distribute.py), else None
     Table `aside_rows` (r) holds the record numbers of rows set aside while labelling.
     """
 
@@ -93,6 +95,7 @@ class Reading:
     progress: Progress
     outcome: str = "fault"
     findings: list[Finding] = field(default_factory=list)
+    whole: Whole | None = None
 
     def found(
         self, code: str, *, rows: int = 0, customers: int = 0, serious: bool = True, **detail: Any
@@ -103,15 +106,9 @@ class Reading:
 
     def refuse_missing_ids(self) -> None:
         """InputError when too many rows have no id: the extract is not what it should be."""
-        missing = int(self.engine.one("SELECT count(*) FROM rows WHERE fault = 1"))
-        whole = self.loaded.rows
-        if whole and missing > MOST_MISSING * whole:
-            name = self.study.input.customer
-            raise InputError(
-                f'The column "{name}" is blank or a placeholder in {missing:,} of {whole:,} rows '
-                f"({100 * missing / whole:.1f} %); at most {100 * MOST_MISSING:.0f} % are tolerated. See whether "
-                "it is the right column (`customer` in [input]), or repair the extract."
-            )
+        if self.whole is None:
+            missing = int(self.engine.one("SELECT count(*) FROM rows WHERE fault = 1"))
+            check_missing(missing, self.loaded.rows, self.study.input.customer)
 
     def file_of(self, row: str = "rowid") -> str:
         """SQL for the number of the file that a row came from."""
@@ -264,6 +261,16 @@ class Reading:
         """Fingerprints of the sources."""
         return tuple(
             InputFile(s.name, s.size, s.sha256, s.rows + len(s.bad), s.shown) for s in self.loaded.sources
+        )
+
+
+def check_missing(missing: int, rows: int, column: str | None) -> None:
+    """InputError when more than 5 % of the rows have no id."""
+    if missing > MOST_MISSING * rows:
+        raise InputError(
+            f'The column "{column}" is blank or a placeholder in {missing:,} of {rows:,} rows '
+            f"({100 * missing / rows:.1f} %); at most {100 * MOST_MISSING:.0f} % are tolerated. See whether "
+            "it is the right column (`customer` in [input]), or repair the extract."
         )
 
 

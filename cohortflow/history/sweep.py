@@ -109,7 +109,7 @@ class Sweep:
     def refuse_without_exits(self, any_exit: bool) -> None:
         """NotIdentified when exits are declared and nobody ever reached one."""
         exits = self.reading.study.states.exits
-        if exits and not any_exit:
+        if exits and not any_exit and self.reading.whole is None:
             raise NotIdentified(
                 f"No customer ever reached an exit ({listed(exits)}), so how many leave cannot be estimated. The "
                 "extract may hold only today's customers: take it from all who ever were customers. In a history of "
