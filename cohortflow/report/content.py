@@ -108,6 +108,7 @@ class Section:
     lead: tuple[str, ...] = ()
     exhibits: tuple[Exhibit, ...] = ()
     points: tuple[str, ...] = ()
+    cautions: tuple[str, ...] = ()
     terms: tuple[tuple[str, str, str], ...] = ()
 
 

@@ -19,6 +19,7 @@ from cohortflow.report.chart.style import NARROW, THEME, WIDE, svg
 from cohortflow.report.content import Content, Exhibit
 from cohortflow.report.sections import sections_of
 from cohortflow.report.rounding import percent
+from cohortflow.report.table import split
 from cohortflow.report.text import clean
 
 TITLES = {
@@ -125,5 +126,5 @@ def _templates() -> Environment:
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    env.filters.update(clean=clean, percent=percent)
+    env.filters.update(clean=clean, percent=percent, split=split)
     return env

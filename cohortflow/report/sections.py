@@ -204,7 +204,7 @@ def _rests(facts: Facts, tables: Tables) -> Section:
         exhibits.append(Exhibit("adequacy", table=_adequacy_table(tables["adequacy"]), open=True))
     lead = ("The projection rests on these assumptions:",)
     return Section("rests", "What this rests on, and cautions", lead, tuple(exhibits),
-                   points=(*assumptions(facts), *CAUTIONS))  # fmt: skip
+                   points=assumptions(facts), cautions=CAUTIONS)  # fmt: skip
 
 
 def _adequacy_table(rows: pd.DataFrame) -> Table:

@@ -10,7 +10,7 @@ import csv
 import io
 import json
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -23,6 +23,7 @@ from cohortflow.report.text import clean, neutral, width, wrap
 WIDTH = 80
 GAP = "  "
 NARROWEST, TALLEST, HEAD_ROOM = 8, 3, 14
+PAPER = 120
 
 
 @dataclass(frozen=True)
@@ -51,6 +52,47 @@ class Table:
                 f'Row {off[0] + 1} of the table "{self.caption}" has {len(self.rows[off[0]])} cells for '
                 f"{len(self.heads)} headings."
             )
+
+
+def split(table: Table, *, room: int = PAPER) -> list[Table]:
+    """The table in parts that fit a printed page (about `room` signs across), each led by the first column.
+
+    >>> wide = Table("Rates", ("from", *"abcdef"), (("weekly", *["12.3%"] * 6),))
+    >>> [part.heads for part in split(wide, room=30)]
+    [('from', 'a', 'b', 'c'), ('from', 'd', 'e', 'f')]
+    """
+    cells = [table.heads, *table.rows]
+    wide = [_across(cells, i, i in table.texts) for i in range(len(table.heads))]
+    parts = _columns_within(wide, room)
+    for less in range(room - 1, 0, -1):  # as many parts, but of like widths
+        closer = _columns_within(wide, less)
+        if len(closer) > len(parts):
+            break
+        parts = closer
+    return [_part(table, columns) for columns in parts]
+
+
+def _columns_within(wide: Sequence[int], room: int) -> list[list[int]]:
+    parts, current = [], [0]
+    for i in range(1, len(wide)):
+        if sum(wide[j] for j in [*current, i]) > room and len(current) > 1:
+            parts.append(current)
+            current = [0]
+        current.append(i)
+    return [*parts, current]
+
+
+def _across(cells: Sequence[Sequence[str]], column: int, is_text: bool) -> int:
+    body = max((width(clean(row[column])) for row in cells[1:]), default=0)
+    head = max((width(word) for word in clean(cells[0][column]).split()), default=0)
+    return min(max(body, min(head, HEAD_ROOM)), 24 if is_text else 40) + len(GAP)
+
+
+def _part(table: Table, columns: list[int]) -> Table:
+    texts = tuple(k for k, i in enumerate(columns) if i in table.texts)
+    heads = tuple(table.heads[i] for i in columns)
+    rows = tuple(tuple(row[i] for i in columns) for row in table.rows)
+    return replace(table, heads=heads, rows=rows, texts=texts)
 
 
 def plain_text(table: Table, *, columns: int = WIDTH) -> str:

@@ -84,8 +84,8 @@ VERDICTS: Mapping[str, tuple[str, str]] = MappingProxyType(
 )  # fmt: skip
 EXPLAIN: Mapping[str, str] = MappingProxyType(
     {
-        "interval": "An interval is the range of rates that the counts allow: over many studies made like this one, "
-                    "about as many intervals as the stated level would hold the true rate. It speaks of chance in the "
+        "interval": "An interval is the range of rates that the counts allow: if many studies were made like this "
+                    "one, the stated share of their intervals would hold the true rate. It speaks of chance in the "
                     "counts, not of mistakes in the data or of a world that changes.",
         "band": "A band is the range in which the number of customers should end, at the stated level, if the world "
                 "goes on as it did in the periods counted. It holds the parts that are listed beside it and no others.",
