@@ -185,8 +185,13 @@ def _fault(study: Any, row: Mapping[str, Any], event: str, known: set[str]) -> s
 
 
 def _paid_to(study: Any, text: str) -> int | None:
-    """Period in which a paid-up-to date falls."""
-    return study.calendar.ordinal(_instant(text, study)[0].date()) if text.strip() else None
+    """Period in which a paid-up-to date falls; days outside an own calendar are long past or far ahead."""
+    if not text.strip():
+        return None
+    day, own = _instant(text, study)[0].date(), study.calendar.own
+    if own and not own[0][1] <= day <= own[-1][2]:
+        return -(10**6) if day < own[0][1] else 10**6
+    return study.calendar.ordinal(day)
 
 
 def _segment(study: Any, row: Mapping[str, Any]) -> tuple[str, ...]:
@@ -209,7 +214,7 @@ def _tell_events(study: Any, raw: Sequence[Mapping[str, Any]]) -> Told:
             continue
         instant, clock = _instant(_text(row, study.input.time), study)
         whole = tuple(str(v) for v in row.values())
-        if whole in seen and (clock or study.input.event_id):
+        if whole in seen and (clock or _text(row, study.input.event_id).strip()):
             outcomes[number] = ("duplicate", "identical")
             continue
         seen.add(whole)

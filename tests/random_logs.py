@@ -27,7 +27,28 @@ KINDS = (
     "due_within",
 )
 FIRST_DAY = date(2024, 1, 1)
-SPAN = {"day": 18, "week": 120, "month": 500, "quarter": 1500}
+SPAN = {"day": 18, "week": 120, "month": 500, "quarter": 1500, "own": 450}
+
+
+def four_four_five(quarters: int = 7) -> tuple[tuple[str, date, date], ...]:
+    """A calendar of 4, 4 and 5 weeks from late 2023 on; paid-up-to days may lie beyond it."""
+    rows, day = [], date(2023, 11, 27)
+    for place in range(3 * quarters):
+        end = day + timedelta(weeks=5 if place % 3 == 2 else 4, days=-1)
+        rows.append((f"P{place}", day, end))
+        day = end + timedelta(days=1)
+    return tuple(rows)
+
+
+CALENDARS = (
+    Calendar("month"),
+    Calendar("month"),
+    Calendar("week"),
+    Calendar("week", week_starts="thursday"),
+    Calendar("quarter", fiscal_year_start=2),
+    Calendar("day"),
+    Calendar("own", own=four_four_five()),
+)
 FILLER = "zoe"  # buys steadily, so that a few faulty rows stay a small share of the extract
 
 
@@ -82,7 +103,8 @@ def as_states(rules: Sequence[StateRule], impossible: Sequence[tuple[str, str]] 
 
 @st.composite
 def studies(draw: Any) -> Study:
-    kind = draw(st.sampled_from(["month", "month", "week", "quarter", "day"]))
+    calendar = draw(st.sampled_from(CALENDARS))
+    kind = calendar.kind
     rules = draw(rule_files())
     optional = st.booleans()
     last = FIRST_DAY + timedelta(days=draw(st.integers(SPAN[kind] * 3 // 4, SPAN[kind])))
@@ -109,7 +131,7 @@ def studies(draw: Any) -> Study:
     impossible = draw(st.just([]) | st.lists(pair, max_size=2))
     return Study(
         as_states(rules, impossible),
-        Calendar(kind),
+        calendar,
         as_of=last,
         rules=rules,
         input=spec,
