@@ -156,7 +156,7 @@ class _Parts:
                     target[g, columns] = own @ total[at][rows]
             self._member_slopes(target, rows, weight, start)
 
-    def _member_slopes(self, target: Array, rows: Array, weight: Array, start: int) -> None:
+    def _member_slopes(self, target: Array, rows: NDArray[np.int64], weight: Array, start: int) -> None:
         z, group = self.z[rows], self.patterns.group[rows]
         for h in np.unique(group):
             own = group == h
