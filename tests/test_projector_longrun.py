@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from cohortflow.chain import Chain
+from cohortflow.errors import CallError
 from cohortflow.projector.longrun import long_run
 from cohortflow.states import States
 from tests.projector_cases import (
@@ -41,3 +42,8 @@ def test_land_of_oz_returns():
     # from rain, by hand: total variation .1, .025, .00625 after 1, 2, 3 steps -> settled to 1 % after 3
     assert oz.value("periods_to_settle", "", "nice") == 4  # .8, .2, .05, .0125, .003125
     assert "long run of 3 states per month: unique_limit" in repr(oz) and oz.about()["method"] == "none"
+
+
+def test_a_start_without_customers_is_refused():
+    with pytest.raises(CallError, match="start adds up to 0 customers; leave it out"):
+        long_run(CHAIN, start={"fresh": 0})

@@ -20,6 +20,7 @@ import numpy as np
 import pandas as pd
 
 from cohortflow.chain import Draws, Schedule
+from cohortflow.errors import CallError
 from cohortflow.projector import accept
 from cohortflow.projector.accept import Array
 from cohortflow.projector.delta import doubt_of, quantiles
@@ -154,6 +155,8 @@ def _starts(schedule: Schedule, start: Any) -> dict[str, Array]:
     out = {name: np.eye(len(states))[states.index(name)] for name in states.remaining}
     if start is not None:
         counts = accept.opening(None, start, states)
+        if counts.sum() <= 0:
+            raise CallError("start adds up to 0 customers; leave it out, and limits are given from each state.")
         out["start"] = counts / counts.sum()
     return out
 
