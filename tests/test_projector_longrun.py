@@ -46,4 +46,4 @@ def test_land_of_oz_returns():
 
 def test_a_start_without_customers_is_refused():
     with pytest.raises(CallError, match="start adds up to 0 customers; leave it out"):
-        long_run(CHAIN, start={"fresh": 0})
+        long_run(Chain(States(["a", "b"]), [[0.5, 0.5], [0.5, 0.5]]), start={"a": 0})

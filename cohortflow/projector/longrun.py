@@ -156,7 +156,9 @@ def _starts(schedule: Schedule, start: Any) -> dict[str, Array]:
     if start is not None:
         counts = accept.opening(None, start, states)
         if counts.sum() <= 0:
-            raise CallError("start adds up to 0 customers; leave it out, and limits are given from each state.")
+            raise CallError(
+                "start adds up to 0 customers; leave it out, and limits are given from each state."
+            )
         out["start"] = counts / counts.sum()
     return out
 
