@@ -160,7 +160,7 @@ def paired(base: Array, changed: Array, drawn: tuple[Array, Array] | None, level
         nothing = np.full_like(base, np.nan)
         return Pair(base, changed, nothing, nothing)
     low, high = quantile_band(drawn[1] - drawn[0], level)
-    lost = np.isnan(base)
+    lost = np.isnan(base + changed)
     return Pair(base, changed, np.where(lost, np.nan, low), np.where(lost, np.nan, high))
 
 

@@ -46,10 +46,12 @@ def walk_paths(
     prices: Prices,
     *,
     draws: Draws | None = None,
+    shift: Array | None = None,
 ) -> Paths:
     """Paths over the H periods of `inflow` (D or 1, H, K), from the opening counts (K,).
 
     prices : step -> Terms (None: no money is counted)
+    shift : (D, K) draws of the error of estimated amounts; it counts where the terms have an error
     """
     schedule = course.schedule
     size, periods = len(schedule.states), inflow.shape[-2]
@@ -59,21 +61,19 @@ def walk_paths(
     )
     short = 0.0
     for c in range(len(schedule.components)):
-        short = max(short, _component(course, c, start, inflow, prices, draws, out))
+        short = max(short, _component(course, c, start, inflow, Step(course, c, prices, draws, shift), out))
     return Paths(out.counts, out.paid, out.treated, short)
 
 
-def _component(
-    course: Course, c: int, start: Array, inflow: Array, prices: Prices, draws: Draws | None, out: Paths
-) -> float:
+def _component(course: Course, c: int, start: Array, inflow: Array, step_of: Step, out: Paths) -> float:
     """Add one component's customers and money to `out`."""
     part = course.schedule.components[c]
     fold = part.collapse(len(course.schedule.states))
+    draws = step_of.draws
     begin, join = (part.start[None], part.join[None]) if draws is None else (draws.start[c], draws.join[c])
     x = np.broadcast_to(through(start[None], begin), (len(out.counts), len(part.report)))
     arriving = _arriving(inflow, join)
     out.counts[:, 0] += x @ fold
-    step_of = Step(course, c, prices, draws)
     for h in range(inflow.shape[-2]):
         matrices, money, treated = step_of(h)
         out.treated[:, h] += x @ treated
@@ -87,8 +87,16 @@ def _component(
 class Step:
     """Matrices, money and treated states of each step; what stays the same from step to step is made once."""
 
-    def __init__(self, course: Course, component: int, prices: Prices, draws: Draws | None) -> None:
-        self.course, self.component, self.prices, self.draws = course, component, prices, draws
+    def __init__(
+        self,
+        course: Course,
+        component: int,
+        prices: Prices,
+        draws: Draws | None,
+        shift: Array | None = None,
+    ) -> None:
+        self.course, self.component, self.prices = course, component, prices
+        self.draws, self.shift = draws, shift
         self.part = course.schedule.components[component]
         self.short, self.key, self.held = 0.0, None, None
 
@@ -108,7 +116,7 @@ class Step:
             matrices, share = self.course.drawn(self.draws, self.component, step)
             self.short = max(self.short, share)
         matrices = filled(matrices)
-        return matrices, _expected_pay(matrices, self.part.report, terms), self._treated(step)
+        return matrices, expected_pay(matrices, self.part.report, terms, self.shift), self._treated(step)
 
     def _treated(self, step: int) -> Array:
         states, out = self.course.schedule.states, np.zeros(len(self.course.schedule.states))
@@ -118,12 +126,22 @@ class Step:
         return (out > 0).astype(float)[self.part.report]
 
 
-def _expected_pay(matrices: Array, report: Array, terms: Terms | None) -> Array | None:
-    """(D or 1, m) sum_j M_ij y_ij."""
+def expected_pay(
+    matrices: Array, report: NDArray[np.int64], terms: Terms | None, shift: Array | None = None
+) -> Array | None:
+    """(D or 1, m) sum_j M_ij y_ij, the amounts of a state being `shift` (D, K) off where they are
+    estimates.
+    """
     if terms is None:
         return None
-    amounts = terms.amounts()[np.ix_(report, report)]
-    return np.einsum("dij,ij->di", matrices, amounts)
+    pay = np.einsum("dij,ij->di", matrices, terms.amounts()[np.ix_(report, report)])
+    if shift is None or terms.error is None:
+        return pay
+    off = (shift * (np.diag(terms.error) > 0))[:, report]
+    more = terms.weight * off + (1 - terms.weight) * np.einsum(
+        "dij,dj->di", np.broadcast_to(matrices, (len(off), *matrices.shape[1:])), off
+    )
+    return pay + (more if terms.once is None else np.where(terms.once[report], 0.0, more))
 
 
 def through(x: Array, matrices: Array) -> Array:

@@ -122,6 +122,13 @@ class Setting:
         new = joiners_under(self.scenario, joined, self.schedule.states, kept)
         return (joined + back).mean(axis=1), (new + back).mean(axis=1)
 
+    def drawn_shift(self, size: int, rng: np.random.Generator) -> Array | None:
+        """(D, K) draws of the error of estimated amounts; None where amounts are given."""
+        terms = self.money.terms
+        if terms is None or terms.error is None:
+            return None
+        return rng.multivariate_normal(np.zeros(len(terms.error)), terms.error, size, method="eigh")
+
     def costs(self, treated: Array) -> Array:
         """(D, H) undiscounted costs, from the customers treated (D, H)."""
         on = np.array([self.window.holds(h) for h in range(self.periods)])
@@ -167,10 +174,13 @@ def _priced(terms: Terms | None, plan: Scenario, schedule: Schedule) -> Terms | 
     """The terms with the scenario's prices."""
     if terms is None or plan.per_period is None:
         return terms
-    amounts = np.array(terms.per_period)
+    amounts, error = np.array(terms.per_period), terms.error
+    given = schedule.states.mask(plan.per_period)
     for name, amount in plan.per_period.items():
         amounts[schedule.states.index(name)] = amount
-    return replace(terms, per_period=amounts)
+    if error is not None:
+        error = np.where(given[:, None] | given[None], 0.0, error)
+    return replace(terms, per_period=amounts, error=error)
 
 
 def _constant(terms: Terms | None) -> Prices:

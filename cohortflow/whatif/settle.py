@@ -40,14 +40,20 @@ class Settled:
 
 
 def settle(
-    course: Course, start: Array, inflow: Array, prices: Prices, *, draws: Draws | None = None
+    course: Course,
+    start: Array,
+    inflow: Array,
+    prices: Prices,
+    *,
+    draws: Draws | None = None,
+    shift: Array | None = None,
 ) -> Settled:
     """Where it settles when `inflow` (D or 1, K) join in every period, from the opening counts (K,)."""
     size = len(course.schedule.states)
     wide = draws.size if draws is not None else 1
     total = Settled(np.zeros((wide, size)), np.zeros(wide), np.zeros(wide))
     for c in range(len(course.schedule.components)):
-        ring = _Ring.of(course, c, prices, draws)
+        ring = _Ring(Step(course, c, prices, draws, shift))
         reason = ring.endless(inflow.max(axis=0))
         if reason:
             nothing = np.full(wide, np.nan)
@@ -59,24 +65,17 @@ def settle(
 class _Ring:
     """The matrices of one component that come round for ever."""
 
-    def __init__(self, course: Course, component: int, prices: Prices, draws: Draws | None) -> None:
-        self.part = course.schedule.components[component]
-        self.course, self.component, self.draws = course, component, draws
-        self.states = course.schedule.states
-        self.begins = max(course.settled_after, 0 if self.part.tail == "cycle" else len(self.part.matrices))
-        self.step_of = Step(course, component, prices, draws)
-        self.length = len(self.part.matrices) if self.part.tail == "cycle" else 1
+    def __init__(self, step_of: Step) -> None:
+        self.step_of, self.part, self.draws = step_of, step_of.part, step_of.draws
+        self.states = step_of.course.schedule.states
+        season = self.part.tail == "cycle"
+        self.begins = max(step_of.course.settled_after, 0 if season else len(self.part.matrices))
+        self.length = len(self.part.matrices) if season else 1
         self.exits = self.states.exit_mask[self.part.report]
-        self.join = self.part.join[None] if draws is None else draws.join[component]
-        self.opening = self.part.start[None] if draws is None else draws.start[component]
-
-    @classmethod
-    def of(cls, course: Course, component: int, prices: Prices, draws: Draws | None) -> _Ring:
-        ring = cls(course, component, prices, draws)
-        ring.turns = [ring.step_of(ring.begins + k) for k in range(ring.length)]
-        return ring
-
-    turns: list[tuple[Array, Array | None, Array]]
+        c = step_of.component
+        self.join = self.part.join[None] if self.draws is None else self.draws.join[c]
+        self.opening = self.part.start[None] if self.draws is None else self.draws.start[c]
+        self.turns = [step_of(self.begins + k) for k in range(self.length)]
 
     def product(self, first: int = 0) -> Array:
         """(D or 1, m, m) M_first ... M_{n-1}."""
@@ -149,10 +148,12 @@ def _limit(matrices: Array) -> Array:
 
 
 def _solved(system: Array, right: Array) -> Array:
-    """x of each system (D or 1, r, r) x = right (D, r); NaN where one is singular."""
+    """x of each system (D or 1, r, r) x = right (D, r); NaN where it has no solution (nobody can leave)."""
     if len(system) == 1:
         return np.linalg.solve(system[0], right.T).T
     try:
-        return np.linalg.solve(system, right[..., None])[..., 0]
+        out = np.linalg.solve(system, right[..., None])[..., 0]
     except np.linalg.LinAlgError:
         return np.full_like(right, np.nan)
+    senseless = (out < -1e-6 * np.abs(out).max(axis=1, keepdims=True)).any(axis=1)
+    return np.where(senseless[:, None], np.nan, out)

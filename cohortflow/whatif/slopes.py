@@ -17,7 +17,7 @@ tests.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -161,8 +161,9 @@ def _for_ever(
         whole[k, :, block.onward(k)] = filled(part.matrices[position])
         whole[k, block.exits] = 0.0
         whole[k, block.exits, k, block.exits] = 1.0
-    many = Terms(
-        np.tile(terms.per_period, n), np.tile(terms.on_move, (n, n)), terms.factor, terms.weight, terms.lag
+    once = None if terms.once is None else np.tile(terms.once, n)
+    many = replace(
+        terms, per_period=np.tile(terms.per_period, n), on_move=np.tile(terms.on_move, (n, n)), once=once
     )
     found = value_derivative(whole.reshape(n * m, n * m), many, horizon=None)
     weights = block.at_once(law).ravel()
@@ -184,7 +185,8 @@ def _for_ever(
 def _expanded(terms: Terms, report: NDArray[np.int64]) -> Terms:
     """The terms over expanded states."""
     on_move = terms.on_move[np.ix_(report, report)]
-    return Terms(terms.per_period[report], on_move, terms.factor, terms.weight, terms.lag)
+    once = None if terms.once is None else terms.once[report]
+    return replace(terms, per_period=terms.per_period[report], on_move=on_move, once=once)
 
 
 def _remaining(target: Target, schedule: Schedule) -> Slopes:

@@ -72,9 +72,10 @@ def what_if(
     drawn = accept.draws_of(model, draws, generator, covariance)
     asked = _Asked(at, weights, accept.as_level(level), drawn)
     estimate = asked.paths(at.inflows(), None)
-    scattered = None if drawn is None else asked.paths(at.inflows(drawn.size, generator), drawn)
+    shift = None if drawn is None else at.drawn_shift(drawn.size, generator)
+    scattered = None if drawn is None else asked.paths(at.inflows(drawn.size, generator), drawn, shift)
     by_period = asked.by_period(estimate, scattered)
-    settled, why = asked.settled()
+    settled, why = asked.settled(shift)
     return WhatIf(
         plan, at.schedule, at.base, by_period, asked.total(by_period, estimate, scattered), settled, level,
         "none" if drawn is None else "draws", 0 if drawn is None else drawn.size, at.money.currency,
@@ -105,10 +106,10 @@ class _Asked:
     level: float
     draws: Draws | None
 
-    def paths(self, inflows: Two, draws: Draws | None) -> tuple[Paths, Paths]:
+    def paths(self, inflows: Two, draws: Draws | None, shift: Array | None = None) -> tuple[Paths, Paths]:
         start = self.at.start
         first, second = (
-            walk_paths(side.course, start, inflow, side.prices, draws=draws)
+            walk_paths(side.course, start, inflow, side.prices, draws=draws, shift=shift)
             for side, inflow in zip(self.at.sides, inflows, strict=True)
         )
         return first, second
@@ -120,7 +121,7 @@ class _Asked:
         unknown = self._undefined()
         out = {}
         for name, weight in self.weights.items():
-            lost = unknown[1:, weight != 0].any(axis=1)
+            lost = unknown[:, 1:, weight != 0].any(axis=2)
             two, many = (
                 None if paths is None else tuple(p.counts[:, 1:] @ weight for p in paths)
                 for paths in (estimate, scattered)
@@ -128,7 +129,7 @@ class _Asked:
             out[name] = self._pair(two, many, lost)
         if self.at.money.terms is None:
             return out
-        lost = unknown[1:].any(axis=1)
+        lost = unknown[:, 1:].any(axis=2)
         figures, many = (None if paths is None else self._money(paths) for paths in (estimate, scattered))
         assert figures is not None
         return out | {
@@ -144,7 +145,7 @@ class _Asked:
         """Over all periods: value, cost, net; the cost that breaks even; when it has paid."""
         if self.at.money.terms is None:
             return {}
-        lost = np.isnan(by_period["net"].changed).any()
+        lost = np.isnan([by_period["net"].base, by_period["net"].changed]).any(axis=1)
         figures, many = (
             None
             if p is None
@@ -158,33 +159,34 @@ class _Asked:
             ("break_even_cost", bool(self.at.under.course.changes), self._break_even),
             ("payback_periods", self.at.scenario.costs, self._payback),
         ):
-            if wanted and not lost:
+            if wanted and not lost.any():
                 drawn = None if scattered is None else measure(scattered)
                 out[name] = alone(float(measure(estimate)[0]), drawn, self.level)
         return out
 
-    def settled(self) -> tuple[dict[str, Pair], str]:
+    def settled(self, shift: Array | None) -> tuple[dict[str, Pair], str]:
         """A period in the long run, and why there is none."""
         estimate = self._settle(None)
         reason = estimate[0].reason or estimate[1].reason
-        drawn = None if self.draws is None or reason else self._settle(self.draws)
+        drawn = None if self.draws is None or reason else self._settle(self.draws, shift)
         figures, many = (None if s is None else self._settled_figures(s) for s in (estimate, drawn))
         assert figures is not None
         pairs = {n: self._pair(two, None if many is None else many[n]).only() for n, two in figures.items()}
         return pairs, reason
 
     # ---- inner ----
-    def _pair(self, two: Any, many: Any, lost: Any = False) -> Pair:
-        base, changed = (np.where(lost, np.nan, v[0]) for v in two)
+    def _pair(self, two: Any, many: Any, lost: Any = (False, False)) -> Pair:
+        """lost : without and with the scenario, where nothing is known"""
+        base, changed = (np.where(gone, np.nan, v[0]) for v, gone in zip(two, lost, strict=True))
         return paired(base, changed, many, self.level)
 
     def _undefined(self) -> NDArray[np.bool_]:
-        """(H+1, K) what can be reached from a state without data, with or without the scenario."""
+        """(2, H+1, K) what can be reached from a state without data, without and with the scenario."""
         at = self.at
-        out = np.zeros((at.periods + 1, len(at.schedule.states)), dtype=bool)
+        out = np.zeros((2, at.periods + 1, len(at.schedule.states)), dtype=bool)
         if at.schedule.unknown:
-            for side, inflow in zip(at.sides, at.inflows(), strict=True):
-                out |= walk(side.course.explicit(at.periods), at.start, at.periods, inflow[0]).undefined
+            for n, (side, inflow) in enumerate(zip(at.sides, at.inflows(), strict=True)):
+                out[n] = walk(side.course.explicit(at.periods), at.start, at.periods, inflow[0]).undefined
         return out
 
     def _money(self, paths: tuple[Paths, Paths]) -> dict[str, Two]:
@@ -208,9 +210,9 @@ class _Asked:
         base, net = self._money(paths)["net"]
         return payback(net - base, min(self.at.begins, self.at.periods - 1))
 
-    def _settle(self, draws: Draws | None) -> tuple[Settled, Settled]:
+    def _settle(self, draws: Draws | None, shift: Array | None = None) -> tuple[Settled, Settled]:
         first, second = (
-            settle(side.course, self.at.start, inflow, side.later_prices, draws=draws)
+            settle(side.course, self.at.start, inflow, side.later_prices, draws=draws, shift=shift)
             for side, inflow in zip(self.at.sides, self.at.long_inflows(), strict=True)
         )
         return first, second
