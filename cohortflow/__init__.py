@@ -36,6 +36,7 @@ _HOME = {
     "Scenario": "whatif",
     "what_if": "whatif",
     "run": "runs",
+    "write_report": "report",
 }
 __all__ = ["__version__", *_HOME]
 
@@ -50,6 +51,8 @@ if TYPE_CHECKING:
 
 
 def __getattr__(name: str) -> Any:
+    if name == "report":  # charts and tables: cf.report.moves_chart(fit)
+        return importlib.import_module("cohortflow.report")
     if name not in _HOME:
         raise AttributeError(f"module 'cohortflow' has no attribute {name!r}")
     return getattr(importlib.import_module(f"cohortflow.{_HOME[name]}"), name)

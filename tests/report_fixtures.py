@@ -19,8 +19,8 @@ VEG_BOX = States(
 )  # fmt: skip
 SMALL = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
 HOSTILE = States(
-    ["<script>alert('x')</script>", "=HYPERLINK(\"http://x\")", "n" * 300, "عميل أسبوعي نشط", "毎週届ける箱", "🥕🥦 & more",
-     "$\\frac{1}{0}$ %s {0}", "gone"],
+    ["<script>alert('x')</script>", "=HYPERLINK(\"http://x\")", "n" * 300, "عميل أسبوعي نشط", "毎週届ける箱",
+     "🥕🥦 & more", "$\\frac{1}{0}$ %s {0}", "gone"],
     exits=["gone"], entries=["<script>alert('x')</script>"], away=["毎週届ける箱"],
 )  # fmt: skip
 FIFTEEN = States(
@@ -97,7 +97,8 @@ def rollforward(states: States, past: int = 24, ahead: int = 8) -> pd.DataFrame:
                      ("returned", "", joiners[own].sum() * 0.1)]  # fmt: skip
             lines += [("lost", e, flow[own, states.index(e)].sum()) for e in states.exits]
             lines += [("moved_in", "", flow[np.ix_(other, own)].sum()),
-                      ("moved_out", "", flow[np.ix_(own, other)].sum()), ("closing", "", bases[t][own].sum())]  # fmt: skip
+                      ("moved_out", "", flow[np.ix_(own, other)].sum()),
+                      ("closing", "", bases[t][own].sum())]  # fmt: skip
             rows += [("all", label, kind, state, line, exit_, value) for line, exit_, value in lines]
     return pd.DataFrame(rows, columns=["segment", "period", "kind", "state", "line", "exit", "customers"])
 
@@ -145,7 +146,11 @@ def exits(states: States) -> pd.DataFrame:
     reach = inverse @ matrix[np.ix_(stay, ~stay)]
     rows = []
     for i, origin in enumerate(states.remaining):
-        for measure, value in (("mean_time", time[i]), ("sd_time", 0.95 * time[i]), ("median_time", 0.7 * time[i])):
+        for measure, value in (
+            ("mean_time", time[i]),
+            ("sd_time", 0.95 * time[i]),
+            ("median_time", 0.7 * time[i]),
+        ):
             rows.append(("all", origin, measure, "", value, value * 0.9, value * 1.12))
         for j, name in enumerate(states.exits):
             p = reach[i, j]
@@ -154,7 +159,7 @@ def exits(states: States) -> pd.DataFrame:
 
 
 def long_run(states: States) -> pd.DataFrame:
-    matrix, (bases, joiners) = chain_of(states), _bases(states, 24, 8)
+    matrix, (_, joiners) = chain_of(states), _bases(states, 24, 8)
     stay = ~states.exit_mask
     settled = joiners[stay] @ np.linalg.inv(np.eye(stay.sum()) - matrix[np.ix_(stay, stay)])
     vector = np.full(stay.sum(), 1 / stay.sum())
@@ -210,8 +215,9 @@ def facts(states: States, **changes):
     from cohortflow.report.content import Facts
 
     settings = {
-        "title": "Hollin Weir veg box", "states": states, "calendar": CAL, "level": 0.9, "horizon": 8, "first": "2024-11",
-        "last": "2026-10", "as_of": "2026-10-31", "seed": 7, "customers": 9033, "moves": 9133, "verdict": "exits_only",
+        "title": "Hollin Weir veg box", "states": states, "calendar": CAL, "level": 0.9, "horizon": 8,
+        "first": "2024-11", "last": "2026-10", "as_of": "2026-10-31", "seed": 7, "customers": 9033, "moves": 9133,
+        "verdict": "exits_only",
         "parts": ("rates", "chance"), "version": "0.1.0",
     }  # fmt: skip
     return Facts(**{**settings, **changes})

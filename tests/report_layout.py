@@ -42,7 +42,11 @@ def _undrawn(figure: Figure) -> set[Text]:
 def clipped(figure: Figure) -> list[str]:
     """Texts that reach beyond the figure."""
     wide, high = figure.get_size_inches() * figure.dpi
-    return [t for t, x0, y0, x1, y1 in boxes(figure) if x0 < -TOUCH or y0 < -TOUCH or x1 > wide + TOUCH or y1 > high + TOUCH]
+    return [
+        t
+        for t, x0, y0, x1, y1 in boxes(figure)
+        if x0 < -TOUCH or y0 < -TOUCH or x1 > wide + TOUCH or y1 > high + TOUCH
+    ]
 
 
 def overlapping(figure: Figure) -> list[tuple[str, str]]:

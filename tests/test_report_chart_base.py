@@ -17,7 +17,9 @@ def test_a_change_is_claimed_only_when_the_band_leaves_today_out():
     live, last = rows["state"] == "all_live", rows["periods_ahead"] == 8
     today = rows.loc[live & (rows["periods_ahead"] == 0), "customers"].iloc[0]
     rows.loc[live & last, ["customers", "low", "high"]] = [today * 1.2, today * 1.1, today * 1.3]
-    assert "Live customers grow from" in title(base_chart(rows)) and "+20.0% in 8 months" in title(base_chart(rows))
+    assert "Live customers grow from" in title(base_chart(rows)) and "+20.0% in 8 months" in title(
+        base_chart(rows)
+    )
     rows.loc[live & last, ["customers", "low", "high"]] = [today * 0.8, today * 0.7, today * 0.9]
     assert "Live customers shrink from" in title(base_chart(rows))
     rows.loc[live & last, ["customers", "low", "high"]] = [today * 1.2, today * 0.9, today * 1.5]
@@ -41,12 +43,16 @@ def test_live_customers_totals_and_states_have_panels_exits_have_none():
 
 
 def test_every_panel_begins_at_zero():
-    assert all(a.get_ylim()[0] == 0 for a in base_chart(made.projection(S), made.rollforward(S), states=S).axes)
+    assert all(
+        a.get_ylim()[0] == 0 for a in base_chart(made.projection(S), made.rollforward(S), states=S).axes
+    )
 
 
 def test_periods_before_the_base_was_whole_are_left_out():
     past = made.rollforward(S)
-    late = past[(past["state"] == "all_live") & (past["line"] == "joined")].assign(line="unobserved_in", customers=0.0)
+    late = past[(past["state"] == "all_live") & (past["line"] == "joined")].assign(
+        line="unobserved_in", customers=0.0
+    )
     late.loc[late["period"] == "2025-01", "customers"] = 3000.0  # most of the base turned up in January
     import pandas as pd
 
@@ -58,8 +64,8 @@ def test_totals_are_summed_over_the_past():
     import pandas as pd
 
     rows = made.projection(S)
-    both = rows[rows["state"].isin(["weekly", "fortnightly"])].groupby(["segment", "period", "periods_ahead"],
-                                                                      as_index=False).sum(numeric_only=True)  # fmt: skip
+    boxes = rows[rows["state"].isin(["weekly", "fortnightly"])]
+    both = boxes.groupby(["segment", "period", "periods_ahead"], as_index=False).sum(numeric_only=True)
     rows = pd.concat([rows, both.assign(state="boxes", level=0.9)])
     totals = {"boxes": ("weekly", "fortnightly")}
     figure = base_chart(rows, made.rollforward(S), totals=totals, states=S)

@@ -36,14 +36,20 @@ def test_the_title_claims_a_lowest_state_only_when_intervals_are_apart():
     assert "a is the state least stayed in: 60.0% (52.0 to 68.0%) are still there a month later" in title
     close = TWO.copy()
     close.loc[close["from"].eq("b") & close["to"].eq("b"), ["low"]] = 0.65
-    assert "a keeps 60.0% (52.0 to 68.0%) of its customers" in " ".join(t.get_text() for t in state_diagram(close).texts)
+    assert "a keeps 60.0% (52.0 to 68.0%) of its customers" in " ".join(
+        t.get_text() for t in state_diagram(close).texts
+    )
 
 
 def test_a_state_without_data_says_so():
-    frame = rows(("a", "a", 5, 10, 0.5, 0.3, 0.7), ("a", "b", 5, 10, 0.5, 0.3, 0.7), ("b", "b", 0, 0, None, 0, 1))
+    frame = rows(
+        ("a", "a", 5, 10, 0.5, 0.3, 0.7), ("a", "b", 5, 10, 0.5, 0.3, 0.7), ("b", "b", 0, 0, None, 0, 1)
+    )
     assert "no data" in figures(state_diagram(frame, states=States(["a", "b"])))
 
 
 def test_nothing_known_at_all():
     frame = rows(("a", "a", 0, 0, None, 0, 1))
-    assert "No departure was counted" in " ".join(t.get_text() for t in state_diagram(frame, states=States(["a"])).texts)
+    assert "No departure was counted" in " ".join(
+        t.get_text() for t in state_diagram(frame, states=States(["a"])).texts
+    )

@@ -23,7 +23,9 @@ def title(figure):
 
 def test_the_soonest_state_is_named_only_when_its_interval_is_clear():
     clear = times(("a", "mean_time", 5, 4, 6), ("b", "mean_time", 9, 8, 10))
-    assert "Customers in a leave soonest: after 5.0 months (4.0 to 6.0) on average" in title(exit_time_chart(clear))
+    assert "Customers in a leave soonest: after 5.0 months (4.0 to 6.0) on average" in title(
+        exit_time_chart(clear)
+    )
     close = times(("a", "mean_time", 7, 4, 9), ("b", "mean_time", 9, 8, 10))
     assert "the intervals do not single out one state" in title(exit_time_chart(close))
 
@@ -44,7 +46,12 @@ def test_one_exit_needs_no_finding():
 
 
 def test_the_likeliest_exit_is_claimed_for_every_state_or_said_to_differ():
-    same = ways(("a", "x", 0.8, 0.7, 0.9), ("a", "y", 0.2, 0.1, 0.3), ("b", "x", 0.7, 0.6, 0.8), ("b", "y", 0.3, 0.2, 0.4))
+    same = ways(
+        ("a", "x", 0.8, 0.7, 0.9),
+        ("a", "y", 0.2, 0.1, 0.3),
+        ("b", "x", 0.7, 0.6, 0.8),
+        ("b", "y", 0.3, 0.2, 0.4),
+    )
     assert "From every state most leave by x: 70.0 to 80.0%" in title(exit_reason_chart(same))
     differ = same.assign(value=[0.8, 0.2, 0.3, 0.7], low=[0.7, 0.1, 0.2, 0.6], high=[0.9, 0.3, 0.4, 0.8])
     assert "it differs by state" in title(exit_reason_chart(differ))

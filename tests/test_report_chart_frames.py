@@ -22,7 +22,9 @@ def test_neither_record_nor_frame_is_refused():
 def test_segments_are_cut_and_unknown_ones_refused():
     frame = pd.DataFrame({"segment": ["shop", "web"], "x": [1, 2]})
     assert frame_of(frame, ["x"], segment="web")["x"].tolist() == [2]
-    with pytest.raises(CallError, match=r'There is no segment "webb" \(did you mean "web"\?\); there are "shop", "web"'):
+    with pytest.raises(
+        CallError, match=r'There is no segment "webb" \(did you mean "web"\?\); there are "shop", "web"'
+    ):
         frame_of(frame, ["x"], segment="webb")
 
 

@@ -16,7 +16,13 @@ def _groups(states, width):
     import cohortflow as cf
 
     names = list(states.names)[:5]
-    P = [[0.5, 0.3, 0.1, 0.05, 0.05], [0, 1, 0, 0, 0], [0, 0, 0.8, 0.2, 0], [0, 0, 0.5, 0.5, 0], [0, 0, 0, 0, 1]]
+    P = [
+        [0.5, 0.3, 0.1, 0.05, 0.05],
+        [0, 1, 0, 0, 0],
+        [0, 0, 0.8, 0.2, 0],
+        [0, 0, 0.5, 0.5, 0],
+        [0, 0, 0, 0, 1],
+    ]
     names += [f"more {i}" for i in range(5 - len(names))]
     chain = cf.Chain(cf.States(names, exits=names[4:]), P)
     return report.groups_chart(cf.long_run(chain, start={names[0]: 10, names[1]: 5}), width=width)

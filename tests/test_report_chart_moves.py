@@ -12,7 +12,19 @@ def rows(*cells):
     """(from, to, count, at_risk, rate, low, high)"""
     return pd.DataFrame(
         [("all", *c, 0.9, "wilson", "") for c in cells],
-        columns=["segment", "from", "to", "count", "at_risk", "probability", "low", "high", "level", "method", "note"],
+        columns=[
+            "segment",
+            "from",
+            "to",
+            "count",
+            "at_risk",
+            "probability",
+            "low",
+            "high",
+            "level",
+            "method",
+            "note",
+        ],
     )
 
 
@@ -59,7 +71,10 @@ def test_a_state_without_data_says_so():
 
 def test_many_states_make_a_wider_chart():
     wide = moves_chart(made.transitions(made.FIFTEEN), states=made.FIFTEEN)
-    assert wide.get_size_inches()[0] > moves_chart(made.transitions(made.SMALL), states=made.SMALL).get_size_inches()[0]
+    assert (
+        wide.get_size_inches()[0]
+        > moves_chart(made.transitions(made.SMALL), states=made.SMALL).get_size_inches()[0]
+    )
 
 
 def test_a_frame_that_is_not_of_transitions_is_refused():

@@ -26,7 +26,9 @@ def test_a_model_within_the_intervals_is_said_to_be_within():
 def test_a_model_outside_to_the_end_is_said_to_keep_too_many():
     made_up = rows([1, 0.9, 0.7, 0.6], 0.02, [1, 0.91, 0.8, 0.7])
     assert departure(made_up) == 2
-    assert "from age 2 on the model lies outside and keeps too many (70.0% at age 3)" in title(retention_chart(made_up))
+    assert "from age 2 on the model lies outside and keeps too many (70.0% at age 3)" in title(
+        retention_chart(made_up)
+    )
 
 
 def test_one_stray_age_is_no_departure():
@@ -39,14 +41,20 @@ def test_a_model_that_crosses_departs_where_it_last_changed_sides():
 
 
 def test_the_models_own_interval_counts_too():
-    made_up = rows([1, 0.9, 0.7], 0.02, [1, 0.9, 0.75]).assign(model_low=[1, 0.85, 0.69], model_high=[1, 0.95, 0.8])
+    made_up = rows([1, 0.9, 0.7], 0.02, [1, 0.9, 0.75]).assign(
+        model_low=[1, 0.85, 0.69], model_high=[1, 0.95, 0.8]
+    )
     assert departure(made_up) is None
 
 
 def test_immature_ages_are_open_points():
     made_up = rows([1, 0.9, 0.8, 0.7], 0.05, [1, 0.9, 0.8, 0.7]).assign(immature=[False, False, True, True])
     assert immature(made_up).tolist() == [False, False, True, True]
-    faces = [line.get_markerfacecolor() for line in retention_chart(made_up).axes[0].lines if line.get_marker() == "o"]
+    faces = [
+        line.get_markerfacecolor()
+        for line in retention_chart(made_up).axes[0].lines
+        if line.get_marker() == "o"
+    ]
     assert len(set(faces)) == 2
 
 
@@ -56,7 +64,9 @@ def test_few_customers_are_immature_whatever_the_table_says():
 
 def test_without_observations_the_model_stands_alone():
     bare = rows([np.nan] * 3, 0.0, [1, 0.9, 0.81], at_risk=np.nan)
-    assert "The model keeps 81.0% of joiners for 2 months; none observed so long" in title(retention_chart(bare))
+    assert "The model keeps 81.0% of joiners for 2 months; none observed so long" in title(
+        retention_chart(bare)
+    )
 
 
 def test_narrow_and_wide_say_the_same():

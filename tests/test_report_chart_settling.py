@@ -10,7 +10,10 @@ from tests import report_fixtures as made
 
 
 def goal(measure="settled_mix", a=0.6, low=0.5, high=0.7, origin="", note=""):
-    rows = [("all", measure, "a", origin, a, low, high, note), ("all", measure, "b", origin, 1 - a, 1 - high, 1 - low, note)]
+    rows = [
+        ("all", measure, "a", origin, a, low, high, note),
+        ("all", measure, "b", origin, 1 - a, 1 - high, 1 - low, note),
+    ]
     return pd.DataFrame(rows, columns=["segment", "measure", "state", "from", "value", "low", "high", "note"])
 
 
@@ -39,7 +42,9 @@ def test_the_title_says_where_from_where_to_and_how_long():
 
 
 def test_nothing_is_said_to_move_when_all_is_within_the_intervals():
-    assert "Every share is already within the interval" in title(settling_chart(walk(0.65, 0.61, 0.6), goal()))
+    assert "Every share is already within the interval" in title(
+        settling_chart(walk(0.65, 0.61, 0.6), goal())
+    )
 
 
 def test_without_groups_the_limit_is_all_exit_and_those_remaining_are_shown():
@@ -62,4 +67,7 @@ def test_no_mix_to_settle_at_is_refused():
 def test_the_upright_line_stands_where_it_settles():
     figure = settling_chart(walk(0.9, 0.7, 0.62, 0.605), goal())
     assert any(list(line.get_xdata()) == [3.0, 3.0] for line in figure.axes[0].lines)
-    assert "Line charts over 40 periods ahead" in settling_chart(made.approach(made.VEG_BOX), made.long_run(made.VEG_BOX)).alt
+    assert (
+        "Line charts over 40 periods ahead"
+        in settling_chart(made.approach(made.VEG_BOX), made.long_run(made.VEG_BOX)).alt
+    )

@@ -2,12 +2,24 @@
 
 import re
 import xml.etree.ElementTree as ET
+from pathlib import Path
 
 import matplotlib as mpl
 import pytest
 
 from cohortflow.report.chart.style import (
-    RC, SHADES, THEME, Drawing, drawing, fit_lines, house_style, panel, shade, share_ticks, svg, text_width,
+    RC,
+    SHADES,
+    THEME,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
+    shade,
+    share_ticks,
+    svg,
+    text_width,
 )  # fmt: skip
 
 
@@ -47,7 +59,7 @@ def test_past_projection_and_model_differ_in_grey_or_dash():
     from cohortflow.report.chart import base, retention, settling
 
     for module in (base, retention, settling):
-        assert "linestyle=(0, (4, 1.6))" in open(module.__file__, encoding="utf-8").read()
+        assert "linestyle=(0, (4, 1.6))" in Path(module.__file__).read_text(encoding="utf-8")
 
 
 def small(title="A title", name="x"):

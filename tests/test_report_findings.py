@@ -18,7 +18,9 @@ def texts(section=None, facts=FACTS, tables=TABLES, **options):
 
 
 def test_rejected_rows_are_said_with_their_reasons():
-    assert any("180 of 41,250 (0.4%): date or time not readable (120) and customer id" in t for t in texts("counted"))
+    assert any(
+        "180 of 41,250 (0.4%): date or time not readable (120) and customer id" in t for t in texts("counted")
+    )
 
 
 def test_no_rejected_rows_no_finding():
@@ -30,7 +32,9 @@ def test_no_rejected_rows_no_finding():
 def test_notes_stand_where_their_numbers_are():
     facts = replace(FACTS, notes=("few_at_risk:quiet", "never_exits:paused", "rows_without_data:x",
                                   CheckFinding("superseded_rows", rows=2)))  # fmt: skip
-    assert any("quiet" in t for t in texts("moves", facts)) and any("paused" in t for t in texts("stay", facts))
+    assert any("quiet" in t for t in texts("moves", facts)) and any(
+        "paused" in t for t in texts("stay", facts)
+    )
     assert any("not projected" in t for t in texts("heading", facts))
     assert any("2 rows were replaced" in t for t in texts("counted", facts))
 
@@ -55,7 +59,9 @@ def test_a_full_band_and_a_validated_horizon_need_no_warning():
 
 
 def test_excluded_periods_are_printed():
-    assert "The rates leave out the moves of 2025-04, as the study says." in texts("moves", replace(FACTS, excluded=("2025-04",)))
+    assert "The rates leave out the moves of 2025-04, as the study says." in texts(
+        "moves", replace(FACTS, excluded=("2025-04",))
+    )
 
 
 def test_a_failed_assumption_comes_with_its_advice():

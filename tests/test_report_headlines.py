@@ -23,14 +23,18 @@ def test_the_base_at_the_horizon_has_its_band_and_today():
     rows = made.projection(made.VEG_BOX)
     last = rows[(rows["state"] == "all_live") & (rows["periods_ahead"] == 8)].iloc[0]
     head = found()["All live customers at the end of 2027-06"]
-    assert head.value == f"{round(last['customers']):,}" and head.band == f"{round(last['low']):,} to {round(last['high']):,}"
+    assert (
+        head.value == f"{round(last['customers']):,}"
+        and head.band == f"{round(last['low']):,} to {round(last['high']):,}"
+    )
     assert "on today's" in head.basis
 
 
 def test_churn_comes_from_the_rates_with_its_denominator():
     rates = pd.DataFrame({"segment": "all", "period": "2026-11", "kind": "forecast", "measure": "churn",
                           "exit": ["", "cancelled", "card_lapsed"], "numerator": [30.0, 20, 10], "denominator": 1000.0,
-                          "value": [0.03, 0.02, 0.01], "low": [0.025, 0.016, 0.007], "high": [0.036, 0.025, 0.014]})  # fmt: skip
+                          "value": [0.03, 0.02, 0.01], "low": [0.025, 0.016, 0.007], "high": [0.036, 0.025, 0.014],
+                          })  # fmt: skip
     head = found(tables={**TABLES, "rates": rates})["Leaving in 2026-11"]
     assert (head.value, head.band) == ("3.0%", "2.5 to 3.6%")
     assert head.basis.startswith("30 of 1,000 live and away at the opening: cancelled 2.0% (1.6 to 2.5%)")

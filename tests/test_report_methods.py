@@ -25,5 +25,9 @@ def test_whatever_is_needed_to_make_it_again_is_printed():
                        people={"prepared_by": "A. Nalyst", "checked_by": ""})  # fmt: skip
     terms = {(t, m, f) for t, m, f in methods_section(facts).terms}
     assert ("Input", "a.csv, 1,234 bytes, 56 rows", "SHA-256 " + "ab" * 32) in terms
-    assert ("Settings", "study.level = option", "") in terms and ("People", "prepared by: A. Nalyst", "") in terms
+    assert ("Settings", "study.level = option", "") in terms and (
+        "People",
+        "prepared by: A. Nalyst",
+        "",
+    ) in terms
     assert ("Made with", "cohortflow 0.1.0, level 90%, seed 7", "") in terms

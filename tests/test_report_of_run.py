@@ -23,7 +23,11 @@ def content(done):
 
 def test_facts_tell_what_the_tables_do_not(done, content):
     facts = content.facts
-    assert facts.title == done.study.title and facts.horizon == done.study.horizon and facts.seed == done.study.seed
+    assert (
+        facts.title == done.study.title
+        and facts.horizon == done.study.horizon
+        and facts.seed == done.study.seed
+    )
     assert facts.customers == done.tally.meta.customers and facts.model == "plain"
     assert facts.verdict == done.forecasts["all"].long_run.verdict
     assert set(facts.rules) == set(done.study.states.names) and facts.inputs[0][0].endswith(".csv")
@@ -43,7 +47,11 @@ def test_the_structure_of_the_chain_is_no_finding(content):
 def test_files_of_a_run(content):
     files = files_of(content)
     assert "report.html" in files and "charts/moves.svg" in files and "charts/base.svg" in files
-    assert all(text.startswith("<?xml") and text.rstrip().endswith("</svg>") for n, text in files.items() if n.endswith("svg"))
+    assert all(
+        text.startswith("<?xml") and text.rstrip().endswith("</svg>")
+        for n, text in files.items()
+        if n.endswith("svg")
+    )
     assert files == files_of(content)
 
 
@@ -62,5 +70,7 @@ def test_a_place_that_cannot_be_written_is_said(done, tmp_path):
 
 
 def test_a_run_without_a_projection_has_no_report():
-    with pytest.raises(CallError, match='There is no forecast of "all" in this run; forecasts: none. Make a whole run'):
+    with pytest.raises(
+        CallError, match='There is no forecast of "all" in this run; forecasts: none. Make a whole run'
+    ):
         content_of(run(STUDY, upto="check"))

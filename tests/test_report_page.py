@@ -49,8 +49,9 @@ def small():
 
 @pytest.fixture(scope="module")
 def hostile():
-    facts = made.facts(made.HOSTILE, title="</title><script>alert(1)</script>\u202eevil", notes=("no_data:<img src=x>",),
-                       rules={"gone": "<b>bold</b>"}, inputs=(("<x>.csv", 1, 2, "ff"),), people={"prepared_by": "<i>"})  # fmt: skip
+    facts = made.facts(made.HOSTILE, title="</title><script>alert(1)</script>\u202eevil",
+                       notes=("no_data:<img src=x>",), rules={"gone": "<b>bold</b>"},
+                       inputs=(("<x>.csv", 1, 2, "ff"),), people={"prepared_by": "<i>"})  # fmt: skip
     return page_html(gather(facts, made.tables(made.HOSTILE)))
 
 
@@ -88,12 +89,17 @@ def test_every_chart_has_a_text_alternative_and_a_table(small):
 
 
 def test_tables_have_captions_and_scopes(small):
-    assert small.count("<caption>") == len(re.findall("<table(?: class=\"short\")?>", small))
+    assert small.count("<caption>") == len(re.findall('<table(?: class="short")?>', small))
     assert not re.search(r"<th(?! scope)[ >]", small)
 
 
 def test_users_strings_are_text(hostile):
-    assert "<script" not in hostile and "<img" not in hostile and "<b>bold" not in hostile and "<i>" not in hostile
+    assert (
+        "<script" not in hostile
+        and "<img" not in hostile
+        and "<b>bold" not in hostile
+        and "<i>" not in hostile
+    )
     assert "\u202e" not in hostile
     assert "&lt;script&gt;alert(1)&lt;/script&gt;" in hostile and "&lt;b&gt;bold" in hostile
 
@@ -131,7 +137,9 @@ def test_ids_of_a_chart_are_its_own():
 def test_a_fragment_holds_one_section():
     content = gather(made.facts(made.SMALL), made.tables(made.SMALL))
     fragment = fragment_html(content, "counted")
-    assert fragment.count("<section") == 1 and "What became of the rows" in fragment and "<html" not in fragment
+    assert (
+        fragment.count("<section") == 1 and "What became of the rows" in fragment and "<html" not in fragment
+    )
     with pytest.raises(CallError, match='There is no section "count"'):
         fragment_html(content, "count")
 

@@ -8,7 +8,16 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from cohortflow.report.rounding import (
-    count, decimal, duration, foot, missing, money, percent, signed, span, unit,
+    count,
+    decimal,
+    duration,
+    foot,
+    missing,
+    money,
+    percent,
+    signed,
+    span,
+    unit,
 )  # fmt: skip
 
 PROPER = st.floats(min_value=1e-9, max_value=1 - 1e-9)

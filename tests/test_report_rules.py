@@ -10,11 +10,20 @@ from cohortflow.study.parts import CONDITIONS
 @pytest.mark.parametrize(
     "condition, words",
     [
-        (Condition("last_event", ("cancelled",), ("joined", "cancelled")), "the latest of joined and cancelled is cancelled"),
+        (
+            Condition("last_event", ("cancelled",), ("joined", "cancelled")),
+            "the latest of joined and cancelled is cancelled",
+        ),
         (Condition("silent_for", ("bought",), k=1), "no bought in the month (a new stay is given that time)"),
-        (Condition("silent_for", ("a", "b"), k=3), "no a or b in the last 3 months (a new stay is given that time)"),
+        (
+            Condition("silent_for", ("a", "b"), k=3),
+            "no a or b in the last 3 months (a new stay is given that time)",
+        ),
         (Condition("at_least", ("bought",), k=1, n=3), "3 or more bought in the month"),
-        (Condition("at_most", ("bought",), k=6, n=1), "at most 1 bought in the last 6 months, and the stay is older"),
+        (
+            Condition("at_most", ("bought",), k=6, n=1),
+            "at most 1 bought in the last 6 months, and the stay is older",
+        ),
         (Condition("spent_at_least", k=2, amount=50), "spent 50.00 or more in the last 2 months"),
         (Condition("tenure_below", k=1), "joined in this month"),
         (Condition("tenure_below", k=3), "joined in this month or the 2 before"),

@@ -54,7 +54,9 @@ def test_segments_are_listed_and_the_chosen_one_is_shown():
     import pandas as pd
 
     rows = TABLES["projection"]
-    several = pd.concat([rows, rows.assign(segment="web"), rows.assign(segment="shop", customers=rows["customers"] / 2)])
+    several = pd.concat(
+        [rows, rows.assign(segment="web"), rows.assign(segment="shop", customers=rows["customers"] / 2)]
+    )
     content = gather(replace(FACTS, segment="shop"), {"projection": several})
     table = next(e.table for e in content.exhibits() if e.key == "segments")
     assert [r[0] for r in table.rows] == ["all", "web", "shop"]
@@ -63,7 +65,10 @@ def test_segments_are_listed_and_the_chosen_one_is_shown():
 
 def test_sections_without_anything_are_left_out():
     content = gather(FACTS, TABLES)
-    empty = replace(content, sections=tuple(replace(s, lead=(), exhibits=(), points=(), terms=()) for s in content.sections))
+    empty = replace(
+        content,
+        sections=tuple(replace(s, lead=(), exhibits=(), points=(), terms=()) for s in content.sections),
+    )
     assert sections_of(empty) == []
 
 

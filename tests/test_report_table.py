@@ -14,7 +14,9 @@ from cohortflow.report.table import WIDTH, Table, csv_text, json_text, plain_tex
 from cohortflow.report.text import width
 
 NAMES = st.text(min_size=1, max_size=120)
-CELLS = st.lists(st.tuples(NAMES, st.sampled_from(["1,234", "12.3%", "no data", "", "1,234 (1,100 to 1,400)"])), max_size=6)
+CELLS = st.lists(
+    st.tuples(NAMES, st.sampled_from(["1,234", "12.3%", "no data", "", "1,234 (1,100 to 1,400)"])), max_size=6
+)
 
 
 @given(NAMES, CELLS)

@@ -26,7 +26,11 @@ def test_the_accounting_speaks_in_words_and_adds_up():
 
 def test_moves_leave_out_what_cannot_happen_and_flag_what_was_not_seen():
     rows = made.transitions(S)
-    rows.loc[(rows["from"] == "quiet") & (rows["to"] == "paused"), ["count", "probability", "note"]] = [0, 0.0, "sampling_zero"]
+    rows.loc[(rows["from"] == "quiet") & (rows["to"] == "paused"), ["count", "probability", "note"]] = [
+        0,
+        0.0,
+        "sampling_zero",
+    ]
     table = tabulate.moves_table(rows)
     assert not any(r[:2] == ("weekly", "taster") for r in table.rows)
     assert next(r for r in table.rows if r[:2] == ("quiet", "paused"))[6] == "possible, not seen"
@@ -63,7 +67,11 @@ def test_lost_and_moved_out_take_away():
     # 10.3 + 2.2 - 5.4 - 1.2 + 3.0 - 4.7 = 4.2 must print as 105 - 100 = 5: floors 10 2 -6 -2 3 -5 make 2, the
     # three largest remainders (card .8, cancelled .6, joined .3) take one each
     rows = dict((r[0], r[1]) for r in tabulate.rollforward_table(roll()).rows)
-    assert rows["left: cancelled"] == "-5" and rows["went out to other states"] == "-5" and rows["joined"] == "+11"
+    assert (
+        rows["left: cancelled"] == "-5"
+        and rows["went out to other states"] == "-5"
+        and rows["joined"] == "+11"
+    )
     assert rows["opening"] == "100" and rows["closing"] == "105"
 
 
@@ -74,7 +82,13 @@ def test_an_unknown_forecast_is_not_rounded_into_a_number():
 
 def test_where_it_settles_sets_today_beside_it():
     table = tabulate.long_run_table(made.long_run(S), made.projection(S))
-    assert table.heads == ("state", "share today", "settled share", "settled customers", "share of those remaining")
+    assert table.heads == (
+        "state",
+        "share today",
+        "settled share",
+        "settled customers",
+        "share of those remaining",
+    )
     assert tabulate.long_run_table(made.long_run(S)).heads[1] == "settled share"
 
 
@@ -86,13 +100,19 @@ def test_starts_from_single_states_stay_out():
 
 def test_times_without_end_are_never():
     rows = made.exits(S)
-    rows.loc[rows["measure"] == "mean_time", ["value", "low", "high"]] = [float("inf"), float("nan"), float("nan")]
+    rows.loc[rows["measure"] == "mean_time", ["value", "low", "high"]] = [
+        float("inf"),
+        float("nan"),
+        float("nan"),
+    ]
     assert all(r[1] == "never" for r in tabulate.exits_table(rows, kind="month").rows)
 
 
 def test_immature_ages_are_marked():
     table = tabulate.retention_table(made.retention(), kind="week")
-    assert table.heads[0] == "weeks since joining" and table.rows[-1][4] == "immature" and table.rows[0][4] == ""
+    assert (
+        table.heads[0] == "weeks since joining" and table.rows[-1][4] == "immature" and table.rows[0][4] == ""
+    )
 
 
 @pytest.mark.parametrize("states", [S, made.HOSTILE, made.FIFTEEN])

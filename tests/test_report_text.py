@@ -7,7 +7,9 @@ from hypothesis import strategies as st
 from cohortflow.report.text import clean, label, listing, neutral, shorten, upper_first, width, wrap
 
 
-@pytest.mark.parametrize("bad", ["\x1b[31m", "\x00", "\u202e", "\u2066", "\u200f", "\n", "\r\n", "\t", "\x9b"])
+@pytest.mark.parametrize(
+    "bad", ["\x1b[31m", "\x00", "\u202e", "\u2066", "\u200f", "\n", "\r\n", "\t", "\x9b"]
+)
 def test_clean_lets_no_control_or_direction_mark_through(bad):
     assert all(c.isprintable() for c in clean(f"a{bad}b"))
     assert "\u202e" not in clean(f"a{bad}b")
@@ -57,7 +59,8 @@ def test_label_is_short_and_keeps_both_ends():
 
 
 @pytest.mark.parametrize(
-    "names, text", [([], ""), (["a"], "a"), (["a", "b"], "a and b"), (list("abcdefgh"), "a, b, c, d, e, f and 2 more")]
+    "names, text",
+    [([], ""), (["a"], "a"), (["a", "b"], "a and b"), (list("abcdefgh"), "a, b, c, d, e, f and 2 more")],
 )
 def test_listing(names, text):
     assert listing(names) == text

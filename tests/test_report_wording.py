@@ -31,13 +31,16 @@ def test_every_finding_of_the_check_has_words():
 def test_every_note_of_the_estimator_and_the_projector_has_words():
     codes = set(re.findall(r'f"([a-z_]+):\{', source("estimator") + source("projector")))
     structure = {"closed_group", "periodic_group", "component", "step", "position"}  # not findings
+    structure |= {"too_few", "at_zero", "no_exposure"}  # of library results that no report shows
     assert {"no_data", "few_at_risk"} <= codes and codes - structure <= set(wording.NOTES)
 
 
 def test_every_verdict_has_words():
     codes = set(re.findall(r'return "([a-z_]+)"', source("projector")))
     assert {"exits_only", "no_limit"} <= set(wording.VERDICTS)
-    assert codes & {"unique_limit", "unique_cycle", "depends_on_start", "no_limit", "exits_only"} <= set(wording.VERDICTS)
+    assert codes & {"unique_limit", "unique_cycle", "depends_on_start", "no_limit", "exits_only"} <= set(
+        wording.VERDICTS
+    )
 
 
 def test_every_model_and_joiner_method_has_words():
@@ -52,7 +55,10 @@ def test_unknown_codes_are_said_as_they_are():
 
 
 def test_findings_of_the_check_say_their_size():
-    assert wording.note(Finding("superseded_rows", rows=1234)) == "1,234 rows were replaced by later versions of themselves."
+    assert (
+        wording.note(Finding("superseded_rows", rows=1234))
+        == "1,234 rows were replaced by later versions of themselves."
+    )
     assert wording.note(Finding("odd_thing", rows=3, customers=2)) == "Odd thing (3 rows, 2 customers)."
 
 

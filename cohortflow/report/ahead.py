@@ -14,7 +14,13 @@ LONGEST, SHORTEST = 240, 12
 
 
 def approach(
-    model: Any, start: Any, states: States, *, joining: Any = None, first_step: int = 0, periods: int | None = None
+    model: Any,
+    start: Any,
+    states: States,
+    *,
+    joining: Any = None,
+    first_step: int = 0,
+    periods: int | None = None,
 ) -> pd.DataFrame:
     """Expected shares among those who have not left: periods_ahead, state, share.
 

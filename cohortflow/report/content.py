@@ -24,7 +24,8 @@ class Facts:
     """Settings and sizes that the tables do not tell.
 
     first, last : labels of the first and last period counted;  as_of : last day that counts
-    notes : codes of the records ("few_at_risk:quiet", ...) and findings of the check;  verdict, reasons : of the long run
+    notes : codes of the records ("few_at_risk:quiet", ...) and findings of the check
+    verdict, reasons : of the long run
     parts : what the bands hold;  validated : periods ahead that back-tests bear out (None: not tested)
     rules : state -> its rule in words;  inputs : (name, bytes, rows, sha256);  settings : name -> "value (origin)"
     absent : table -> why it could not be made

@@ -26,7 +26,13 @@ SHARE_REJECTED = 0.01
 
 def findings(facts: Facts, tables: Tables, approach: pd.DataFrame | None = None) -> tuple[Finding, ...]:
     """All findings, in the order of the page."""
-    found = [*_rows(tables), *_notes(facts), *_settings(facts), *_adequacy(tables), *_retention(facts, tables)]
+    found = [
+        *_rows(tables),
+        *_notes(facts),
+        *_settings(facts),
+        *_adequacy(tables),
+        *_retention(facts, tables),
+    ]
     found += _settling(facts, tables, approach)
     found += [Finding(f"{upper_first(said(k))}: {why}", "rests") for k, why in facts.absent.items()]
     unique = list(dict.fromkeys(found))
@@ -42,7 +48,9 @@ def _rows(tables: Tables) -> Iterator[Finding]:
     if not len(rejected) or not read:
         return
     lost = rejected["rows"].sum()
-    by_reason = rejected.groupby("reason", sort=True)["rows"].sum().sort_values(ascending=False, kind="stable")
+    by_reason = (
+        rejected.groupby("reason", sort=True)["rows"].sum().sort_values(ascending=False, kind="stable")
+    )
     reasons = listing([f"{said(str(r))} ({count(n)})" for r, n in by_reason.items()], limit=4)
     weight = "More than one row in a hundred" if lost / read > SHARE_REJECTED else "A few rows"
     yield Finding(f"{weight} could not be used: {count(lost)} of {count(read)} ({percent(lost / read)}): {reasons}.",
@@ -79,9 +87,15 @@ def _adequacy(tables: Tables) -> Iterator[Finding]:
     rows = tables["adequacy"]
     for _, row in rows[rows["verdict"].isin(["fails", "doubtful"])].iterrows():
         word = "does not hold" if row["verdict"] == "fails" else "is doubtful"
-        advice = "" if missing(row.get("advice")) or not str(row.get("advice")) else f" {said(str(row['advice']))}."
+        advice = (
+            ""
+            if missing(row.get("advice")) or not str(row.get("advice"))
+            else f" {said(str(row['advice']))}."
+        )
         what = str(row["what"]) if not missing(row["what"]) else ""
-        yield Finding(f"{upper_first(said(str(row['check'])))}: {what or 'the assumption'} {word}.{advice}", "rests")
+        yield Finding(
+            f"{upper_first(said(str(row['check'])))}: {what or 'the assumption'} {word}.{advice}", "rests"
+        )
 
 
 def _retention(facts: Facts, tables: Tables) -> Iterator[Finding]:
@@ -94,7 +108,8 @@ def _retention(facts: Facts, tables: Tables) -> Iterator[Finding]:
     row = rows[(rows["periods_since_joining"] >= age) & rows["observed"].notna()].iloc[0]
     side = "more" if row["model"] > row["observed"] else "fewer"
     yield Finding(
-        f"From {count(age)} {unit(facts.kind, age)} after joining on, the model keeps {side} joiners than were observed: "
+        f"From {count(age)} {unit(facts.kind, age)} after joining on, the model keeps {side} joiners than were "
+        f"observed: "
         f"customers are not all alike, or rates change with age. Long horizons suffer first; try a model by tenure or "
         f"with several kinds of customers.", "stay",
     )  # fmt: skip

@@ -81,7 +81,10 @@ def _churn(facts: Facts, rates: pd.DataFrame) -> Headline | None:
     if not len(whole) or missing(whole["value"].iloc[0]):
         return None
     row = whole.iloc[0]
-    each = [f"{label(r['exit'])} {with_interval(r['value'], r['low'], r['high'], percent)}" for _, r in exits.iterrows()]
+    each = [
+        f"{label(r['exit'])} {with_interval(r['value'], r['low'], r['high'], percent)}"
+        for _, r in exits.iterrows()
+    ]
     basis = f"{count(row['numerator'])} of {count(row['denominator'])} live and away at the opening"
     return Headline(
         f"Leaving in {row['period']}", percent(row["value"]), span(row["low"], row["high"], percent),
@@ -110,14 +113,20 @@ def _leavers(facts: Facts, rows: pd.DataFrame) -> Headline | None:
 
 def _joiners(facts: Facts, rows: pd.DataFrame) -> Headline | None:
     ahead = rows[(rows["kind"] == "forecast") & (rows["state"].isin(list(facts.states.remaining)))]
-    sums = ahead[ahead["line"].isin(["joined", "returned"])].groupby(["period", "line"], sort=False)["customers"].sum()
+    sums = (
+        ahead[ahead["line"].isin(["joined", "returned"])]
+        .groupby(["period", "line"], sort=False)["customers"]
+        .sum()
+    )
     if not len(sums):
         return None
     by_line = sums.groupby("line").mean()
     value = f"{count(by_line.get('joined', 0.0))} {a_period(facts.kind)}"
     back = by_line.get("returned", 0.0)
     basis = JOINERS.get(facts.joiners, said(facts.joiners))
-    return Headline("Joiners assumed", value, "", f"{basis}; and {count(back)} returning {a_period(facts.kind)}")
+    return Headline(
+        "Joiners assumed", value, "", f"{basis}; and {count(back)} returning {a_period(facts.kind)}"
+    )
 
 
 def _stay(facts: Facts, rows: pd.DataFrame) -> Headline | None:
@@ -129,4 +138,6 @@ def _stay(facts: Facts, rows: pd.DataFrame) -> Headline | None:
     median = rows[(rows["from"] == entry) & (rows["measure"] == "median_time")]["value"]
     basis = f"half have left after {duration(median.iloc[0], facts.kind, 0)}" if len(median) else ""
     band = "" if missing(row["low"]) else f"{span(row['low'], row['high'], decimal)} {unit(facts.kind)}"
-    return Headline(f"A customer in {label(entry)} stays, on average", duration(row["value"], facts.kind), band, basis)
+    return Headline(
+        f"A customer in {label(entry)} stays, on average", duration(row["value"], facts.kind), band, basis
+    )

@@ -8,7 +8,12 @@ from cohortflow.report.table import Table
 from cohortflow.report.text import clean, listing
 from cohortflow.report.wording import JOINERS, MODELS, SOURCES, said
 
-ROLES = {"live": "live", "entry": "live, where joiners start", "away": "away: may come back", "exit": "an exit"}
+ROLES = {
+    "live": "live",
+    "entry": "live, where joiners start",
+    "away": "away: may come back",
+    "exit": "an exit",
+}
 
 
 def assumptions(facts: Facts) -> tuple[str, ...]:

@@ -10,9 +10,9 @@ from cohortflow import __version__
 from cohortflow.errors import CallError, OutputError
 from cohortflow.report.ahead import approach
 from cohortflow.report.content import Content, Facts
-from cohortflow.report.sections import gather
 from cohortflow.report.page import page_html, wide_charts
 from cohortflow.report.rules import rule_words
+from cohortflow.report.sections import gather
 from cohortflow.study import Study
 
 ALL = "all"
@@ -22,14 +22,18 @@ def content_of(run: Any, *, segment: str = ALL) -> Content:
     """The report of a run (or of one of its segments) as a Content. CallError when the run has no projection."""
     if not getattr(run, "forecasts", None) or segment not in run.forecasts:
         known = ", ".join(getattr(run, "forecasts", {}) or ["none"])
-        raise CallError(f'There is no forecast of "{segment}" in this run; forecasts: {known}. Make a whole run first.')
+        raise CallError(
+            f'There is no forecast of "{segment}" in this run; forecasts: {known}. Make a whole run first.'
+        )
     forecast = run.forecasts[segment]
     schedule, joining = forecast.fit.schedule, _joining(forecast)
     start = forecast.fit.tally.mix()
     ahead = None
     if not schedule.unknown and float(start.sum()) > 0:
         first = forecast.fit.tally.meta.last - schedule.first if schedule.first is not None else 0
-        ahead = approach(schedule, start.to_numpy(dtype=float), run.study.states, joining=joining, first_step=first)
+        ahead = approach(
+            schedule, start.to_numpy(dtype=float), run.study.states, joining=joining, first_step=first
+        )
     return gather(facts_of(run, segment=segment), run.tables, approach=ahead)
 
 
@@ -85,7 +89,11 @@ def _reasons(exits: Any) -> tuple[str, ...]:
 
 def _settings(study: Study) -> dict[str, str]:
     """Settings that did not come from the study file or a default: what somebody turned for this run."""
-    return {name: origin for name, origin in sorted(study.origin_of.items()) if origin not in ("study file", "default")}
+    return {
+        name: origin
+        for name, origin in sorted(study.origin_of.items())
+        if origin not in ("study file", "default")
+    }
 
 
 def files_of(content: Content) -> Mapping[str, str]:
@@ -100,10 +108,14 @@ def write_report(run: Any, path: str | Path, *, segment: str = ALL, force: bool 
     """Write the page of a run to `path`. OutputError when the file is there already, unless `force`."""
     target = Path(path)
     if target.exists() and not force:
-        raise OutputError(f"{target} is there already; nothing was written. Choose another path, or force=True.")
+        raise OutputError(
+            f"{target} is there already; nothing was written. Choose another path, or force=True."
+        )
     text = page_html(content_of(run, segment=segment))
     try:
         target.write_text(text, encoding="utf-8", newline="\n")
     except OSError as error:
-        raise OutputError(f"{target} cannot be written: {error.strerror or error}. Choose another path.") from error
+        raise OutputError(
+            f"{target} cannot be written: {error.strerror or error}. Choose another path."
+        ) from error
     return target

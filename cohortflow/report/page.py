@@ -17,8 +17,8 @@ from markupsafe import Markup
 from cohortflow.errors import CallError, listed, nearest
 from cohortflow.report.chart.style import NARROW, THEME, WIDE, svg
 from cohortflow.report.content import Content, Exhibit
-from cohortflow.report.sections import sections_of
 from cohortflow.report.rounding import percent
+from cohortflow.report.sections import sections_of
 from cohortflow.report.table import split
 from cohortflow.report.text import clean
 
@@ -69,11 +69,15 @@ def fragment_html(content: Content, section: str) -> str:
     """One section as a fragment with its own style, for notebooks. CallError when there is no such section."""
     known = [s.key for s in sections_of(content)]
     if section not in known:
-        raise CallError(f'There is no section "{section}"{nearest(section, known)}; there are {listed(known)}.')
+        raise CallError(
+            f'There is no section "{section}"{nearest(section, known)}; there are {listed(known)}.'
+        )
     chosen = [s for s in content.sections if s.key == section]
     pictures = {e.key: picture(e, _drawn(e, WIDE)) for s in chosen for e in s.exhibits if e.draw is not None}
-    return _templates().get_template("fragment.html").render(
-        content=content, facts=content.facts, sections=chosen, pictures=pictures, theme=THEME
+    return (
+        _templates()
+        .get_template("fragment.html")
+        .render(content=content, facts=content.facts, sections=chosen, pictures=pictures, theme=THEME)
     )
 
 

@@ -37,7 +37,9 @@ def condition_words(condition: Any, kind: str = "own") -> str:
         "at_most": f"at most {condition.n} {events} in the {last}, and the stay is older",
         "spent_at_least": f"spent {decimal(condition.amount, 2)} or more in the {last}",
         "tenure_below": "joined in this " + one if k == 1 else f"joined in this {one} or the {k - 1} before",
-        "expired_for": "paid-up-to date has passed" if k == 0 else f"paid-up-to date passed {k} or more whole {unit(kind)} ago",
+        "expired_for": "paid-up-to date has passed"
+        if k == 0
+        else f"paid-up-to date passed {k} or more whole {unit(kind)} ago",
         "due_within": f"paid-up-to date falls in the next {one if k == 1 else f'{k} {unit(kind)}'}",
     }
     return words[condition.kind]

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from functools import partial
+from typing import Any
 
 import pandas as pd
 
@@ -54,8 +55,8 @@ def _of_segment(frame: pd.DataFrame, segment: str) -> pd.DataFrame:
     return frame[frame["segment"] == segment].reset_index(drop=True)
 
 
-def _drawn(chart: object, *args: object, **options: object) -> Draw:
-    bound = partial(chart, *args, **options)  # type: ignore[operator]
+def _drawn(chart: Callable[..., Drawing], *args: Any, **options: Any) -> Draw:
+    bound = partial(chart, *args, **options)
 
     def draw(width: float) -> Drawing:
         return bound(width=width)
@@ -67,7 +68,9 @@ def _counted(facts: Facts, tables: Tables) -> Section:
     lead, exhibits = [], []
     if facts.customers is not None:
         until = f" Rows count up to {facts.as_of}." if facts.as_of else ""
-        lead.append(f"{count(facts.customers)} customers were followed from {facts.first} to {facts.last}.{until}")
+        lead.append(
+            f"{count(facts.customers)} customers were followed from {facts.first} to {facts.last}.{until}"
+        )
     if "accounting" in tables:
         rows = tabulate.whole_accounting(tables["accounting"])
         read, used = (rows.loc[rows["outcome"] == o, "rows"].sum() for o in ("read", "used"))
@@ -103,8 +106,14 @@ def _heading(facts: Facts, tables: Tables, whole: Tables) -> Section:
     rows, past = tables["projection"], tables.get("rollforward")
     quantities = facts.quantities
     horizon = f"{facts.horizon} {unit(facts.kind, facts.horizon)}"
-    bands = f" The {percent(facts.level, 0)} bands hold {listing([said(p) for p in facts.parts])}." if facts.parts else ""
-    lead = (f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.{bands}",)
+    bands = (
+        f" The {percent(facts.level, 0)} bands hold {listing([said(p) for p in facts.parts])}."
+        if facts.parts
+        else ""
+    )
+    lead = (
+        f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.{bands}",
+    )
     chart = _drawn(base_chart, rows, past, totals=facts.totals, states=facts.states, kind=facts.kind)
     exhibits = [Exhibit("base", chart, tabulate.base_table(rows, quantities=quantities), (EXPLAIN["band"],))]
     if past is not None and (past["state"] == ALL_LIVE).any():
@@ -138,7 +147,9 @@ def _settles(facts: Facts, tables: Tables, approach: pd.DataFrame | None) -> Sec
         return Section("settles", title, (_lacking(facts, "long_run"),))
     rows, exhibits = tables["long_run"], []
     headline, why = verdict(facts.verdict) if facts.verdict else ("", "")
-    lead = [w for w in (f"{headline} {why}".strip(), _base_words(facts, rows), _remaining_words(facts, rows)) if w]
+    lead = [
+        w for w in (f"{headline} {why}".strip(), _base_words(facts, rows), _remaining_words(facts, rows)) if w
+    ]
     goal = settled(rows)
     table = tabulate.long_run_table(rows, tables.get("projection"))
     words = [EXPLAIN["periods_to_settle"]]
@@ -175,7 +186,8 @@ def _remaining_words(facts: Facts, rows: pd.DataFrame) -> str:
         return ""
     row = own.iloc[0]
     figures = tabulate.with_interval(row["value"], row["low"], row["high"], percent)
-    return f"Of today's customers who are still here after a long time, {figures} stay each further {unit(facts.kind, 1)}."
+    one = unit(facts.kind, 1)
+    return f"Of today's customers who are still here after a long time, {figures} stay each further {one}."
 
 
 def _stay(facts: Facts, tables: Tables) -> Section:
@@ -208,8 +220,12 @@ def _rests(facts: Facts, tables: Tables) -> Section:
 
 
 def _adequacy_table(rows: pd.DataFrame) -> Table:
-    cells = [tuple(_word(row.get(c)) for c in ("check", "what", "verdict", "advice")) for _, row in rows.iterrows()]
-    return Table("Assumptions tested", ("check", "what", "verdict", "advice"), tuple(cells), texts=(0, 1, 2, 3))
+    cells = [
+        tuple(_word(row.get(c)) for c in ("check", "what", "verdict", "advice")) for _, row in rows.iterrows()
+    ]
+    return Table(
+        "Assumptions tested", ("check", "what", "verdict", "advice"), tuple(cells), texts=(0, 1, 2, 3)
+    )
 
 
 def _word(value: object) -> str:

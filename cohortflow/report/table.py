@@ -130,9 +130,7 @@ def _least(cells: list[list[str]], column: int, is_text: bool) -> int:
     return min(natural, NARROWEST) if is_text else max(body, min(head, HEAD_ROOM))
 
 
-def _block_lines(
-    cells: list[list[str]], block: list[int], texts: Sequence[int], columns: int
-) -> list[str]:
+def _block_lines(cells: list[list[str]], block: list[int], texts: Sequence[int], columns: int) -> list[str]:
     widths = _widths(cells, block, texts, columns)
     lines: list[str] = []
     for number, row in enumerate(cells):

@@ -40,8 +40,13 @@ REASONS: Mapping[str, str] = MappingProxyType(
     }
 )
 OUTCOMES: Mapping[str, str] = MappingProxyType(
-    {"read": "rows read", "used": "used", "rejected": "rejected", "duplicate": "dropped as duplicates",
-     "set_aside": "set aside"}  # fmt: skip
+    {
+        "read": "rows read",
+        "used": "used",
+        "rejected": "rejected",
+        "duplicate": "dropped as duplicates",
+        "set_aside": "set aside",
+    }  # fmt: skip
 )
 PARTS: Mapping[str, str] = MappingProxyType(
     {
@@ -101,7 +106,8 @@ EXPLAIN: Mapping[str, str] = MappingProxyType(
                      "for customers of different age or kind.",
         "exit_time": "Expected time until leaving counts whole periods from the end of a period in that state, the "
                      "period of leaving included. Half of the customers have left by the median.",
-        "rollforward": "The roll-forward goes from the opening base to the closing base by cause; every column adds up.",
+        "rollforward": "The roll-forward goes from the opening base to the closing base by cause; every column adds "
+                       "up.",
     }
 )  # fmt: skip
 CAUTIONS = (
@@ -121,7 +127,8 @@ CAUTIONS = (
 DEFINITIONS: tuple[tuple[str, str, str], ...] = (
     ("Customer at the end of a period", "One customer has one state at the end of each period, given by the first rule "
      "of the study that holds. Only rows up to that moment are used.", "count of customers"),
-    ("Live, away, left", "Live customers count as the base. Away customers (paused, in grace) are not live now but have "
+    ("Live, away, left", "Live customers count as the base. Away customers (paused, in grace) are not live now but "
+                         "have "
      "not left. An exit ends a stay; who comes back after an exit starts a new stay and is counted as returned.", ""),
     ("Rate of a move", "Share of the customers in a state at the end of a period who are in the other state at the end "
      "of the next.", "moves from i to j / customers in i who could be followed for one more period"),
@@ -140,12 +147,15 @@ DEFINITIONS: tuple[tuple[str, str, str], ...] = (
      "row sums of (I - Q)^-1, Q = rates between states that are not exits"),
 )  # fmt: skip
 SOURCES: tuple[tuple[str, str], ...] = (
-    ("Rates as shares of counted moves", "Anderson, T. W. & Goodman, L. A. (1957), Annals of Mathematical Statistics 28, "
+    ("Rates as shares of counted moves", "Anderson, T. W. & Goodman, L. A. (1957), Annals of Mathematical Statistics "
+                                         "28, "
      "89-110."),
     ("Intervals of rates", "Wilson, E. B. (1927), Journal of the American Statistical Association 22, 209-212; whole "
-     "rows: Goodman, L. A. (1965), Technometrics 7, 247-254; compared by Brown, L. D., Cai, T. T. & DasGupta, A. (2001), "
+     "rows: Goodman, L. A. (1965), Technometrics 7, 247-254; compared by Brown, L. D., Cai, T. T. & DasGupta, A. "
+     "(2001), "
      "Statistical Science 16, 101-133."),
-    ("Errors that allow for repeated looks at one customer", "Liang, K.-Y. & Zeger, S. L. (1986), Biometrika 73, 13-22."),
+    ("Errors that allow for repeated looks at one customer", "Liang, K.-Y. & Zeger, S. L. (1986), Biometrika 73, "
+                                                             "13-22."),
     ("Absorbing chains, time to exit, limits", "Kemeny, J. G. & Snell, J. L. (1960), Finite Markov Chains."),
     ("Long-run mix without subtractions", "Grassmann, W. K., Taksar, M. I. & Heyman, D. P. (1985), Operations Research "
      "33, 1107-1116."),
@@ -197,17 +207,29 @@ NOTES: Mapping[str, str] = MappingProxyType(
         "identical_rows_kept": "{rows} rows are identical but carry no clock time, so they may be real repeats: they "
                                "were kept.",
         "log_start_assumed": "The study does not say when the log became complete; its first period was assumed.",
-        "ties_decided_by_order": "{rows} times several events of a customer share one instant; the order of the study's "
+        "ties_decided_by_order": "{rows} times several events of a customer share one instant; the order of the "
+                                 "study's "
                                  "rules decided.",
-        "extract_ends_early": "The extract's last rows are of {last_rows}, before the last day that counts ({as_of}): what "
+        "extract_ends_early": "The extract's last rows are of {last_rows}, before the last day that counts "
+                              "({as_of}): what "
                               "is missing looks like customers who left.",
-        "two_states_in_a_period": "{rows} rows were replaced because their customer has another row for the same period; "
+        "two_states_in_a_period": "{rows} rows were replaced because their customer has another row for the same "
+                                  "period; "
                                   "the last one counts.",
-        "empty_rows": "For {state} some of the model's finer rates rest on no departure at all; the pooled rates stand in "
+        "empty_rows": "For {state} some of the model's finer rates rest on no departure at all; the pooled rates "
+                      "stand in "
                       "for them.",
-        "place_not_seen": "No move was counted at place {place} of the season's cycle; the pooled rates stand in for it.",
+        "place_not_seen": "No move was counted at place {place} of the season's cycle; the pooled rates stand in for "
+                          "it.",
+        "not_converged": "The fitting did not settle on an answer within its steps; its rates are provisional.",
+        "tiny_type": "The kind of customers called {state} holds under 2% of them: it may be noise.",
+        "types_not_identified": "The histories are too short to tell that many kinds of customers apart.",
+        "no_tenure_bands": "No division by time since joining was supported by the counts: one set of rates for all.",
+        "no_ladder": "No division by time in the state was supported by the counts: one set of rates for all.",
+        "short_history": "Under 18 periods were counted: too few to tell how much periods differ from one another.",
         "seasons_thin": "Seasons rest on few moves; their rates are drawn towards the pooled ones.",
-        "no_exit_no_discount": "The value of a customer in {state} has no bound: some never leave and nothing is discounted.",
+        "no_exit_no_discount": "The value of a customer in {state} has no bound: some never leave and nothing is "
+                               "discounted.",
         "joined_without_join_event": "{customers} customers appear without an event that marks joining; their history "
                                      "before is not known.",
     }
@@ -240,7 +262,9 @@ def note(finding: Any) -> str:
     state, segment = str(detail["state"]), str(detail.get("segment", ""))
     words = NOTES.get(kind)
     if words is None:
-        words = upper_first(f"{kind.replace('_', ' ')}{f': {label(state)}' if state else ''}{_size(finding)}.")
+        words = upper_first(
+            f"{kind.replace('_', ' ')}{f': {label(state)}' if state else ''}{_size(finding)}."
+        )
     for key in ("rows", "customers"):
         words = words.replace(f"{{{key}}}", count(getattr(finding, key, 0)))
     for key in re.findall(r"\{([a-z_]+)\}", words):

@@ -12,7 +12,19 @@ from matplotlib.axes import Axes
 
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
-    BAND, BODY, FUTURE, INK, MARGIN, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
+    BAND,
+    BODY,
+    FUTURE,
+    INK,
+    MARGIN,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
     quiet_axis,
 )  # fmt: skip
 from cohortflow.report.rounding import count, percent, signed, span, unit
@@ -93,7 +105,9 @@ def _past(rollforward: Any, segment: str, totals: Mapping[str, Sequence[str]]) -
 
 def _complete_from(frame: pd.DataFrame, wide: pd.DataFrame) -> str:
     """First period whose closing is whole: before it, many customers were there but not yet seen."""
-    seen = frame[(frame["kind"] == "actual") & (frame["line"] == "unobserved_in") & (frame["state"] == ALL_LIVE)]
+    seen = frame[
+        (frame["kind"] == "actual") & (frame["line"] == "unobserved_in") & (frame["state"] == ALL_LIVE)
+    ]
     if ALL_LIVE not in wide or not len(seen):
         return str(wide.index[0])
     late = seen.set_index("period")["customers"].astype(float) > UNSEEN * wide[ALL_LIVE].astype(float)
@@ -119,7 +133,14 @@ def _path(rows: pd.DataFrame, past: pd.DataFrame | None, name: str) -> Path:
 
 
 def _panel(
-    figure: Drawing, path: Path, periods: list[str], left: float, top: float, wide: float, high: float, ticks: int
+    figure: Drawing,
+    path: Path,
+    periods: list[str],
+    left: float,
+    top: float,
+    wide: float,
+    high: float,
+    ticks: int,
 ) -> None:
     axes = panel(figure, left + 0.46, top + HEAD_HIGH, wide - 0.46 - LABEL_WIDE, high)
     now = len(path.past) - 1
@@ -137,7 +158,15 @@ def _panel(
     _ticks(axes, periods, ticks, now)
     _labels(axes, path, x_ahead[-1], top_value)
     lines = fit_lines(path.label, wide - 0.5, BODY, bold=True, lines=2)
-    axes.text(0, 1 + (0.06 / high), "\n".join(lines), transform=axes.transAxes, size=BODY, weight="bold", va="bottom")
+    axes.text(
+        0,
+        1 + (0.06 / high),
+        "\n".join(lines),
+        transform=axes.transAxes,
+        size=BODY,
+        weight="bold",
+        va="bottom",
+    )
 
 
 def _few_ticks() -> Any:
@@ -176,8 +205,11 @@ def _title(path: Path, rows: pd.DataFrame, kind: str) -> str:
     change = signed(value / start - 1, percent) if start else ""
     if low > start or high < start:
         verb = "grow" if low > start else "shrink"
-        return f"{_subject(path.label)} {verb} from {count(start)} to {figures}: {change} in {h} {unit(kind, h)}"
-    return f"{_subject(path.label)}: {figures}; the band does not say whether that is more or less than today's {count(start)}"
+        return (
+            f"{_subject(path.label)} {verb} from {count(start)} to {figures}: {change} in {h} {unit(kind, h)}"
+        )
+    doubt = f"the band does not say whether that is more or less than today's {count(start)}"
+    return f"{_subject(path.label)}: {figures}; {doubt}"
 
 
 def _subject(label: str) -> str:
@@ -185,7 +217,7 @@ def _subject(label: str) -> str:
 
 
 def _subtitle(rows: pd.DataFrame) -> str:
-    levels = pd.unique(rows["level"].dropna()) if "level" in rows else []
+    levels = list(pd.unique(rows["level"].dropna())) if "level" in rows else []
     band = f"{percent(levels[0], 0)} band" if len(levels) == 1 else "band"
     return (
         f"Customers at the end of each period. Solid: counted. Dashed: projected, with its {band}. Dotted upright: the "
@@ -196,5 +228,3 @@ def _subtitle(rows: pd.DataFrame) -> str:
 def _alt(title: str, paths: list[Path], periods: list[str]) -> str:
     ends = [f"{p.label} {count(p.ahead[-1])} ({span(p.low[-1], p.high[-1])})" for p in paths]
     return f"Line charts from {periods[0]} to {periods[-1]}. {title}. At the end: {'; '.join(ends)}."
-
-

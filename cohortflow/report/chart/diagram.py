@@ -15,7 +15,19 @@ from matplotlib.path import Path
 
 from cohortflow.report.chart.frames import ALL, square, states_of, transitions_of
 from cohortflow.report.chart.style import (
-    FAINT, INK, MARGIN, MODEL, PAPER, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
+    FAINT,
+    INK,
+    MARGIN,
+    MODEL,
+    PAPER,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
 )  # fmt: skip
 from cohortflow.report.rounding import percent, span, unit
 from cohortflow.report.text import label
@@ -48,7 +60,8 @@ def state_diagram(
     title = _title(names, rate, low, high, len(known.remaining), period)
     subtitle = (
         f"Moves in one {unit(period, 1)}: down the list at the right, up the list at the left. In the boxes: the share "
-        f"that stays. Thin grey: under {percent(RARE, 0)}; moves under {percent(floor, 0)} carry no figure (they are in "
+        f"that stays. Thin grey: under {percent(RARE, 0)}; moves under {percent(floor, 0)} carry no figure (they are "
+        f"in "
         "the table). Dashed box: an exit."
     )
     alt = f"Boxes joined by arcs. {title}. {_strongest(names, rate)}"
@@ -107,8 +120,14 @@ def _arc(axes: Axes, middle: float, i: int, j: int, rate: float, labelled: bool)
     rare = rate < RARE
     axes.add_patch(
         FancyArrowPatch(
-            path=path, arrowstyle="-|>", mutation_scale=6 if rare else 9, color=FAINT if rare else SOFT,
-            linewidth=0.6 if rare else 0.9 + 7 * np.sqrt(rate) * 0.6, shrinkA=0, shrinkB=0, zorder=1 if rare else 2,
+            path=path,
+            arrowstyle="-|>",
+            mutation_scale=6 if rare else 9,
+            color=FAINT if rare else SOFT,
+            linewidth=0.6 if rare else 0.9 + 7 * np.sqrt(rate) * 0.6,
+            shrinkA=0,
+            shrinkB=0,
+            zorder=1 if rare else 2,
         )  # fmt: skip
     )
     if labelled:
@@ -121,8 +140,14 @@ def _box(axes: Axes, middle: float, i: int, name: str, stays: float, leaves: boo
     y = _place(i)
     axes.add_patch(
         FancyBboxPatch(
-            (middle - BOX_WIDE / 2, y - BOX_HIGH / 2), BOX_WIDE, BOX_HIGH, boxstyle="round,pad=0,rounding_size=0.06",
-            facecolor=PAPER, edgecolor=MODEL if leaves else INK, linewidth=1.1, zorder=3,
+            (middle - BOX_WIDE / 2, y - BOX_HIGH / 2),
+            BOX_WIDE,
+            BOX_HIGH,
+            boxstyle="round,pad=0,rounding_size=0.06",
+            facecolor=PAPER,
+            edgecolor=MODEL if leaves else INK,
+            linewidth=1.1,
+            zorder=3,
             linestyle=(0, (3, 2)) if leaves else "solid",
         )  # fmt: skip
     )
@@ -131,7 +156,16 @@ def _box(axes: Axes, middle: float, i: int, name: str, stays: float, leaves: boo
     high = 0.125 * len(lines) + (0.115 if second else 0)
     top = y - high / 2
     for k, line in enumerate(lines):
-        axes.text(middle, top + 0.125 * k + 0.0625, line, ha="center", va="center", size=SMALL, weight="bold", zorder=4)
+        axes.text(
+            middle,
+            top + 0.125 * k + 0.0625,
+            line,
+            ha="center",
+            va="center",
+            size=SMALL,
+            weight="bold",
+            zorder=4,
+        )
     axes.text(middle, top + 0.125 * len(lines) + 0.055, second, ha="center", va="center", size=SMALL - 1, color=SOFT,
               zorder=4)  # fmt: skip
 

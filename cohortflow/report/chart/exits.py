@@ -10,8 +10,22 @@ from matplotlib.axes import Axes
 
 from cohortflow.report.chart.frames import ALL, clear_winner, frame_of
 from cohortflow.report.chart.style import (
-    BAND, BODY, FUTURE, INK, MARGIN, MODEL, PAPER, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style,
-    panel, quiet_axis,
+    BAND,
+    BODY,
+    FUTURE,
+    INK,
+    MARGIN,
+    MODEL,
+    PAPER,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
+    quiet_axis,
 )  # fmt: skip
 from cohortflow.report.rounding import UNKNOWN, duration, missing, percent, span, unit
 from cohortflow.report.text import label
@@ -56,7 +70,9 @@ def exit_reason_chart(exits: Any, *, segment: str = ALL, width: float = WIDE) ->
     rows = rows[rows["measure"] == "probability"]
     names, ways = [str(n) for n in pd.unique(rows["from"])], [str(e) for e in pd.unique(rows["exit"])]
     title = _reason_title(rows, names, ways)
-    subtitle = "Share of the customers now in a state who will in the end leave by each exit, with its interval."
+    subtitle = (
+        "Share of the customers now in a state who will in the end leave by each exit, with its interval."
+    )
     said = [f"{label(r['from'])} by {label(r['exit'])} {percent(r['value'])}" for _, r in rows.iterrows()]
     alt = f"One line a state, one mark an exit. {title}. {'; '.join(said)}."
     key_high = 0.24 * _key_lines(ways, width)
@@ -83,7 +99,13 @@ def _by_state(rows: pd.DataFrame, measure: str) -> pd.DataFrame:
 
 
 def _rows_panel(
-    figure: Drawing, names: list[str], width: float, *, top: float = 0.0, row_high: float = ROW_HIGH, note: float
+    figure: Drawing,
+    names: list[str],
+    width: float,
+    *,
+    top: float = 0.0,
+    row_high: float = ROW_HIGH,
+    note: float,
 ) -> Axes:
     """A panel with one row a state, names at the left, room for a note at the right."""
     name_wide = min(NAME_WIDE, 0.3 * width)
@@ -107,7 +129,9 @@ def _time_row(axes: Axes, y: int, row: pd.Series, kind: str, top: float) -> None
     if np.isfinite(median):
         axes.plot([median, median], [y - 0.25, y + 0.25], color=INK, linewidth=1.4)
     note = duration(mean, kind) if not missing(mean) else UNKNOWN
-    below = f"({span(row['low'], row['high'], _bare)})" if np.isfinite(mean) and not missing(row["low"]) else ""
+    below = (
+        f"({span(row['low'], row['high'], _bare)})" if np.isfinite(mean) and not missing(row["low"]) else ""
+    )
     axes.annotate(note, (1, y), xycoords=("axes fraction", "data"), xytext=(6, 4 if below else 0),
                   textcoords="offset points", size=BODY - 0.3, weight="bold", color=FUTURE, va="center")  # fmt: skip
     axes.annotate(below, (1, y), xycoords=("axes fraction", "data"), xytext=(6, -5.5), textcoords="offset points",
@@ -132,8 +156,10 @@ def _time_title(table: pd.DataFrame, kind: str) -> str:
     if shortest is None or len(finite) == 1:
         i = int(np.argmin(value))
         more = "" if len(finite) == 1 else "; the intervals do not single out one state"
-        return f"Customers now in {label(finite.index[i])} stay another {_with_span(finite.iloc[i], kind)} on average{more}"
-    return f"Customers in {label(finite.index[shortest])} leave soonest: after {_with_span(finite.iloc[shortest], kind)} on average"
+        stay = _with_span(finite.iloc[i], kind)
+        return f"Customers now in {label(finite.index[i])} stay another {stay} on average{more}"
+    time = _with_span(finite.iloc[shortest], kind)
+    return f"Customers in {label(finite.index[shortest])} leave soonest: after {time} on average"
 
 
 def _with_span(row: pd.Series, kind: str) -> str:
@@ -193,5 +219,6 @@ def _reason_mark(axes: Axes, y: float, row: pd.Series, k: int) -> None:
     if not missing(row["low"]):
         axes.plot([row["low"], row["high"]], [y, y], color=SOFT, linewidth=1.1, zorder=2)
     _mark(axes, row["value"], y, k)
-    axes.annotate(percent(row["value"]), (max(row["value"], row["high"] if not missing(row["high"]) else 0), y),
-                  xytext=(6, 0), textcoords="offset points", size=SMALL - 0.7, va="center", annotation_clip=False)  # fmt: skip
+    right = row["value"] if missing(row["high"]) else max(row["value"], row["high"])
+    axes.annotate(percent(row["value"]), (right, y), xytext=(6, 0), textcoords="offset points", size=SMALL - 0.7,
+                  va="center", annotation_clip=False)  # fmt: skip

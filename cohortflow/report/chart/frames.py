@@ -34,7 +34,9 @@ def frame_of(result: Any, columns: Iterable[str], *, segment: str = ALL) -> pd.D
     if segment == ALL and ALL not in known and len(known) == 1:
         segment = known[0]
     if segment not in known:
-        raise CallError(f'There is no segment "{segment}"{nearest(segment, known)}; there are {listed(known)}.')
+        raise CallError(
+            f'There is no segment "{segment}"{nearest(segment, known)}; there are {listed(known)}.'
+        )
     return frame[frame["segment"] == segment].reset_index(drop=True)
 
 

@@ -10,7 +10,20 @@ from matplotlib.axes import Axes
 from cohortflow.errors import CallError
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
-    BODY, INK, MARGIN, MODEL, PAPER, SHADES, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
+    BODY,
+    INK,
+    MARGIN,
+    MODEL,
+    PAPER,
+    SHADES,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
     text_width,
 )  # fmt: skip
 from cohortflow.report.rounding import missing, percent
@@ -34,11 +47,14 @@ class Group:
 
 
 def groups_of(long_run: Any, *, start: str = "start", segment: str = ALL) -> list[Group]:
-    """Closed groups, then exits, with the share of today's customers (or of those starting in a state) that end there."""
+    """Closed groups, then exits, with the share of today's customers (or of those starting in a state) that end "
+    "there."""
     rows = frame_of(long_run, ["measure", "state", "from", "value"], segment=segment)
     ends = rows[(rows["measure"] == "limit_from_start") & (rows["from"] == start)]
     share = ends.groupby("state")["value"].mean()
-    inside = rows[rows["measure"] == "stationary_share"].groupby(["from", "state"], sort=False)["value"].mean()
+    inside = (
+        rows[rows["measure"] == "stationary_share"].groupby(["from", "state"], sort=False)["value"].mean()
+    )
     periods = rows[rows["measure"] == "group_period"].set_index("from")["value"]
     out, grouped = [], set()
     for origin, members in rows[rows["measure"] == "closed_group"].groupby("from", sort=False)["state"]:
@@ -87,7 +103,16 @@ def _bar(axes: Axes, group: Group, top: float, wide: float) -> None:
         piece = full * ends * (0 if missing(share) else share)
         face = PAPER if group.exit else SHADES[(2, 4)[k % 2]]
         edge, line = (MODEL, (0, (3, 2))) if group.exit else (INK, "solid")
-        axes.barh(middle, piece, left=left, height=BAR_HIGH, color=face, edgecolor=edge, linewidth=0.8, linestyle=line)
+        axes.barh(
+            middle,
+            piece,
+            left=left,
+            height=BAR_HIGH,
+            color=face,
+            edgecolor=edge,
+            linewidth=0.8,
+            linestyle=line,
+        )
         text = f"{label(member, 24)} {percent(share, 0)}"
         if len(group.members) > 1 and text_width(text, SMALL - 0.6) < piece - 0.06:
             axes.text(left + piece / 2, middle, text, ha="center", va="center", size=SMALL - 0.6)
@@ -113,5 +138,3 @@ def _title(groups: list[Group]) -> str:
     kind = "groups of states that nobody leaves" if len(kept) > 1 else "ways to end"
     number = len(kept) if len(kept) > 1 else len(groups)
     return f"{number} {kind}: {percent(most.ends)} of today's customers end in {most.name}"
-
-

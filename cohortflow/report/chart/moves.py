@@ -11,7 +11,20 @@ from matplotlib.patches import Rectangle
 
 from cohortflow.report.chart.frames import ALL, clear_winner, square, states_of, transitions_of
 from cohortflow.report.chart.style import (
-    FAINT, INK, MARGIN, PAPER, SHADES, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel, shade,
+    FAINT,
+    INK,
+    MARGIN,
+    PAPER,
+    SHADES,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
+    shade,
 )  # fmt: skip
 from cohortflow.report.rounding import count, percent, span, unit
 from cohortflow.report.text import label
@@ -85,7 +98,7 @@ def _title(names: list[str], cells: dict[str, np.ndarray], origins: int, period:
 
 
 def _level_words(rows: pd.DataFrame) -> str:
-    levels = pd.unique(rows["level"].dropna()) if "level" in rows else []
+    levels = list(pd.unique(rows["level"].dropna())) if "level" in rows else []
     return f", with its {percent(levels[0], 0)} interval" if len(levels) == 1 else ", with its interval"
 
 
@@ -93,7 +106,9 @@ def _heads(
     axes: Axes, heads: list[list[str]], lefts: list[float], cell: float, top: float, origins: int, exits: int
 ) -> None:
     for lines, left in zip(heads, lefts, strict=True):
-        axes.text(left + cell / 2, top - 0.05, "\n".join(lines), ha="center", va="bottom", size=SMALL, color=INK)
+        axes.text(
+            left + cell / 2, top - 0.05, "\n".join(lines), ha="center", va="bottom", size=SMALL, color=INK
+        )
     axes.text(0, top - 0.05, "in state (customers at risk)", size=SMALL, color=SOFT, va="bottom")
     axes.text(lefts[0], 0.02, "goes to", size=SMALL, color=SOFT, va="top")
     if exits:
@@ -101,7 +116,13 @@ def _heads(
 
 
 def _row(
-    axes: Axes, names: list[str], cells: dict[str, np.ndarray], i: int, lefts: list[float], cell: float, top: float
+    axes: Axes,
+    names: list[str],
+    cells: dict[str, np.ndarray],
+    i: int,
+    lefts: list[float],
+    cell: float,
+    top: float,
 ) -> None:
     middle = top + CELL_HIGH / 2
     at_risk = np.nanmax(cells["at_risk"][i]) if not np.isnan(cells["at_risk"][i]).all() else 0
@@ -125,7 +146,9 @@ def _cell(
     centre, middle = left + cell / 2, top + CELL_HIGH / 2
     colour = PAPER if step >= DARK_FROM else INK
     if no_data or rate != rate:
-        axes.text(centre, middle, "no data" if no_data else "–", ha="center", va="center", size=SMALL, color=SOFT)
+        axes.text(
+            centre, middle, "no data" if no_data else "–", ha="center", va="center", size=SMALL, color=SOFT
+        )
         return
     if values["count"] == 0 and values["high"] in (0.0,):
         axes.text(centre, middle, "–", ha="center", va="center", size=SMALL, color=SOFT)
@@ -139,7 +162,9 @@ def _cell(
               weight="bold")  # fmt: skip
     axes.text(centre, middle + 0.02, span(values["low"], values["high"], percent).replace(" to ", "–"), ha="center",
               va="center", size=5.6, color=colour)  # fmt: skip
-    axes.text(centre, middle + 0.14, f"n {count(values['count'])}", ha="center", va="center", size=5.6, color=colour)
+    axes.text(
+        centre, middle + 0.14, f"n {count(values['count'])}", ha="center", va="center", size=5.6, color=colour
+    )
 
 
 def _scale(axes: Axes, top: float, right: float) -> None:

@@ -9,7 +9,20 @@ import pandas as pd
 
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
-    BODY, FAINT, INK, MARGIN, MODEL, MODEL_BAND, PAPER, SMALL, SOFT, WIDE, Drawing, drawing, house_style, panel,
+    BODY,
+    FAINT,
+    INK,
+    MARGIN,
+    MODEL,
+    MODEL_BAND,
+    PAPER,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    house_style,
+    panel,
     quiet_axis,
 )  # fmt: skip
 from cohortflow.report.rounding import count, percent, span, unit
@@ -19,7 +32,12 @@ COLUMNS = ["periods_since_joining", "at_risk", "observed", "observed_low", "obse
 
 
 def retention_chart(
-    retention: Any, *, kind: str = "month", level: float | None = None, segment: str = ALL, width: float = WIDE
+    retention: Any,
+    *,
+    kind: str = "month",
+    level: float | None = None,
+    segment: str = ALL,
+    width: float = WIDE,
 ) -> Drawing:
     """Share of joiners still customers by periods since joining: observed points with intervals, the model's
     curve, and immature ages (which less than half of the joiners can have reached) marked by open points.
@@ -34,7 +52,9 @@ def retention_chart(
         f"than half of the joiners have had time to reach. Dashed: the model."
     )
     with house_style():
-        figure = drawing(title, subtitle, width=width, body=HIGH + FOOT_HIGH + 0.1, alt=_alt(title, rows, kind))
+        figure = drawing(
+            title, subtitle, width=width, body=HIGH + FOOT_HIGH + 0.1, alt=_alt(title, rows, kind)
+        )
         axes = panel(figure, MARGIN + 0.42, 0.1, width - 2 * MARGIN - 0.42 - 0.85, HIGH)
         if "model_low" in rows:
             axes.fill_between(rows["periods_since_joining"], rows["model_low"], rows["model_high"], color=MODEL_BAND,
@@ -77,7 +97,9 @@ def _points(axes: Any, rows: pd.DataFrame) -> None:
     seen = rows["observed"].notna().to_numpy()
     young = immature(rows)
     ages = rows["periods_since_joining"].to_numpy(dtype=float)
-    axes.vlines(ages[seen], rows["observed_low"][seen], rows["observed_high"][seen], color=SOFT, linewidth=1.0)
+    axes.vlines(
+        ages[seen], rows["observed_low"][seen], rows["observed_high"][seen], color=SOFT, linewidth=1.0
+    )
     for mask, face in ((seen & ~young, INK), (seen & young, PAPER)):
         axes.plot(ages[mask], rows["observed"][mask], "o", color=INK, markerfacecolor=face, markersize=3.6,
                   markeredgewidth=0.9)  # fmt: skip
@@ -119,7 +141,8 @@ def _title(rows: pd.DataFrame, kind: str) -> str:
     if apart is None:
         return f"{head}; the model says {percent(last['model'])}, within the interval"
     side = "too many" if last["model"] > last["observed"] else "too few"
-    return f"{head}; from age {apart} on the model lies outside and keeps {side} ({percent(last['model'])} at age {age})"
+    figure = f"{percent(last['model'])} at age {age}"
+    return f"{head}; from age {apart} on the model lies outside and keeps {side} ({figure})"
 
 
 def _alt(title: str, rows: pd.DataFrame, kind: str) -> str:

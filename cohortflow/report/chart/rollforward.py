@@ -13,7 +13,20 @@ from matplotlib.axes import Axes
 from cohortflow.errors import CallError, listed
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
-    BAND, BODY, FAINT, FUTURE, INK, MARGIN, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
+    BAND,
+    BODY,
+    FAINT,
+    FUTURE,
+    INK,
+    MARGIN,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
     text_width,
 )  # fmt: skip
 from cohortflow.report.rounding import count, foot, signed
@@ -78,7 +91,9 @@ def steps_of(rollforward: Any, *, quantity: str = ALL_LIVE, segment: str = ALL) 
     out = []
     for kind, place in (("actual", -1), ("forecast", 0)):
         periods = pd.unique(own.loc[own["kind"] == kind, "period"])
-        chosen = own[(own["kind"] == kind) & (own["period"] == periods[place])] if len(periods) else own.iloc[:0]
+        chosen = (
+            own[(own["kind"] == kind) & (own["period"] == periods[place])] if len(periods) else own.iloc[:0]
+        )
         if len(chosen) and chosen["customers"].notna().all():
             out.append(_step(chosen))
     if not out:
@@ -125,7 +140,10 @@ def _draw(
     axes.text(0, 0.1, heading, weight="bold", size=BODY, color=INK if actual else FUTURE, va="center")
     room = wide - NAME_WIDE - 1.3
     low, high = limits
-    place = lambda v: NAME_WIDE + 0.65 + (v - low) / (high - low) * room  # noqa: E731
+
+    def place(value: float) -> float:
+        return NAME_WIDE + 0.65 + (value - low) / (high - low) * room
+
     y = 0.36
     _total(axes, "opening base", step.opening, y, wide, place(0))
     now = 0.0
@@ -137,17 +155,23 @@ def _draw(
     _total(axes, "closing base", step.closing, y, wide, place(now), change=now)
 
 
-def _total(axes: Axes, name: str, value: int, y: float, wide: float, x: float, change: float | None = None) -> None:
+def _total(
+    axes: Axes, name: str, value: int, y: float, wide: float, x: float, change: float | None = None
+) -> None:
     axes.plot([0, wide], [y - ROW_HIGH / 2] * 2, color=FAINT, linewidth=0.7)
     axes.text(0, y, name, weight="bold", va="center")
     axes.plot([x, x], [y - 0.09, y + 0.09], color=INK, linewidth=2.4, solid_capstyle="butt")
     note = count(value) if change is None else f"{count(value)} ({signed(change)})"
     fits = x + 0.07 + text_width(note, BODY, bold=True) <= wide
-    axes.text(x + (0.07 if fits else -0.07), y, note, weight="bold", va="center", ha="left" if fits else "right")
+    axes.text(
+        x + (0.07 if fits else -0.07), y, note, weight="bold", va="center", ha="left" if fits else "right"
+    )
 
 
 def _part(axes: Axes, name: str, change: int, y: float, start: float, end: float, actual: bool) -> None:
-    axes.text(0, y, "\n".join(fit_lines(name, NAME_WIDE, SMALL + 0.5, lines=2)), va="center", size=SMALL + 0.5)
+    axes.text(
+        0, y, "\n".join(fit_lines(name, NAME_WIDE, SMALL + 0.5, lines=2)), va="center", size=SMALL + 0.5
+    )
     colour, edge = (SOFT, SOFT) if actual else (BAND, FUTURE)
     hatch = "" if change >= 0 else "//////"
     face = colour if change >= 0 else "none"

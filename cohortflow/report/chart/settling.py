@@ -13,8 +13,22 @@ from matplotlib.ticker import MaxNLocator
 from cohortflow.errors import CallError
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.chart.style import (
-    BODY, FUTURE, INK, MARGIN, MODEL, MODEL_BAND, SMALL, SOFT, WIDE, Drawing, drawing, fit_lines, house_style, panel,
-    quiet_axis, share_ticks,
+    BODY,
+    FUTURE,
+    INK,
+    MARGIN,
+    MODEL,
+    MODEL_BAND,
+    SMALL,
+    SOFT,
+    WIDE,
+    Drawing,
+    drawing,
+    fit_lines,
+    house_style,
+    panel,
+    quiet_axis,
+    share_ticks,
 )  # fmt: skip
 from cohortflow.report.rounding import count, duration, missing, percent, span, unit
 from cohortflow.report.text import label

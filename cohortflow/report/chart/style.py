@@ -54,7 +54,7 @@ OTHER_SCRIPTS = (
     "Noto Sans Arabic", "Noto Sans Hebrew", "Noto Sans Devanagari", "Noto Sans Thai",
 )  # fmt: skip
 MARGIN = 0.12
-RC = {
+RC: dict[Any, Any] = {
     "svg.fonttype": "none",
     "svg.hashsalt": "cohortflow",
     "text.parse_math": False,
@@ -175,7 +175,8 @@ def svg(figure: Figure) -> str:
     """
     out = io.StringIO()
     with house_style():
-        FigureCanvasSVG(figure).print_svg(out, metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
+        canvas: Any = FigureCanvasSVG(figure)
+        canvas.print_svg(out, metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
     drawn = out.getvalue()
     drawn = drawn[drawn.index("<svg") :]
     drawn = re.sub(r"\s*<metadata>.*?</metadata>", "", drawn, flags=re.S)
