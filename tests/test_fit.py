@@ -139,7 +139,7 @@ def test_refusals():
     counts = tally()
     with pytest.raises(CallError, match=r'Unknown model "plane" \(did you mean "plain"'):
         fit(counts, model="plane")
-    with pytest.raises(CallError, match='The plain model takes no option "bands". Its options: none'):
+    with pytest.raises(CallError, match='The plain model takes no option "bands". Its options: "gaps"'):
         fit(counts, bands=[3])
     with pytest.raises(CallError, match='There is no segment "region"'):
         fit(counts, by="region")

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from cohortflow.errors import CallError, listed, nearest
+from cohortflow.estimator.gaps import with_gaps
 from cohortflow.estimator.layout import Built, Part, build, with_exits
 from cohortflow.estimator.mixture import mixture, mover_stayer
 from cohortflow.estimator.rows import RowCounts
@@ -26,12 +27,15 @@ Builder = Callable[..., Built]
 DEFAULT_WINDOW = 12
 
 
-def plain(tally: Tally, window: Window, rates: RowCounts) -> Built:
-    """One matrix, the pooled rates."""
+def plain(tally: Tally, window: Window, rates: RowCounts, *, gaps: str = "drop") -> Built:
+    """One matrix, the pooled rates; gaps="em" also uses pairs of rows with periods missing between (gaps.py)."""
     states = tally.states
+    rates, notes = with_gaps(tally, window, rates, gaps)
     eye, exits = np.eye(len(states)), states.exit_mask
     part = Part(lambda r: with_exits(r, exits)[..., None, :, :], np.arange(len(states)), eye, eye)
-    return build(tally, rates, (part,), rates=rates, settings={"effective_n": _by_state(rates, states)})
+    return build(
+        tally, rates, (part,), rates=rates, notes=notes, settings={"effective_n": _by_state(rates, states)}
+    )
 
 
 def recent_window(tally: Tally, window: int | None, half_life: float | None) -> dict[str, Any]:
