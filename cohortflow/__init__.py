@@ -35,6 +35,10 @@ _HOME = {
     "Change": "whatif",
     "Scenario": "whatif",
     "what_if": "whatif",
+    "sensitivity": "whatif",
+    "required_change": "whatif",
+    "compare_arms": "whatif",
+    "trial_size": "whatif",
     "run": "runs",
     "write_report": "report",
 }

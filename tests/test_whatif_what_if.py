@@ -65,7 +65,8 @@ def test_every_kind_of_model_equals_the_projection_of_the_changed_model(
 
 
 @pytest.mark.parametrize("starts, ends, acting", [
-    (None, None, range(6)), ("2026-12", None, [2, 3, 4, 5]), (None, "2026-11", [0, 1]), ("2026-11", "2027-01", [1, 2, 3]),
+    (None, None, range(6)), ("2026-12", None, [2, 3, 4, 5]), (None, "2026-11", [0, 1]),
+    ("2026-11", "2027-01", [1, 2, 3]),
 ])  # fmt: skip
 @pytest.mark.parametrize("season", [False, True])
 def test_dated_changes_against_a_plain_loop(starts, ends, acting, season):
@@ -97,7 +98,8 @@ def test_dated_changes_against_a_plain_loop(starts, ends, acting, season):
 
 def test_prices_and_joiners_in_their_periods():
     plan = Scenario(
-        "dearer", joiners_multiply=0.5, joiners_mix={"steady": 1.0}, per_period={"steady": 22.0}, starts="2026-11", ends="2026-12",
+        "dearer", joiners_multiply=0.5, joiners_mix={"steady": 1.0}, per_period={"steady": 22.0},
+        starts="2026-11", ends="2026-12",
     )  # fmt: skip
     found = what_if(CHAIN, plan, periods=4, start=START, joiners=JOINERS, value=MONEY, base_period="2026-09")
     new = [0, 15.0, 0, 0, 0]  # half of 30, all of them steady
