@@ -5,7 +5,7 @@ import pandas as pd
 import pytest
 
 from cohortflow.chain import Chain
-from cohortflow.errors import CallError
+from cohortflow.errors import CallError, NotIdentified
 from cohortflow.projector import step_counts, value
 from cohortflow.whatif import compare_arms
 from tests.bench.worlds import panel_tally, simulate
@@ -119,3 +119,10 @@ def test_arguments():
     assert isinstance(
         compare_arms(trial(), column="group", control="a", horizon=1, draws=2).to_frame(), pd.DataFrame
     )
+
+
+def test_states_that_nobody_left_stop_what_follows():
+    panel = np.array([[0, 0, 2], [0, 0, 1], [0, 0, 0], [0, 2, -1]])  # dull is entered once, in the last period
+    tally = panel_tally(panel, LDC, segment=np.array([0, 0, 1, 1]))
+    with pytest.raises(NotIdentified, match='passes through "dull", and no departure from there was counted'):
+        compare_arms(tally, column="group", control="a", horizon=2, start={"lively": 10}, draws=2)

@@ -111,8 +111,7 @@ def _comparable(
     if not chosen.any():
         raise NotIdentified(
             f"The arms {listed(arms)} have no state in common from which departures were counted: nothing "
-            f"can be "
-            "compared. Check the arm column and `starts`."
+            "can be compared. Check the arm column and `starts`."
         )
     return chosen, [n for n, w, c in zip(states.names, wanted, chosen, strict=True) if w and not c]
 
@@ -126,8 +125,7 @@ def choose_arms(
     if column is None and len(marked) != 1:
         raise CallError(
             f"Which column tells the arms? Segment columns here: {listed(n for n, _ in roles)}; declare one "
-            f"as the "
-            "arm of the extract, or pass column=."
+            "as the arm of the extract, or pass column=."
         )
     name = column if column is not None else marked[0]
     values = [v for v in tally.segment_values(name) if v != ""]

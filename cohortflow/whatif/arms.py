@@ -13,6 +13,7 @@ is those who were drawn into an arm, whatever they then did.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, ClassVar
@@ -22,11 +23,14 @@ import pandas as pd
 from numpy.typing import NDArray
 from scipy import special
 
-from cohortflow.chain import Chain, Draws
+from cohortflow.chain import Chain, Draws, Schedule
+from cohortflow.errors import NotIdentified, listed
 from cohortflow.estimator.draws import draw_rows
 from cohortflow.markov.derivative import mix_derivative
 from cohortflow.markov.gradient import Derivative
+from cohortflow.markov.structure import leads_to
 from cohortflow.projector import accept
+from cohortflow.projector.mix import filled
 from cohortflow.projector.money import value_derivative
 from cohortflow.projector.project import as_joiners
 from cohortflow.record import Record
@@ -35,7 +39,7 @@ from cohortflow.whatif.arm_rows import ArmRows, arm_rows, choose_arms, holm, mov
 from cohortflow.whatif.compare import paired
 from cohortflow.whatif.course import Course
 from cohortflow.whatif.money import Money, as_money
-from cohortflow.whatif.paths import walk_paths
+from cohortflow.whatif.paths import Paths, walk_paths
 
 Array = NDArray[np.float64]
 
@@ -157,6 +161,7 @@ def compare_arms(
     asked = _Asked(tally, rows, accept.as_periods(horizon), quantile, level)
     counts = accept.opening(None, tally.mix() if start is None else start, tally.states)
     money = as_money(value, Chain(tally.states, np.eye(len(tally.states)), period=tally.calendar).schedule)
+    asked.refuse_unknown(counts, joiners)
     frames = [asked.moves(), asked.retention(counts / counts.sum())]
     if money.terms is not None:
         frames.append(asked.value(counts / counts.sum(), money))
@@ -179,6 +184,25 @@ class _Asked:
     @property
     def others(self) -> tuple[str, ...]:
         return self.rows.arms[1:]
+
+    def refuse_unknown(self, counts: Array, joiners: Any) -> None:
+        """NotIdentified when those there or joining can get to a state without any departures."""
+        coming = as_joiners(joiners, self._schedule(self._pair(self.others[0])[0]), None, 1).expected()[0]
+        for arm in self.rows.arms:
+            matrix = self.rows.matrices(self.rows.counts.P, arm)
+            unknown = np.flatnonzero(np.isnan(matrix).any(axis=1))
+            reach = (
+                leads_to(np.nan_to_num(matrix) > 0, unknown.tolist())
+                if len(unknown)
+                else np.zeros(len(counts), bool)
+            )
+            if reach[(counts > 0) | (coming > 0)].any():
+                names = [self.rows.states.names[k] for k in unknown]
+                raise NotIdentified(
+                    f"What follows from the arms passes through {listed(names)}, and no departure from "
+                    f"there was counted "
+                    "since the experiment began. Give start= and joiners= that do not get there, or wait."
+                )
 
     def moves(self) -> pd.DataFrame:
         frames = [
@@ -230,8 +254,11 @@ class _Asked:
     def _pair(self, arm: str) -> tuple[Array, Array]:
         """Matrices of the control and of the arm."""
         rates = self.rows.counts.P
-        first, second = (_complete(self.rows.matrices(rates, a)) for a in (self.rows.arms[0], arm))
+        first, second = (filled(self.rows.matrices(rates, a)) for a in (self.rows.arms[0], arm))
         return first, second
+
+    def _schedule(self, matrix: Array) -> Schedule:
+        return Chain(self.rows.states, matrix, period=self.tally.calendar).schedule
 
     def _derived(self, slope: Derivative, weights: Array | None) -> tuple[float, Array]:
         """(value, gradient) of a weighted sum of targets, or of the first."""
@@ -244,7 +271,8 @@ class _Asked:
         (base, slope_c), (new, slope_a) = pair
         gradient = self.rows.spread(slope_a, arm) - self.rows.spread(slope_c, self.rows.arms[0])
         flat = gradient.ravel()
-        error = float(np.sqrt(max(flat @ np.nan_to_num(self.rows.cov.matrix) @ flat, 0.0)))
+        variance = float(flat @ np.nan_to_num(self.rows.cov.matrix) @ flat)
+        error = math.sqrt(max(variance, 0.0))
         d = new - base
         return {
             "measure": measure, "arm": arm, "against": self.rows.arms[0], "control": base, "treated": new,
@@ -253,10 +281,12 @@ class _Asked:
         }  # fmt: skip
 
     def _rolled(self, arm: str, counts: Array, joiners: Any, money: Money, drawn: Array) -> pd.DataFrame:
-        states, paths, scattered = self.rows.states, [], []
+        states = self.rows.states
+        paths: list[Paths] = []
+        scattered: list[Paths] = []
         for which, matrix in zip((self.rows.arms[0], arm), self._pair(arm), strict=True):
-            schedule = Chain(states, matrix, period=self.tally.calendar).schedule
-            draws = Draws.of_matrices(schedule, [_complete(self.rows.matrices(drawn, which))[:, None]])
+            schedule = self._schedule(matrix)
+            draws = Draws.of_matrices(schedule, [filled(self.rows.matrices(drawn, which))[:, None]])
             inflow = as_joiners(joiners, schedule, self.tally.meta.last, self.horizon).expected()[None]
             course = Course.of(schedule, (), None, 0)
             for kept, source in ((paths, None), (scattered, draws)):
@@ -283,14 +313,6 @@ class _Asked:
             for name, pair in pairs.items()
         ]  # fmt: skip
         return pd.concat(frames, ignore_index=True)
-
-
-def _complete(matrices: Array) -> Array:
-    """Rows without data stay where they are: nobody in the comparison gets there, or everybody's row is
-    missing.
-    """
-    missing = np.isnan(matrices).any(axis=-1)
-    return np.where(missing[..., None], np.eye(matrices.shape[-1]), matrices)
 
 
 def _quantile(df: float, level: float) -> float:

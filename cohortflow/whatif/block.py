@@ -101,8 +101,7 @@ class Block:
         if stuck:
             raise NotIdentified(
                 "Exit is not certain for everybody who gets into this figure, so it has no limit: some stay "
-                "for "
-                "ever. Declare the missing exit, or ask for a figure at a horizon."
+                "for ever. Declare the missing exit, or ask for a figure at a horizon."
             )
         return left, right
 

@@ -91,21 +91,19 @@ class Change:
 
     def resized(self, size: float, how: str = "add") -> Change:
         """The same lever with another size."""
-        kept = {name: getattr(self, name) for name in ("balance", "starts", "ends", "segment")}
-        return Change(self.from_, self.to, **{how: size}, **kept)
+        kept: dict[str, Any] = {n: getattr(self, n) for n in ("balance", "starts", "ends", "segment")}
+        return Change(self.from_, self.to, **(kept | {how: size}))
 
     def within(self, starts: Any, ends: Any, segment: str | None) -> Change:
         """The change with these dates and this segment where it has none of its own."""
         dated = self.starts is not None or self.ends is not None
-        return Change(
-            self.from_,
-            self.to,
-            balance=self.balance,
-            starts=self.starts if dated else starts,
-            ends=self.ends if dated else ends,
-            segment=self.segment or segment,
-            **{self.how: self.size},
-        )
+        kept: dict[str, Any] = {
+            "balance": self.balance,
+            "starts": self.starts if dated else starts,
+            "ends": self.ends if dated else ends,
+            "segment": self.segment or segment,
+        }
+        return Change(self.from_, self.to, **(kept | {self.how: self.size}))
 
     def origins(self, states: States) -> tuple[str, ...]:
         """The declared states whose rows change: for "all_live" those live ones that may make the move."""
@@ -131,8 +129,7 @@ class Change:
         if not self.balance or chosen[states.index(self.to)]:
             raise CallError(
                 f'The balance of "{origin}" to "{self.to}" is {listed(self.balance)}; it names other moves '
-                f"of the "
-                f'row, or is "{PROPORTIONAL}".'
+                f'of the row, or is "{PROPORTIONAL}".'
             )
         barred = [n for n in self.balance if not allowed[states.index(n)]]
         if barred and self.from_ != ALL_LIVE:
@@ -217,8 +214,7 @@ def apply(
                 continue
             raise NotIdentified(
                 f'The change of "{origin}" to "{change.to}" needs the row of "{origin}", and no departure '
-                f"from it "
-                "was seen. Read a longer history, or give the row by hand in a Chain."
+                "from it was seen. Read a longer history, or give the row by hand in a Chain."
             )
         room = Room.of(held, component, states, change, origin)
         step, cut = room.step(change, clip=clip)
@@ -243,8 +239,7 @@ class Room:
         if not onto.any():
             raise NotIdentified(
                 f'The model\'s part "{component.name}" has no place for "{change.to}": its customers never '
-                f"get "
-                "there, so the move cannot be changed for them."
+                "get there, so the move cannot be changed for them."
             )
         paying = change.payers(states, origin)[component.report]
         return cls(held[..., onto].sum(axis=-1), held[..., paying].sum(axis=-1), onto, paying, origin)
@@ -281,8 +276,7 @@ class Room:
             return landing(component, states, rows, names[0])
         raise CallError(
             f'The row of "{self.origin}" has nothing but "{change.to}", so what it loses cannot be shared '
-            f"out in "
-            f"proportion; name one move as the balance ({listed(names)})."
+            f"out in proportion; name one move as the balance ({listed(names)})."
         )
 
     def _refusal(self, change: Change, cut: NDArray[np.bool_]) -> str:
@@ -297,8 +291,7 @@ class Room:
         pays = "the rest of the row" if change.balance == PROPORTIONAL else listed(change.balance)
         return (
             f'The change of "{self.origin}" to "{change.to}" by {change.how} {change.size:g} cannot be met: '
-            f"the "
-            f"move has {here:.6g}, its balance ({pays}) {pool:.6g}. Feasible is {feasible}."
+            f"the move has {here:.6g}, its balance ({pays}) {pool:.6g}. Feasible is {feasible}."
         )
 
 

@@ -131,7 +131,7 @@ def _gains(part: Component, gradient: Array, held: Array, paid: Array, states: S
     alone = np.bincount(part.report, minlength=len(states)) == 1
     for k in np.flatnonzero(alone):
         out[:, k] = gradient[:, int(np.flatnonzero(part.report == k)[0])]
-    matters = gradient.any(axis=1)
+    matters = np.asarray(gradient.any(axis=1))
     for row, k in np.argwhere((held <= 0) & ~alone & states.allowed[part.report] & matters[:, None]):
         try:
             law = landing(part, states, np.array([row]), states.names[k])[0]

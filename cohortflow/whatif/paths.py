@@ -98,14 +98,16 @@ class Step:
         self.course, self.component, self.prices = course, component, prices
         self.draws, self.shift = draws, shift
         self.part = course.schedule.components[component]
-        self.short, self.key, self.held = 0.0, None, None
+        self.short = 0.0
+        self.key: tuple[int, tuple[int, ...], int] | None = None
+        self.held: tuple[Array, Array | None, Array] | None = None
 
     def __call__(self, step: int) -> tuple[Array, Array | None, Array]:
         terms = self.prices(step)
         shocked = self.draws is not None and "common shocks" in self.draws.part
         place = step if shocked else self.part.position(self.course.first_step + step)
         key = (place, self.course.in_force(step), id(terms))
-        if key != self.key:
+        if self.held is None or key != self.key:
             self.key, self.held = key, self._made(step, terms)
         return self.held
 

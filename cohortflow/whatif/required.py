@@ -150,7 +150,7 @@ def required_change(
         "value": value,
         "base_period": base_period,
     }
-    costs = {"cost_per_customer": cost_per_customer, "fixed_cost": fixed_cost}
+    costs: dict[str, Any] = {"cost_per_customer": cost_per_customer, "fixed_cost": fixed_cost}
     if target == "net":
         mark, figure = 0.0 if reach is None else float(reach), _net(model, change, costs, opened)
     elif reach is None or not np.isfinite(reach):
@@ -183,8 +183,7 @@ def _of_target(
     if dated and not ahead and aim.measure in ("life", "value"):
         raise CallError(
             f'A dated change and "{aim.code}" for ever do not go together: leave starts and ends away, or '
-            f"give a "
-            "horizon."
+            "give a horizon."
         )
 
     def figure(schedule: Schedule, size: float) -> float:
@@ -203,7 +202,7 @@ def _at_once(aim: Target) -> Target:
     return replace(aim, first_step=0)
 
 
-def _net(model: Any, change: Change, costs: Mapping[str, float], opened: Mapping[str, Any]) -> Figure:
+def _net(model: Any, change: Change, costs: Mapping[str, Any], opened: Mapping[str, Any]) -> Figure:
     """Value over the horizon less the costs, against the model as it stands."""
     if opened["horizon"] is None:
         raise CallError('The target "net" sums over a horizon: pass horizon=, periods ahead.')

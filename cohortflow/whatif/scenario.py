@@ -69,8 +69,7 @@ class Scenario:
         if self.cost_per_customer and not self.changes:
             raise CallError(
                 f'Scenario "{self.name}" has a cost per customer but changes no move, so nobody is treated; '
-                f"give "
-                "the cost as fixed_cost, or a change whose `from` states are treated."
+                "give the cost as fixed_cost, or a change whose `from` states are treated."
             )
         if self.joiners_mix is not None:
             shares = np.array(list(self.joiners_mix.values()), dtype=float)
@@ -177,8 +176,8 @@ def _steps(period: Any, base: int | None, calendar: Calendar, name: str) -> int:
     if base is None:
         if isinstance(period, str) or period < 1:
             raise CallError(
-                f"{name} is {period!r}; this model stands outside any calendar, so it counts periods ahead: "
-                f"1, 2 ..."
+                f"{name} is {period!r}; this model stands outside any calendar, so it counts periods "
+                "ahead: 1, 2 ..."
             )
         return int(period) - 1
     ordinal = accept.as_period(period, calendar)

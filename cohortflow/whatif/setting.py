@@ -142,10 +142,8 @@ class Setting:
     @property
     def discount(self) -> Array:
         """(H,) factors of the steps."""
-        terms = self.money.terms
-        return (
-            np.ones(self.periods) if terms is None else terms.factor ** (np.arange(self.periods) + terms.lag)
-        )
+        terms, steps = self.money.terms, np.arange(self.periods)
+        return np.ones(self.periods) if terms is None else np.power(terms.factor, steps + terms.lag)
 
     @property
     def begins(self) -> int:
@@ -164,8 +162,7 @@ def _money(value: Any, schedule: Schedule, plan: Scenario) -> Money:
     if money.terms is None and (plan.costs or plan.per_period is not None):
         raise CallError(
             f'Scenario "{plan.name}" is about money; say how money is counted: value= a Value, or a mapping '
-            f"with "
-            "the keywords of cf.value."
+            "with the keywords of cf.value."
         )
     return money
 

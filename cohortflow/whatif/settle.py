@@ -96,7 +96,7 @@ class _Ring:
         return "" if leaving[reached].all() else "grows_without_limit"
 
     def _moves(self) -> NDArray[np.bool_]:
-        return np.stack([(m > 0).any(axis=0) for m, _, _ in self.turns]).any(axis=0)
+        return np.asarray(np.stack([(m > 0).any(axis=0) for m, _, _ in self.turns]).any(axis=0))
 
     def first(self, start: Array, inflow: Array) -> Array:
         """(D, m) customers at the first place of the cycle; nobody in the exits."""
@@ -105,10 +105,10 @@ class _Ring:
             return np.where(self.exits, 0.0, through(self._walked(start), _limit(whole)))
         inside = np.flatnonzero(~self.exits)
         arriving = through(inflow, self.join)
-        entering = sum(through(arriving, self.product(k + 1)) for k in range(self.length))
+        entering = np.sum([through(arriving, self.product(k + 1)) for k in range(self.length)], axis=0)
         system = np.eye(len(inside)) - whole[:, inside[:, None], inside]
         wide = max(len(system), len(entering))
-        right = np.broadcast_to(np.asarray(entering)[:, inside], (wide, len(inside)))
+        right = np.broadcast_to(entering[:, inside], (wide, len(inside)))
         out = np.zeros((wide, len(self.exits)))
         out[:, inside] = _solved(np.swapaxes(system, 1, 2), right)
         return out

@@ -85,8 +85,7 @@ def resolve(
     if needs["value"] and money.terms is None:
         raise CallError(
             f'The target "{target}" is about money; say how money is counted: value= a Value, or a mapping '
-            f"with "
-            "the keywords of cf.value."
+            "with the keywords of cf.value."
         )
     weight = _weight(measure, of, states, totals)
     if measure in ("life", "value") and of in states.names:
@@ -108,8 +107,7 @@ def named(target: str) -> tuple[str, str]:
     if measure not in MEASURES:
         raise CallError(
             f'Unknown target "{target}"{nearest(measure, MEASURES)}. Targets: {listed(MEASURES)}, each with '
-            f"what it "
-            'is of, for instance "base:all_live".'
+            'what it is of, for instance "base:all_live".'
         )
     usual = {"base": "all_live", "settled_base": "all_live", "life": "joiners", "value": "base"}
     if measure == "remaining_mix" and not of:

@@ -20,6 +20,9 @@ from cohortflow.whatif.settle import Settled, settle
 
 Array = NDArray[np.float64]
 Two = tuple[Array, Array]
+Both = tuple[Paths, Paths]
+Figures = dict[str, Two]
+Flags = Any  # bool arrays; numpy's stubs take any() for a number
 
 DRAWS = 2000
 
@@ -89,7 +92,7 @@ def _weights(at: Setting, totals: Mapping[str, Sequence[str]] | None) -> dict[st
     return accept.weights_of(states, totals) | {n: np.eye(len(states))[states.index(n)] for n in states.exits}
 
 
-def _reasons(at: Setting, why: str, scattered: tuple[Paths, Paths] | None) -> tuple[str, ...]:
+def _reasons(at: Setting, why: str, scattered: Both | None) -> tuple[str, ...]:
     reasons = [f"rows_without_data:{s}" for s in at.schedule.unknown]
     reasons += [f"settled:{why}"] if why else []
     if scattered and scattered[1].short:
@@ -106,7 +109,7 @@ class _Asked:
     level: float
     draws: Draws | None
 
-    def paths(self, inflows: Two, draws: Draws | None, shift: Array | None = None) -> tuple[Paths, Paths]:
+    def paths(self, inflows: Two, draws: Draws | None, shift: Array | None = None) -> Both:
         start = self.at.start
         first, second = (
             walk_paths(side.course, start, inflow, side.prices, draws=draws, shift=shift)
@@ -114,47 +117,26 @@ class _Asked:
         )
         return first, second
 
-    def by_period(
-        self, estimate: tuple[Paths, Paths], scattered: tuple[Paths, Paths] | None
-    ) -> dict[str, Pair]:
+    def by_period(self, estimate: Both, scattered: Both | None) -> dict[str, Pair]:
         """Customers of every quantity; discounted value, cost and net."""
         unknown = self._undefined()
-        out = {}
-        for name, weight in self.weights.items():
-            lost = unknown[:, 1:, weight != 0].any(axis=2)
-            two, many = (
-                None if paths is None else tuple(p.counts[:, 1:] @ weight for p in paths)
-                for paths in (estimate, scattered)
-            )
-            out[name] = self._pair(two, many, lost)
+        lost: dict[str, Flags] = {n: unknown[:, 1:, w != 0].any(axis=2) for n, w in self.weights.items()}
+        out = self._pairs(self._counts(estimate), scattered and self._counts(scattered), lost)
         if self.at.money.terms is None:
             return out
-        lost = unknown[:, 1:].any(axis=2)
-        figures, many = (None if paths is None else self._money(paths) for paths in (estimate, scattered))
-        assert figures is not None
-        return out | {
-            n: self._pair(two, None if many is None else many[n], lost) for n, two in figures.items()
-        }
+        figures = self._money(estimate)
+        any_lost: dict[str, Flags] = dict.fromkeys(figures, unknown[:, 1:].any(axis=2))
+        return out | self._pairs(figures, scattered and self._money(scattered), any_lost)
 
-    def total(
-        self,
-        by_period: Mapping[str, Pair],
-        estimate: tuple[Paths, Paths],
-        scattered: tuple[Paths, Paths] | None,
-    ) -> dict[str, Pair]:
+    def total(self, by_period: Mapping[str, Pair], estimate: Both, scattered: Both | None) -> dict[str, Pair]:
         """Over all periods: value, cost, net; the cost that breaks even; when it has paid."""
         if self.at.money.terms is None:
             return {}
-        lost = np.isnan([by_period["net"].base, by_period["net"].changed]).any(axis=1)
-        figures, many = (
-            None
-            if p is None
-            else {n: tuple(v.sum(axis=1, keepdims=True) for v in two) for n, two in m.items()}
-            for p, m in ((p, None if p is None else self._money(p)) for p in (estimate, scattered))
-        )
-        out = {
-            n: self._pair(two, None if many is None else many[n], lost).only() for n, two in figures.items()
-        }
+        lost: Flags = np.isnan([by_period["net"].base, by_period["net"].changed]).any(axis=1)
+        figures = _summed(self._money(estimate))
+        many = None if scattered is None else _summed(self._money(scattered))
+        pairs = self._pairs(figures, many, dict.fromkeys(figures, lost))
+        out = {name: pair.only() for name, pair in pairs.items()}
         for name, wanted, measure in (
             ("break_even_cost", bool(self.at.under.course.changes), self._break_even),
             ("payback_periods", self.at.scenario.costs, self._payback),
@@ -169,16 +151,23 @@ class _Asked:
         estimate = self._settle(None)
         reason = estimate[0].reason or estimate[1].reason
         drawn = None if self.draws is None or reason else self._settle(self.draws, shift)
-        figures, many = (None if s is None else self._settled_figures(s) for s in (estimate, drawn))
-        assert figures is not None
-        pairs = {n: self._pair(two, None if many is None else many[n]).only() for n, two in figures.items()}
-        return pairs, reason
+        pairs = self._pairs(self._settled_figures(estimate), drawn and self._settled_figures(drawn), {})
+        return {name: pair.only() for name, pair in pairs.items()}, reason
 
     # ---- inner ----
-    def _pair(self, two: Any, many: Any, lost: Any = (False, False)) -> Pair:
-        """lost : without and with the scenario, where nothing is known"""
-        base, changed = (np.where(gone, np.nan, v[0]) for v, gone in zip(two, lost, strict=True))
-        return paired(base, changed, many, self.level)
+    def _pairs(self, figures: Figures, many: Figures | None, lost: Mapping[str, Flags]) -> dict[str, Pair]:
+        """A Pair of each figure; lost : without and with the scenario, where nothing is known."""
+        nowhere = np.zeros(2, dtype=bool)
+        out = {}
+        for name, two in figures.items():
+            gone = lost.get(name, nowhere)
+            base, changed = np.where(gone[0], np.nan, two[0][0]), np.where(gone[1], np.nan, two[1][0])
+            out[name] = paired(base, changed, None if many is None else many[name], self.level)
+        return out
+
+    def _counts(self, paths: Both) -> Figures:
+        """(D, H) customers of every quantity."""
+        return {n: (paths[0].counts[:, 1:] @ w, paths[1].counts[:, 1:] @ w) for n, w in self.weights.items()}
 
     def _undefined(self) -> NDArray[np.bool_]:
         """(2, H+1, K) what can be reached from a state without data, without and with the scenario."""
@@ -189,24 +178,19 @@ class _Asked:
                 out[n] = walk(side.course.explicit(at.periods), at.start, at.periods, inflow[0]).undefined
         return out
 
-    def _money(self, paths: tuple[Paths, Paths]) -> dict[str, Two]:
+    def _money(self, paths: Both) -> Figures:
         """(D, H) discounted value, cost and net."""
         factor = self.at.discount
         base, changed = (factor * p.paid for p in paths)
-        cost = factor * self.at.costs(paths[1].treated)
-        return {
-            "value": (base, changed),
-            "cost": (np.zeros_like(cost), cost),
-            "net": (base, changed - cost),
-        }
+        return _with_costs(base, changed, factor * self.at.costs(paths[1].treated))
 
-    def _break_even(self, paths: tuple[Paths, Paths]) -> Array:
+    def _break_even(self, paths: Both) -> Array:
         factor = self.at.discount
         treated = paths[1].treated @ factor
         gain = (paths[1].paid - paths[0].paid - self.at.fixed_costs) @ factor
         return np.divide(gain, treated, out=np.full_like(gain, np.nan), where=treated > 0)
 
-    def _payback(self, paths: tuple[Paths, Paths]) -> Array:
+    def _payback(self, paths: Both) -> Array:
         base, net = self._money(paths)["net"]
         return payback(net - base, min(self.at.begins, self.at.periods - 1))
 
@@ -217,12 +201,24 @@ class _Asked:
         )
         return first, second
 
-    def _settled_figures(self, sides: tuple[Settled, Settled]) -> dict[str, Two]:
+    def _settled_figures(self, sides: tuple[Settled, Settled]) -> Figures:
         """(D, 1) figures a period in the long run; money undiscounted."""
-        out = {n: tuple((s.counts @ w)[:, None] for s in sides) for n, w in self.weights.items()}
-        if self.at.money.terms is not None:
-            stays, plan = np.isinf(self.at.window.last), self.at.scenario
-            base, changed = (s.paid[:, None] for s in sides)
-            cost = plan.cost_per_customer * sides[1].treated[:, None] + plan.fixed_cost * stays
-            out |= {"value": (base, changed), "cost": (0 * cost, cost), "net": (base, changed - cost)}
-        return out  # type: ignore[return-value]
+        out: Figures = {
+            n: ((sides[0].counts @ w)[:, None], (sides[1].counts @ w)[:, None])
+            for n, w in self.weights.items()
+        }
+        if self.at.money.terms is None:
+            return out
+        plan = self.at.scenario
+        fixed = plan.fixed_cost if np.isinf(self.at.window.last) else 0.0
+        cost = plan.cost_per_customer * sides[1].treated[:, None] + fixed
+        return out | _with_costs(sides[0].paid[:, None], sides[1].paid[:, None], cost)
+
+
+def _with_costs(base: Array, changed: Array, cost: Array) -> Figures:
+    return {"value": (base, changed), "cost": (np.zeros_like(cost), cost), "net": (base, changed - cost)}
+
+
+def _summed(figures: Figures) -> Figures:
+    """Figures of all periods together, (D, 1)."""
+    return {n: (a.sum(axis=1, keepdims=True), b.sum(axis=1, keepdims=True)) for n, (a, b) in figures.items()}
