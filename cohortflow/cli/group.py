@@ -15,6 +15,7 @@ SUMMARY = {
     "check": "Read, label and account for every row; no figures yet.",
     "fit": "Rates of every move, with intervals.",
     "project": "The mix period by period, where it settles, time to exit.",
+    "backtest": "Past forecasts against what happened, model against model.",
     "run": "All of it into one folder, with the report.",
     "sql": "The counting statement for a warehouse.",
 }

@@ -7,11 +7,12 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
+from typing import Any
 
 import pandas as pd
 
 from cohortflow.history import Finding
-from cohortflow.report import tabulate
+from cohortflow.report import tabulate, trust
 from cohortflow.report.rounding import percent
 from cohortflow.report.table import WIDTH, Table, plain_text
 from cohortflow.report.text import clean, listing, wrap
@@ -58,6 +59,8 @@ def fit_text(tables: Frames, findings: Iterable[Finding], states: States) -> str
     for segment in segments(transitions):
         parts.append(_titled(tabulate.matrix_table(transitions, states, segment=segment), segment))
         parts.append(_titled(tabulate.moves_table(transitions, segment=segment), segment))
+        if "adequacy" in tables:
+            parts.append(_titled(trust.adequacy_table(tables["adequacy"], segment=segment), segment))
     methods = listing([said(str(m)) for m in pd.unique(transitions["method"].dropna()) if m])
     return printout(*parts, f"Intervals at {_level(transitions)}, {methods}, for each rate by itself.")
 
@@ -87,6 +90,14 @@ def project_text(
         parts += [_titled(table, segment) for table in shown]
     ending = f"Bands and intervals at {_level(projection)}. {' '.join(verdict_words(verdict))}"
     return printout(*parts, "\n".join(wrap(ending, WIDTH)))
+
+
+def backtest_text(findings: Iterable[Finding], tested: Any, choice: Any, *, model: str, kind: str) -> str:
+    """Findings, how past forecasts of the live base did, how far the past vouches, the model chosen."""
+    said_of = [trust.choice_sentence(choice)] if choice is not None else []
+    said_of.append(trust.validated_sentence(tested, model, kind=kind))
+    ending = "\n".join(line for text in said_of for line in wrap(text, WIDTH))
+    return printout(findings_text(findings), plain_text(trust.scores_table(tested)), ending)
 
 
 def run_text(tables: Frames, findings: Iterable[Finding], quantities: Sequence[str]) -> str:

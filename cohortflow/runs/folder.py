@@ -11,31 +11,41 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any, ClassVar
+from typing import Any, ClassVar, TypeVar
 
 import pandas as pd
 
-from cohortflow.errors import CallError, listed, nearest
+from cohortflow.assessment import Adequacy, Backtest, Choice
+from cohortflow.errors import CallError, NotIdentified, listed, nearest
 from cohortflow.estimator import Fit
-from cohortflow.history import Check, Finding, InputFile, count, read
+from cohortflow.history import Check, Finding, History, InputFile, count, read
 from cohortflow.record import Record, frozen_mapping
 from cohortflow.runs import write
 from cohortflow.runs.findings import fit_findings, not_yet
 from cohortflow.runs.place import whole_folder
 from cohortflow.runs.steps import Forecast, fit_study, forecast_study
 from cohortflow.runs.tables import fit_tables, forecast_tables, in_order
+from cohortflow.runs.trust import BEST, adequacy_study, backtest_study, chosen
 from cohortflow.study import Study, read_study
 from cohortflow.tally import Tally
 
-STAGES = ("check", "fit", "project", "run")
+STAGES: dict[str, frozenset[str]] = {
+    "check": frozenset(),
+    "fit": frozenset({"fit", "adequacy"}),
+    "project": frozenset({"fit", "forecast"}),
+    "backtest": frozenset({"fit", "backtest"}),
+    "run": frozenset({"fit", "adequacy", "forecast", "backtest"}),
+}
 Progress = Callable[[str], None]
+T = TypeVar("T")
 
 
 @dataclass(frozen=True, repr=False, eq=False)
 class Run(Record):
     """A forecast as far as it was made.
 
-    stage : check | fit | project | run, how far
+    stage : check | fit | project | backtest | run, what was made
+    adequacy, backtest, choice : the tests of the assumptions; past forecasts; the model chosen by them
     tables : the contract's tables by name;  absent : those that could not be made -> the reason
     findings : what a reader must know before believing the numbers; the serious ones stand with --strict
     inputs : fingerprints of the files read;  warnings : sentences on parts of the study not used yet
@@ -55,6 +65,9 @@ class Run(Record):
     findings: tuple[Finding, ...]
     inputs: tuple[InputFile, ...]
     warnings: tuple[str, ...] = ()
+    adequacy: Adequacy | None = None
+    backtest: Backtest | None = None
+    choice: Choice | None = None
     path: Path | None = None
     kind: ClassVar[str] = "run"
 
@@ -92,7 +105,8 @@ def run(
     Parameters
     ----------
     study : a Study, or the path of a study file
-    upto : "check" (read, label, account), "fit" (rates), "project" (futures) or "run" (charts and report too)
+    upto : "check" (read, label, account), "fit" (rates, and whether a chain is good enough), "project"
+        (futures), "backtest" (past forecasts against what happened) or "run" (all, charts and report too)
     by : a segment column: also separately for each of its values
     out : the new folder; None writes nothing. `force` replaces an earlier run there
     keep_values : write the offending values into rejected.csv too (they may be personal data)
@@ -108,7 +122,7 @@ def run(
     ...     _ = panel.write_text("\\n".join(rows))
     ...     done = run(default_study(panel, exits=["left"]), upto="fit")
     >>> done
-    <fit of panel.csv: 2 tables>
+    <fit of panel.csv: 3 tables>
     >>> done.fit.counts.loc["fresh"].tolist()
     [0.0, 1.0, 1.0]
     """
@@ -129,16 +143,38 @@ def _made(study: Study, upto: str, by: str | None, tell: Progress, *, keep_value
     tell("reading")
     history = read(study, progress=lambda stage, share: tell(stage), keep_values=keep_values)
     tables = {"accounting": history.check.to_frame()}
-    tally, fitted, forecasts = None, None, {}
-    if upto != "check":
-        tally = count(history)
-        tell("fitting")
-        fitted = fit_study(study, tally, by=by)
-        tables |= fit_tables(fitted, level=study.level)
-    if fitted is not None and upto in ("project", "run"):
+    if upto == "check":
+        return Run(
+            study, upto, by, history.check, history.rejected, None, None, frozen_mapping({}),
+            frozen_mapping(tables), frozen_mapping({}), history.check.findings, history.inputs,
+        )  # fmt: skip
+    return _forecast(study, upto, by, tell, history, tables)
+
+
+def _forecast(
+    study: Study, upto: str, by: str | None, tell: Progress, history: History, tables: dict[str, pd.DataFrame]
+) -> Run:
+    parts, tally, absent = STAGES[upto], count(history), {}
+    tested, choice = None, None
+    if "backtest" in parts or study.model.name == BEST:
+        tell("forecasting the past")
+        tested, absent["backtest"] = _or_reason(lambda: backtest_study(study, tally))
+        if tested is None and study.model.name == BEST:
+            raise NotIdentified(f'No model can be chosen by backtest: {absent["backtest"]} Name a model.')
+        study, choice = chosen(study, tested) if tested is not None else (study, None)
+    tell("fitting")
+    fitted = fit_study(study, tally, by=by)
+    tables |= fit_tables(fitted, level=study.level)
+    trusted = None
+    if "adequacy" in parts:
+        tell("testing assumptions")
+        trusted, absent["adequacy"] = _or_reason(lambda: adequacy_study(study, tally, by=by))
+    forecasts: dict[str, Forecast] = {}
+    if "forecast" in parts:
         tell("projecting")
         forecasts = {forecast.segment: forecast for forecast in forecast_study(study, fitted)}
         tables |= forecast_tables(forecasts.values())
+    tables |= {n: r.to_frame() for n, r in (("adequacy", trusted), ("backtest", tested)) if r is not None}
     return Run(
         study,
         upto,
@@ -149,16 +185,29 @@ def _made(study: Study, upto: str, by: str | None, tell: Progress, *, keep_value
         fitted,
         frozen_mapping(forecasts),
         frozen_mapping(in_order(tables)),
-        frozen_mapping(_absent(forecasts, tables)),
-        (*history.check.findings, *(fit_findings(fitted) if fitted else ())),
+        frozen_mapping(_absent(absent, forecasts, tables)),
+        (*history.check.findings, *fit_findings(fitted)),
         history.inputs,
         tuple(not_yet(study)) if forecasts else (),
+        trusted,
+        tested,
+        choice,
     )
 
 
-def _absent(forecasts: Mapping[str, Forecast], tables: Mapping[str, pd.DataFrame]) -> dict[str, str]:
-    """Tables that no segment could make, with the reason of the first."""
-    reasons: dict[str, str] = {}
+def _or_reason(make: Callable[[], T]) -> tuple[T | None, str]:
+    """What `make` gives, or None and the reason why these data do not determine it."""
+    try:
+        return make(), ""
+    except NotIdentified as error:
+        return None, str(error)
+
+
+def _absent(
+    known: Mapping[str, str], forecasts: Mapping[str, Forecast], tables: Mapping[str, pd.DataFrame]
+) -> dict[str, str]:
+    """Tables that could not be made, with the reason (of the first segment)."""
+    reasons = {name: reason for name, reason in known.items() if reason}
     for forecast in forecasts.values():
         for name, reason in forecast.absent.items():
             if name not in tables:

@@ -11,6 +11,7 @@ import pandas as pd
 
 from cohortflow.errors import CallError, NotIdentified
 from cohortflow.estimator import Fit, fit
+from cohortflow.estimator.shock_paths import future_rates
 from cohortflow.estimator.variants import MODELS
 from cohortflow.projector import (
     ExitTimes,
@@ -30,6 +31,7 @@ from cohortflow.study import Study
 from cohortflow.tally import Tally
 
 ALL = "all"
+DRAWS = 2000
 T = TypeVar("T")
 
 
@@ -50,24 +52,17 @@ class Forecast:
 
 def fit_study(study: Study, tally: Tally, *, by: str | None = None) -> Fit:
     """`cf.fit(tally, model=..., window=..., half_life=..., exclude=..., by=...)` as [model] says."""
+    name = study.model.name
+    return fit(tally, model=name, by=by, exclude=study.model.exclude, **model_options(study, name))
+
+
+def model_options(study: Study, name: str) -> dict[str, Any]:
+    """What [model] says that the model `name` takes: window, half_life, bands, types."""
     spec = study.model
-    if spec.name == "best":
-        raise CallError(
-            'The model "best" is chosen by back-tests, which this version does not make yet; name a model '
-            "in [model] name or by --model."
-        )
-    taken = inspect.signature(MODELS[spec.name]).parameters if spec.name in MODELS else {}
+    taken = inspect.signature(MODELS[name]).parameters if name in MODELS else {}
     given = {"bands": spec.bands or None, "types": spec.types}
-    options = {name: option for name, option in given.items() if option is not None and name in taken}
-    return fit(
-        tally,
-        model=spec.name,
-        window=spec.window,
-        half_life=spec.half_life,
-        exclude=spec.exclude,
-        by=by,
-        **options,
-    )
+    options = {key: option for key, option in given.items() if option is not None and key in taken}
+    return {"window": spec.window, "half_life": spec.half_life, **options}
 
 
 def forecast_study(study: Study, fitted: Fit) -> Iterator[Forecast]:
@@ -93,11 +88,12 @@ def forecast_segment(study: Study, fitted: Fit, segment: str = ALL) -> Forecast:
             absent[name] = str(error)
             return None
 
+    shocks = tried("shocks", lambda: future_rates(fitted, study.horizon, DRAWS, rng=study.seed))
     return Forecast(
         segment,
         fitted,
         joiners,
-        project(fitted, periods=study.horizon, joiners=joiners, totals=study.totals, **shared),
+        project(fitted, periods=study.horizon, joiners=joiners, totals=study.totals, shocks=shocks, **shared),
         long_run(fitted, joiners=joiners, start=base_of(tally), **shared),
         tried("exits", lambda: time_to_exit(fitted, **shared)),
         tried("retention", lambda: retention(fitted, periods=ages(study, tally), **shared)),
@@ -120,19 +116,15 @@ def ages(study: Study, tally: Tally) -> int:
 def value_study(study: Study, fitted: Fit, joiners: Joiners, **shared: Any) -> Value | None:
     """`cf.value(fit, per_period=..., discount_rate=..., timing=...)` for ever; None without [value].
 
-    NotIdentified for per_period = "observed", which this version does not estimate yet.
+    `per_period = "observed"`: the mean amounts of the extract by state, times [value] margin.
     """
     spec = study.value
     if spec is None:
         return None
-    if spec.per_period is None:
-        raise NotIdentified(
-            'per_period = "observed" is read and checked, but this version does not estimate it yet; give '
-            "amounts by state in [value] per_period."
-        )
     return value(
         fitted,
-        per_period=spec.per_period,
+        per_period="observed" if spec.per_period is None else spec.per_period,
+        margin=1.0 if spec.margin is None else spec.margin,
         on_move=spec.on_move,
         discount_rate=spec.discount_rate,
         timing=spec.timing,
