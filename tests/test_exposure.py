@@ -95,6 +95,8 @@ def test_refusals():
         rates_from_spells(spells().drop(columns="exposure"), STATES)
     with pytest.raises(CallError, match="time of 0 or more"):
         rates_from_spells(spells().assign(exposure=-1.0), STATES)
+    with pytest.raises(CallError, match="Every spell is spent in a state; some have none"):
+        rates_from_spells(spells().assign(state=None), STATES)
     with pytest.raises(CallError, match='Unknown state "onn"'):
         rates_from_spells(spells().replace("on", "onn"), STATES)
     with pytest.raises(NotIdentified, match='Spells of "on" ended in "paused" without time spent'):

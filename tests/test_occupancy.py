@@ -99,6 +99,8 @@ def test_refusals():
     frame, _, _ = competing(10)
     with pytest.raises(CallError, match="stop is missing"):
         occupancy(frame.drop(columns="stop"), STATES)
+    with pytest.raises(CallError, match="Every spell is spent in a state; some have none"):
+        occupancy(frame.assign(state=None), STATES)
     with pytest.raises(CallError, match="A spell stops after it starts; 10 do not"):
         occupancy(frame.assign(stop=0.0), STATES)
     with pytest.raises(CallError, match="No spell begins at the origin -5"):

@@ -134,6 +134,8 @@ def test_refusals():
     frame = sightings(50)
     with pytest.raises(CallError, match="gap is missing"):
         generator_from_panel(frame.drop(columns="gap"), FOUR)
+    with pytest.raises(CallError, match="a state before and after; some are missing"):
+        generator_from_panel(frame.assign(to=None), FOUR)
     with pytest.raises(CallError, match="time above 0"):
         generator_from_panel(frame.assign(gap=0.0), FOUR)
     with pytest.raises(CallError, match="Only moves into an exit can be dated"):

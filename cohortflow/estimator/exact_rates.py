@@ -132,3 +132,16 @@ def closed(rates: Array) -> Array:
     out[..., diagonal, diagonal] = 0.0
     out[..., diagonal, diagonal] = 0.0 - out.sum(axis=-1)
     return out
+
+
+def state_codes(column: pd.Series, states: States) -> NDArray[np.int64]:
+    """Position of the state in each row, -1 where it is missing; CallError for a name that is no state.
+
+    >>> state_codes(pd.Series(["on", None, "off"]), States(["on", "off"])).tolist()
+    [0, -1, 1]
+    """
+    codes = pd.Categorical(column, categories=list(states.names)).codes.astype(np.int64)
+    strange = (codes < 0) & column.notna().to_numpy()
+    if strange.any():
+        states.index(str(column.to_numpy()[strange][0]))
+    return codes

@@ -16,7 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from scipy import special, stats
 
 from cohortflow.errors import CallError, NotIdentified
-from cohortflow.estimator.exact_rates import ExactRates, closed
+from cohortflow.estimator.exact_rates import ExactRates, closed, state_codes
 from cohortflow.estimator.interval import check_level
 from cohortflow.states import States
 from cohortflow.tally import Tally
@@ -102,12 +102,10 @@ def _coded(spells: pd.DataFrame, states: States) -> pd.DataFrame:
     exposure = spells["exposure"].to_numpy(float)
     if not np.isfinite(exposure).all() or (exposure < 0).any():
         raise CallError("The exposure of a spell is a time of 0 or more; some are negative or missing.")
-    code = {name: k for k, name in enumerate(states.names)}
-    ended = spells["next_state"].notna().to_numpy()
-    for name in {*spells["state"], *spells["next_state"][ended]}:
-        states.index(name)
-    out = pd.DataFrame({"state": [code[s] for s in spells["state"]], "exposure": exposure, "n": 1})
-    out["next_state"] = [code[s] if e else -1 for s, e in zip(spells["next_state"], ended, strict=True)]
+    state, target = (state_codes(spells[c], states) for c in ("state", "next_state"))
+    if (state < 0).any():
+        raise CallError("Every spell is spent in a state; some have none.")
+    out = pd.DataFrame({"state": state, "exposure": exposure, "n": 1, "next_state": target})
     out["customer"] = pd.factorize(spells["customer"])[0] if "customer" in spells else 0
     return out
 

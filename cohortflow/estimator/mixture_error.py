@@ -26,6 +26,9 @@ from cohortflow.estimator.rows import RowCounts
 Array = NDArray[np.float64]
 
 
+NEGLIGIBLE = 1e-9  # rates below this take no part: a type that never makes a move has no error in it
+
+
 @dataclass(frozen=True, eq=False)
 class TypeSampler:
     """Draws of a mixture's matrices, start and join laws.
@@ -80,9 +83,10 @@ class _Parts:
         rates = np.zeros((self.count, self.size, self.width))
         rates[:, cells[:, 0], cells[:, 1]] = weight.T @ self.patterns.moves
         held = rates.sum(axis=2, keepdims=True) + self.prior * (self.types.P > 0).sum(axis=2, keepdims=True)
-        rates[:, :, : self.size] = self.types.P * held
+        rates[:, :, : self.size] = np.where(self.types.P > NEGLIGIBLE, self.types.P * held, 0.0)
         if self.types.fixed >= 0:
             rates[self.types.fixed] = 0.0
+        weight = np.where(self.z > NEGLIGIBLE, weight, 0.0)
         now, share = (np.zeros((self.size, self.width)) for _ in range(2))
         here = self.patterns.now >= 0
         np.add.at(now[:, : self.count], self.patterns.now[here], weight[here])

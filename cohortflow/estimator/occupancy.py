@@ -23,6 +23,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from cohortflow.errors import CallError
+from cohortflow.estimator.exact_rates import state_codes
 from cohortflow.record import Record, frozen_array
 from cohortflow.states import States
 
@@ -144,8 +145,7 @@ def _coded(spells: pd.DataFrame, states: States) -> tuple[Any, ...]:
     start, stop = (spells[c].to_numpy(float) for c in ("start", "stop"))
     if not (stop > start).all():
         raise CallError(f"A spell stops after it starts; {int((~(stop > start)).sum())} do not.")
-    ended = spells["next_state"].notna().to_numpy()
-    code = {name: states.index(name) for name in {*spells["state"], *spells["next_state"][ended]}}
-    state = np.array([code[s] for s in spells["state"]], dtype=np.int64)
-    target = np.array([code[s] if e else -1 for s, e in zip(spells["next_state"], ended, strict=True)])
-    return pd.factorize(spells["customer"])[0], start, stop, state, target.astype(np.int64)
+    state, target = (state_codes(spells[c], states) for c in ("state", "next_state"))
+    if (state < 0).any():
+        raise CallError("Every spell is spent in a state; some have none.")
+    return pd.factorize(spells["customer"])[0], start, stop, state, target

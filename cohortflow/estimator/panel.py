@@ -23,7 +23,7 @@ from scipy.linalg import expm
 from scipy.optimize import minimize
 
 from cohortflow.errors import CallError, NotIdentified
-from cohortflow.estimator.exact_rates import ExactRates, closed
+from cohortflow.estimator.exact_rates import ExactRates, closed, state_codes
 from cohortflow.estimator.interval import check_level
 from cohortflow.states import States
 
@@ -53,8 +53,9 @@ class Panel:
         gap = frame["gap"].to_numpy(float)
         if not (gap > 0).all() or not np.isfinite(gap).all():
             raise CallError("The gap between two sightings is a time above 0; some are not.")
-        code = {name: states.index(name) for name in {*frame["from"], *frame["to"]}}
-        origin, target = (np.array([code[s] for s in frame[c]]) for c in ("from", "to"))
+        origin, target = (state_codes(frame[c], states) for c in ("from", "to"))
+        if (origin < 0).any() or (target < 0).any():
+            raise CallError("Every sighting has a state before and after; some are missing.")
         n = frame["n"].to_numpy(float) if "n" in frame else np.ones(len(frame))
         dated = frame["dated"].to_numpy(bool) if "dated" in frame else np.zeros(len(frame), bool)
         if (dated & ~states.exit_mask[target]).any():
