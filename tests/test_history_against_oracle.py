@@ -144,8 +144,8 @@ def test_blocks_of_two_customers_give_the_same_tally(case):
     """However the customers are cut into blocks and parts inside, the counts are those of one block."""
     study, rows = case
     whole = read(study, rows)[1]
-    small = patch("cohortflow.history.events.block_size", lambda periods: 2)
-    parts = patch("cohortflow.history.events.CELLS_AT_ONCE", 20)
+    small = patch("cohortflow.history.sweep.block_size", lambda periods: 2)
+    parts = patch("cohortflow.history.fetch.ROWS_AT_ONCE", 20)
     with small, parts:
         cut = read(study, rows)[1]
     for name in KEYS:

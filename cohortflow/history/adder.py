@@ -36,6 +36,13 @@ class Adder:
         if self.waiting > MERGE_AT and len(self.parts) > 1:
             self.merge()
 
+    def take_over(self, other: Adder) -> None:
+        """The parts of another one, too."""
+        self.parts += other.parts
+        self.waiting += other.waiting
+        if self.waiting > MERGE_AT and len(self.parts) > 1:
+            self.merge()
+
     def merge(self) -> None:
         """Add up what waits."""
         whole = {c: np.concatenate([p[c] for p in self.parts]) for c in self.parts[0]}

@@ -95,34 +95,46 @@ class Check(Record):
 Line = tuple[str, str, str, int, int]
 
 
-def balanced(lines: Iterable[Line], customers: Mapping[tuple[str, str, str], int]) -> pd.DataFrame:
+def balanced(
+    lines: Iterable[Line], customers: Mapping[tuple[str, str, str], int], files: Iterable[str] = ()
+) -> pd.DataFrame:
     """The accounting table from (outcome, reason, file, rows, customers) of each file.
 
-    Lines of one outcome and reason add up to the file "all"; `customers[outcome, reason, file]` replaces counts
-    of customers that do not add up (the total of several files, or of all rows read).
+    Lines of one outcome and reason add up to the file "all"; `customers[outcome, reason, file]` replaces
+    counts of customers that do not add up (the total of several files, or of all rows read). `files`: their
+    order; every one of them gets a line, also without rows.
     """
-    frame = pd.DataFrame(list(lines), columns=["outcome", "reason", "file", "rows", "customers"])
-    per_file = frame.groupby(["outcome", "reason", "file"], as_index=False).sum()
-    read = (
-        per_file.groupby("file", as_index=False)[["rows", "customers"]]
-        .sum()
-        .assign(outcome="read", reason="")
-    )
-    per_file = pd.concat([read, per_file], ignore_index=True)
-    total = per_file.groupby(["outcome", "reason"], as_index=False)[["rows", "customers"]].sum()
-    whole = pd.concat([per_file, total.assign(file=TOTAL)], ignore_index=True)
-    keys = zip(whole["outcome"], whole["reason"], whole["file"], strict=True)
-    known = [customers.get(key) for key in keys]
-    whole["customers"] = [k if k is not None else n for k, n in zip(known, whole["customers"], strict=True)]
-    whole["stage"] = ["labelling" if o == "used" or r == "after_exit" else "reading"
-                      for o, r in zip(whole["outcome"], whole["reason"], strict=True)]  # fmt: skip
-    place = whole["outcome"].map(OUTCOMES.index)
-    last = (whole["file"] == TOTAL).astype(int)
-    whole = whole.assign(place=place, last=last).sort_values(
-        ["last", "file", "place", "reason"], kind="stable"
-    )
-    whole = whole.astype({"rows": "int64", "customers": "int64"})
-    return whole[list(COLUMNS)].reset_index(drop=True)
+    lines = list(lines)
+    named = list(dict.fromkeys([*files, *(line[2] for line in lines)]))
+    sums: dict[tuple[str, str, str], list[int]] = {("read", "", f): [0, 0] for f in (*named, TOTAL)}
+    for outcome, reason, file, rows, who in lines:
+        for key in ((outcome, reason), ("read", "")):
+            for place in (file, TOTAL):
+                line = sums.setdefault((*key, place), [0, 0])
+                line[0] += rows
+                line[1] += who
+    order = {name: i for i, name in enumerate([*named, TOTAL])}
+    found = sorted(sums, key=lambda k: (order[k[2]], OUTCOMES.index(k[0]), k[1]))
+    rows_ = [
+        (
+            "labelling" if o == "used" or r == "after_exit" else "reading",
+            o,
+            r,
+            f,
+            *_counts(sums, customers, (o, r, f)),
+        )
+        for o, r, f in found
+    ]
+    return pd.DataFrame(rows_, columns=list(COLUMNS)).astype({"rows": "int64", "customers": "int64"})
+
+
+def _counts(
+    sums: Mapping[tuple[str, str, str], list[int]],
+    customers: Mapping[tuple[str, str, str], int],
+    key: tuple[str, str, str],
+) -> tuple[int, int]:
+    rows, who = sums[key]
+    return rows, customers.get(key, who)
 
 
 def check_balance(accounting: pd.DataFrame, read: Mapping[str, int]) -> None:

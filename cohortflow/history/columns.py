@@ -66,7 +66,11 @@ def field_of(source: Source, wanted: str, key: str) -> Field:
 
 def id_missing_sql(text: str) -> str:
     """Whether an id is blank or a placeholder."""
-    return f"({text} IS NULL OR lower(trim({text})) IN {texts(PLACEHOLDERS)})"
+    longest = max(map(len, PLACEHOLDERS))
+    return (
+        f"(CASE WHEN length({text}) > {longest} AND {text} >= '!' THEN false "
+        f"ELSE {text} IS NULL OR lower(trim({text})) IN {texts(PLACEHOLDERS)} END)"
+    )
 
 
 def code_sql(text: str, codes: Mapping[str, int], other: str = "NULL") -> str:
@@ -76,8 +80,8 @@ def code_sql(text: str, codes: Mapping[str, int], other: str = "NULL") -> str:
         by_code.setdefault(code, []).append(spelling)
     if not by_code:
         return f"({other})::SMALLINT"
-    whens = " ".join(f"WHEN {text} IN {texts(names)} THEN {code}" for code, names in by_code.items())
-    return f"(CASE {whens} ELSE {other} END)::SMALLINT"
+    whens = " ".join(f"WHEN {quoted(name)} THEN {code}" for code, names in by_code.items() for name in names)
+    return f"(CASE {text} {whens} ELSE {other} END)::SMALLINT"
 
 
 @dataclass(frozen=True)

@@ -140,11 +140,11 @@ def _counts(study: Study, whole: Whole, order: str | None, table: Any) -> list[t
     ordered = _ordered(table, order)
     with opened(input_bytes=table.nbytes) as engine:
         reading = _loaded(engine, study, ordered, whole)
-        refuse_unknown_names(engine, study)
+        refuse_unknown_names(engine, study, reading.loaded)
         label = read_event_rows if study.input.layout == "events" else read_state_rows
         sweep = label(reading)
         tally = sweep.tally()
-        check = reading.accounting(sweep.seen)
+        check = reading.accounting(sweep.accounts)
     report = {
         "rows": check.accounting.to_dict(orient="list"),
         "findings": [g.to_dict() for g in check.findings],

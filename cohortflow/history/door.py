@@ -237,23 +237,23 @@ def _history(
     engine: Engine, study: Study, sources: list[Source], progress: Progress | None, keep_values: bool
 ) -> History:
     told = progress or (lambda stage, share: None)
-    loaded = load(engine, study, sources, told)
+    loaded = load(engine, study, sources, told, keep_values=keep_values)
     if loaded.rows == 0:
         raise InputError(
             f"{listed(s.name for s in sources)}: no rows under the header line. Give an extract with rows."
         )
-    refuse_unknown_names(engine, study)
+    refuse_unknown_names(engine, study, loaded)
     reading = Reading(engine, study, loaded, told)
     sweep = read_event_rows(reading) if study.input.layout == "events" else read_state_rows(reading)
     told("counting", 0.0)
     tally = sweep.tally()
-    check = reading.accounting(sweep.seen)
+    check = reading.accounting(sweep.accounts)
     told("counting", 1.0)
     return History(
         states=study.states,
         calendar=study.calendar,
         check=check,
-        rejected=reading.rejected(keep_values=keep_values),
+        rejected=reading.rejected(sweep.accounts),
         inputs=reading.inputs(),
         tally=tally,
     )

@@ -1,95 +1,51 @@
-"""Rows that say the same thing twice: found by sorting 64-bit hashes, settled on the few rows that meet.
+"""Rows that say the same thing twice.
 
-identical   equal in every column: dropped when the instants carry clock times or the row has an event id;
-            otherwise (two sales on one day may be equal) kept and listed
-superseded  same event id, other content: the version loaded last counts (else the last in the extract)
+identical   equal in every column (64-bit hash of the row; customer, time and event compared in full): dropped when
+            the instants carry clock times or the row has an event id; otherwise kept and counted, since two equal
+            sales on one day may both be true
+superseded  same event id, other content: the version loaded last counts, else the last in the extract
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
-import pandas as pd
 
+from cohortflow.history.cells import Columns
 from cohortflow.history.columns import FAULT_OF
 from cohortflow.history.engine import Engine
 
-SORTED_AT_ONCE = 8_000_000  # hashes in memory at a time
+
+def repeated(rows: Columns) -> np.ndarray:
+    """(rows,) whether a row equals an earlier one; rows sorted by c, t, code, record number."""
+    out = np.zeros(len(rows["c"]), dtype=bool)
+    same = np.ones(max(len(out) - 1, 0), dtype=bool)
+    for name in ("c", "t", "code"):
+        same &= rows[name][1:] == rows[name][:-1]
+    if not same.any():
+        return out
+    run = np.cumsum(np.append(True, ~same))
+    tied = np.flatnonzero(np.append(same, False) | np.append(False, same))
+    order = tied[np.lexsort([rows["r"][tied], rows["h"][tied], run[tied]])]
+    again = (run[order][1:] == run[order][:-1]) & (rows["h"][order][1:] == rows["h"][order][:-1])
+    out[order[1:][again]] = True
+    return out
 
 
-@dataclass(frozen=True)
-class Repeats:
-    """Record numbers (rowid) of the rows dropped, and how many equal rows were kept because nothing tells them apart."""
-
-    identical: np.ndarray
-    superseded: np.ndarray
-    kept: np.ndarray
-
-
-def find_repeats(
-    engine: Engine, *, rows: int, clocked: bool, has_event_id: bool, has_loaded: bool
-) -> Repeats:
-    """Repeated rows among the good ones. `clocked`: the column of instants holds clock times."""
-    identical, kept = _identical(engine, rows, clocked, has_event_id)
-    superseded = np.empty(0, dtype=np.int64)
-    if has_event_id:
-        superseded = _superseded(engine, rows, identical, has_loaded)
-    return Repeats(identical, superseded, kept)
-
-
-def mark(engine: Engine, rowids: np.ndarray, reason: str) -> None:
-    """Give rows a fault; they take no further part."""
-    if len(rowids) == 0:
-        return
-    engine.register("marked", pd.DataFrame({"r": np.sort(rowids)}))
-    engine.run(f"UPDATE rows SET fault = {FAULT_OF[reason]} FROM marked WHERE rows.rowid = marked.r")
-    engine.connection.unregister("marked")
-
-
-def _identical(engine: Engine, rows: int, clocked: bool, has_id: bool) -> tuple[np.ndarray, np.ndarray]:
-    met = _meeting(engine, "h", "fault = 0", rows)
-    if len(met) == 0:
-        return np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64)
-    engine.register("met", pd.DataFrame({"h": met}))
-    has_clock = "clock" if clocked else "false"
-    has_own_id = "event_id IS NOT NULL" if has_id else "false"
-    found = engine.connection.execute(
-        f"SELECT rows.rowid AS r, customer, code, h, ({has_clock} OR {has_own_id}) AS certain "
-        "FROM rows JOIN met USING (h) WHERE fault = 0 ORDER BY r"
-    ).df()
-    engine.connection.unregister("met")
-    repeated = found.duplicated(subset=["h", "customer", "code"], keep="first").to_numpy()
-    certain = found["certain"].to_numpy(dtype=bool)
-    number = found["r"].to_numpy(dtype=np.int64)
-    return number[repeated & certain], number[repeated & ~certain]
-
-
-def _superseded(engine: Engine, rows: int, dropped: np.ndarray, has_loaded: bool) -> np.ndarray:
-    met = _meeting(engine, "hash(event_id)", "fault = 0 AND event_id IS NOT NULL", rows)
-    if len(met) == 0:
-        return np.empty(0, dtype=np.int64)
-    engine.register("met", pd.DataFrame({"g": met}))
+def mark_superseded(engine: Engine, *, has_loaded: bool) -> int:
+    """Give older versions of an event id a fault; how many. Rows equal in every column are left alone."""
+    fault = FAULT_OF["superseded"]
     loaded = "loaded" if has_loaded else "''"
-    found = engine.connection.execute(
-        f"SELECT rows.rowid AS r, event_id, {loaded} AS loaded FROM rows JOIN met ON hash(event_id) = g "
-        "WHERE fault = 0 AND event_id IS NOT NULL ORDER BY event_id, loaded, r"
-    ).df()
-    engine.connection.unregister("met")
-    found = found[~found["r"].isin(dropped)]
-    older = found.duplicated(subset=["event_id"], keep="last").to_numpy()
-    return found["r"].to_numpy(dtype=np.int64)[older]
-
-
-def _meeting(engine: Engine, value: str, where: str, rows: int) -> np.ndarray:
-    """Hash values that occur more than once, looked for in slices of the hash range."""
-    slices = 1
-    while rows / slices > SORTED_AT_ONCE:
-        slices *= 2
-    out = []
-    for k in range(slices):
-        part = "" if slices == 1 else f" AND ({value} >> 40) % {slices} = {k}"
-        hashes = np.sort(engine.arrays(f"SELECT {value} AS v FROM rows WHERE {where}{part}")["v"])
-        again = hashes[1:][hashes[1:] == hashes[:-1]]
-        out.append(np.unique(again))
-    return np.concatenate(out)
+    engine.run(
+        "CREATE TABLE versions AS SELECT rowid AS r, event_id, h, "
+        + loaded
+        + " AS loaded FROM rows WHERE fault = 0 "
+        "AND event_id IN (SELECT event_id FROM rows WHERE fault = 0 AND event_id IS NOT NULL GROUP BY 1 "
+        "HAVING min(h) <> max(h))"
+    )
+    engine.run(
+        f"UPDATE rows SET fault = {fault} FROM (SELECT r FROM (SELECT v.r, v.h, first_value(v.h) OVER "
+        "(PARTITION BY event_id ORDER BY loaded DESC, r DESC) AS kept FROM versions AS v) WHERE h <> kept) AS old "
+        "WHERE rows.rowid = old.r"
+    )
+    engine.drop("versions")
+    return int(engine.one(f"SELECT count(*) FROM rows WHERE fault = {fault}"))

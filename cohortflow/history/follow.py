@@ -19,12 +19,11 @@ Sequential over periods, vectorised over customers. Decided here, once:
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
 
-from cohortflow.history.cells import CellPlan
+from cohortflow.history.cells import Cells, Columns
 from cohortflow.history.rules import Memory, Rules, word
 from cohortflow.tally import KINDS
 
@@ -39,8 +38,7 @@ class Followed:
     state : position, -1 = no row;  start : kind of the stay that begins here, -1 = none
     origin : exit from which a return comes, -1;  tenure : periods since the stay began, -1 = unknown
     memo : 0 joined_and_left, 1 returned_and_left in the period, -1 = none;  memo_state : the exit
-    aside : whether the cell's rows are set aside: 0 no, 1 all, 2 those before the first return event, which is of
-        the return set aside_set
+    aside : places of the used rows that are set aside after an exit
     without_join : (B,) first seen after the warm-up without a join event, where joins are named
     """
 
@@ -50,10 +48,9 @@ class Followed:
     tenure: np.ndarray
     memo: np.ndarray
     memo_state: np.ndarray
-    aside: np.ndarray
-    aside_set: np.ndarray
     without_join: np.ndarray
-    any_exit: bool
+    aside: list[np.ndarray]
+    any_exit: bool = False
     amount: np.ndarray | None = None
 
 
@@ -69,18 +66,6 @@ class Span:
     settled: int
 
 
-def empty_block(plan: CellPlan, periods: int, size: int) -> dict[str, np.ndarray]:
-    """(T, B) arrays of the cell columns, filled with what a period without rows has."""
-    fill: dict[str, tuple[int, type]] = {"n": (0, np.int32)}
-    fill |= {f"seen_{w}": (0, np.int64) for w in range(plan.words)}
-    fill |= {f"last_{i}": (-1, np.int16) for i in range(len(plan.among))}
-    fill |= {f"count_{j}": (0, np.int32) for j in range(len(plan.counted))}
-    fill |= {f"back_{r}": (0, np.int8) for r in range(len(plan.returns))}
-    fill |= {"amount": (0, np.int64)} if plan.amount else {}
-    fill |= {"until": (-(2**31), np.int64)} if plan.until else {}
-    return {name: np.full((periods, size), value, dtype=kind) for name, (value, kind) in fill.items()}
-
-
 class EventFollower:
     """Follows blocks of customers of an event log under the rules of a study."""
 
@@ -92,19 +77,23 @@ class EventFollower:
         for name in study.states.exits:
             events = frozenset(rules.place[n] for n in study.returns_of(name))
             self.returns_of_state[study.states.index(name)] = self.plan.returns.index(events)
+        everything = frozenset(range(self.plan.events))
+        self.others = [everything - events for events in self.plan.returns]
         self.is_exit = study.states.exit_mask
 
-    def follow(self, cells: dict[str, np.ndarray], splits: Mapping[int, Splits]) -> Followed:
-        """Label a block; `cells` is used up (rows that are set aside are taken out of it)."""
-        periods, size = cells["n"].shape
+    def follow(self, cells: Cells) -> Followed:
+        """Label a block."""
+        periods, size = cells.index.shape
+        dense = cells.dense()
         out = blank(periods, size)
         memory = Memory(self.rules, periods, size)
         where = np.full(size, UNSEEN, dtype=np.int8)
         count_from = np.zeros(size, dtype=np.int32)
         for t in range(periods):
-            row = {name: column[t] for name, column in cells.items()}
-            new = (where == UNSEEN) & (row["n"] > 0)
-            back = self._returns(t, row, where, out, splits)
+            row = {name: column[t] for name, column in dense.items()}
+            there = cells.index[t] >= 0
+            new = (where == UNSEEN) & there
+            back = self._returns(t, row, (where >= 0) & there, where, cells, out)
             if new.any():
                 self._first_sight(t, row, new, memory, count_from, out)
             if back.any():
@@ -115,57 +104,67 @@ class EventFollower:
             self._label(t, here, new, back, memory, where, out)
         self._cut(out, count_from)
         if self.plan.amount:
-            out.amount = cells["amount"]
+            out.amount = dense["amount"]
         return out
 
     def _returns(
         self,
         t: int,
-        row: dict[str, np.ndarray],
+        row: Columns,
+        gone: np.ndarray,
         where: np.ndarray,
+        cells: Cells,
         out: Followed,
-        splits: Mapping[int, Splits],
     ) -> np.ndarray:
         """Who returns in period t; the rows that are set aside are taken out of `row`."""
-        gone = (where >= 0) & (row["n"] > 0)
         back = np.zeros(len(where), dtype=bool)
         if not gone.any():
             return back
-        for r in range(len(self.plan.returns)):
+        for r, events in enumerate(self.plan.returns):
             mine = gone & (self.returns_of_state[where] == r)
-            hit = mine & (row[f"back_{r}"] > 0)
+            hit = mine & self._saw(row, events)
             back |= hit
-            late = np.flatnonzero(hit & (row[f"back_{r}"] == 2))
-            if len(late):
-                out.aside[t, late], out.aside_set[t, late] = 2, r
-                splits[r].put(t, late, row)
+            mixed = np.flatnonzero(hit & self._saw(row, self.others[r]))
+            if len(mixed):
+                self._split(t, r, mixed, row, cells, out)
         aside = np.flatnonzero(gone & ~back)
         if len(aside):
-            out.aside[t, aside] = 1
-            _clear(row, aside)
+            out.aside.append(cells.rows_of(cells.index[t, aside]))
+            for name, value in self.plan.empty().items():
+                row[name][aside] = value
         return back
+
+    def _split(self, t: int, r: int, who: np.ndarray, row: Columns, cells: Cells, out: Followed) -> None:
+        """Returns in a period with other events: only the rows from the first return event on count."""
+        mine = cells.index[t, who]
+        first, before = cells.before_return(r, mine)
+        if len(before):
+            out.aside.append(before)
+            for name, values in cells.from_row(mine, first).items():
+                row[name][who] = values
+
+    def _saw(self, row: Columns, events: frozenset[int]) -> np.ndarray:
+        hit = np.zeros(len(row["seen_0"]), dtype=bool)
+        for w in range(self.plan.words):
+            if bits := word(events, w):
+                hit |= (row[f"seen_{w}"] & bits) != 0
+        return hit
 
     def _first_sight(
         self,
         t: int,
-        row: dict[str, np.ndarray],
+        row: Columns,
         new: np.ndarray,
         memory: Memory,
         count_from: np.ndarray,
         out: Followed,
     ) -> None:
-        joining = self._holds_join(row)
+        joining = self._saw(row, self.joins)
         known = joining | (t >= self.span.settled)
         memory.begin(t, new, known)
         count_from[new] = np.where(known, max(t, self.span.complete), self.span.settled)[new]
         if self.joins:
             out.without_join |= new & ~joining & (t >= self.span.settled)
-
-    def _holds_join(self, row: dict[str, np.ndarray]) -> np.ndarray:
-        hit = np.zeros(len(row["n"]), dtype=bool)
-        for w in range(self.plan.words):
-            hit |= (row[f"seen_{w}"] & word(self.joins, w)) != 0
-        return hit
 
     def _label(
         self,
@@ -211,41 +210,10 @@ class EventFollower:
         out.start[at[~gone], who[~gone]] = UNKNOWN_HISTORY
 
 
-class Splits:
-    """Cells of a block made again from the first return on, found by period and customer."""
-
-    def __init__(self, columns: Mapping[str, np.ndarray], size: int) -> None:
-        self.size = size
-        key = columns["p"].astype(np.int64) * size + columns["c"]
-        order = np.argsort(key, kind="stable")
-        self.key = key[order]
-        self.columns = {name: values[order] for name, values in columns.items() if name not in ("c", "p")}
-
-    def put(self, t: int, who: np.ndarray, row: dict[str, np.ndarray]) -> None:
-        """Replace the cells of `who` in period t."""
-        place = np.searchsorted(self.key, t * self.size + who)
-        for name, column in row.items():
-            column[who] = self.columns[name][place]
-
-
 def blank(periods: int, size: int) -> Followed:
     """Nothing known yet of a block."""
 
     def none(kind: type = np.int8) -> np.ndarray:
         return np.full((periods, size), -1, dtype=kind)
 
-    return Followed(
-        none(), none(), none(), none(np.int32), none(), none(), np.zeros((periods, size), np.int8),
-        none(), np.zeros(size, dtype=bool), False,
-    )  # fmt: skip
-
-
-def _clear(row: dict[str, np.ndarray], who: np.ndarray) -> None:
-    """As if the period had no rows."""
-    for name, column in row.items():
-        if name.startswith("last_"):
-            column[who] = -1
-        elif name == "until":
-            column[who] = -(2**31)
-        else:
-            column[who] = 0
+    return Followed(none(), none(), none(), none(np.int32), none(), none(), np.zeros(size, dtype=bool), [])

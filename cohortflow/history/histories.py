@@ -16,40 +16,106 @@ import numpy as np
 import pandas as pd
 
 from cohortflow.errors import InputError, listed
-from cohortflow.history.cells import ROWID_BITS
+from cohortflow.history.accounts import ASIDE, USED
+from cohortflow.history.cells import Columns
 from cohortflow.history.columns import FAULT_OF, IGNORED, UNKNOWN
-from cohortflow.history.customers import Customers, make_customers
-from cohortflow.history.duplicates import mark
+from cohortflow.history.duplicates import mark_superseded
+from cohortflow.history.fetch import ordered
 from cohortflow.history.follow import JOINED, LIVE, RETURNED, UNKNOWN_HISTORY, UNSEEN, Followed, blank
 from cohortflow.history.labels import period_of_label, refuse_ambiguous
 from cohortflow.history.reading import Reading
-from cohortflow.history.sweep import Sweep, block_size, by_block
+from cohortflow.history.sweep import Labelled, Sweep, first_rows
 from cohortflow.study import Study
 
 MOST_LABELS = 100_000
-CODES = 256  # more than there are states
+NO_PERIOD = -(2**31) + 1  # of rows with a fault
 
 
 def read_state_rows(reading: Reading) -> Sweep:
     """Label and count the loaded rows of a history of states."""
-    engine = reading.engine
     reading.refuse_missing_ids()
     map_labels(reading)
+    has = reading.loaded.has
+    if "event_id" in has:
+        older = mark_superseded(reading.engine, has_loaded="loaded" in has)
+        if older:
+            lines = reading.examples(f"fault = {FAULT_OF['superseded']}")
+            reading.found("superseded_rows", rows=older, lines=lines)
     first, last, periods = _window(reading)
-    reading.outcome = _outcome_sql(reading, last)
-    engine.run("CREATE TABLE IF NOT EXISTS aside_rows (r BIGINT)")
-    _settle_conflicts(reading)
-    sweep = Sweep(reading, first=first, last=last)
-    parts = max(1, -(-reading.loaded.rows // 6_000_000))
-    sweep.expect(parts, f"{reading.outcome} = 0")
-    follower = HistoryFollower(reading.study, last - first + 1, np.array(periods) - first)
-    any_exit = False
-    for k in range(parts):
-        used = f"{reading.outcome} = 0" + ("" if parts == 1 else f" AND hash(customer) % {parts} = {k}")
-        any_exit |= _part(reading, sweep, follower, used)
-        reading.progress("labelling", (k + 1) / parts)
-    sweep.refuse_without_exits(any_exit)
+    layout = HistoryLayout(reading, first, last, periods)
+    sweep = Sweep(reading, first=first, last=last, periods=last - first + 1)
+    sweep.run(layout)
     return sweep
+
+
+class HistoryLayout:
+    """What a block of rows of a history of states means."""
+
+    def __init__(self, reading: Reading, first: int, last: int, periods: list[int]) -> None:
+        self.study, self.first, self.last = reading.study, first, last
+        self.has_amount = "amount" in reading.loaded.has
+        self.follower = HistoryFollower(reading.study, last - first + 1, np.array(periods) - first)
+        self.as_of_period = self._period_of_as_of()
+        self.joins = "LEFT JOIN labels USING (label)"
+        self.columns = [f"coalesce(p, {NO_PERIOD}) AS p", "code", "h"]
+        self.columns += ["coalesce(amount, 0) AS amount"] if self.has_amount else []
+
+    def _period_of_as_of(self) -> int:
+        """The period in which the as-of day lies."""
+        study = self.study
+        if study.as_of is None or study.calendar.kind == "step":
+            return 2**31
+        return study.calendar.ordinal(study.as_of)
+
+    def label(self, rows: Columns, size: int) -> Labelled:
+        """Outcomes and states of a block of `size` customers."""
+        outcome = self._outcomes(rows)
+        places = np.flatnonzero(outcome == USED)
+        order = places[ordered([rows["c"][places], rows["p"][places]], rows["r"][places])]
+        last = self._settle(rows, order, outcome)
+        periods = self.follower.periods
+        at = (rows["p"][last] - self.first, rows["c"][last])
+        given = np.full((periods, size), -1, dtype=np.int8)
+        given[at] = rows["code"][last]
+        amount = None
+        if self.has_amount:
+            amount = np.zeros(given.shape, dtype=np.int64)
+            amount[at] = rows["amount"][last]
+        f = self.follower.follow(given)
+        superseded = int((outcome[places] == FAULT_OF["superseded"]).sum())
+        return Labelled(
+            f.state, f.start, f.origin, f.tenure, f.memo, f.memo_state, outcome,
+            first=first_rows(last, rows["c"][last], size), used=last, any_exit=f.any_exit, amount=amount,
+            notes={"two_states_in_a_period": superseded},
+        )  # fmt: skip
+
+    def _outcomes(self, rows: Columns) -> np.ndarray:
+        outcome, p, code = rows["fault"].astype(np.int16), rows["p"], rows["code"]
+        for reason, where in (
+            ("incomplete_period", p > self.last),
+            ("after_as_of", p > self.as_of_period),
+            ("before_log_start", p < self.first),
+            ("unknown_event", code == UNKNOWN),
+            ("ignored_event", code == IGNORED),
+        ):
+            outcome[where & (rows["fault"] == 0)] = ASIDE[reason]
+        return outcome
+
+    def _settle(self, rows: Columns, order: np.ndarray, outcome: np.ndarray) -> np.ndarray:
+        """The row that counts of each customer and period (the last); the others become duplicates."""
+        if len(order) == 0:
+            return order
+        c, p = rows["c"][order], rows["p"][order]
+        last = np.append((c[1:] != c[:-1]) | (p[1:] != p[:-1]), True)
+        if not last.all():
+            run = np.cumsum(last) - last
+            crowd = np.flatnonzero(np.isin(run, run[~last]))
+            again = crowd[np.lexsort([-rows["r"][order[crowd]], rows["h"][order[crowd]], run[crowd]])]
+            h = rows["h"][order[again]]
+            same = (run[again][1:] == run[again][:-1]) & (h[1:] == h[:-1])
+            outcome[order[~last]] = FAULT_OF["superseded"]
+            outcome[order[again[1:][same]]] = FAULT_OF["identical"]
+        return order[last]
 
 
 # ---- periods ----
@@ -102,98 +168,6 @@ def periods_present(reading: Reading) -> list[int]:
         "SELECT DISTINCT p FROM rows JOIN labels USING (label) WHERE fault = 0 AND code >= 0 ORDER BY 1"
     )
     return [int(r[0]) for r in found]
-
-
-def _outcome_sql(reading: Reading, last: int) -> str:
-    """Outcome code of a row, its period looked up by label (few labels)."""
-    study, calendar = reading.study, reading.study.calendar
-    known = reading.engine.rows("SELECT label, p FROM labels")
-    reading.engine.run("CREATE TABLE label_outcomes (label VARCHAR, o INTEGER)")
-    out = []
-    start = study.input.log_start
-    for label, p in known:
-        if start is not None and calendar.kind != "step" and p < calendar.ordinal(start):
-            out.append((label, 42))
-        elif p > last and study.as_of is not None and calendar.kind != "step":
-            out.append((label, 43 if calendar.start(p) > study.as_of else 44))
-    if out:
-        reading.engine.connection.executemany("INSERT INTO label_outcomes VALUES (?, ?)", out)
-    late = "coalesce((SELECT o FROM label_outcomes AS l WHERE l.label = rows.label), 0)" if out else "0"
-    return (
-        f"(CASE WHEN fault > 0 THEN fault::INTEGER WHEN code = {IGNORED} THEN 40 WHEN code = {UNKNOWN} THEN 41 "
-        f"ELSE {late} END)"
-    )
-
-
-# ---- two rows for one customer and period ----
-def _settle_conflicts(reading: Reading) -> None:
-    engine, has = reading.engine, reading.loaded.has
-    loaded = "loaded" if "loaded" in has else "''"
-    own_id = "coalesce(event_id, '')" if "event_id" in has else "''"
-    base = f"SELECT rows.rowid AS r, customer, p, h, {loaded} AS loaded, {own_id} AS event_id FROM rows " \
-           f"JOIN labels USING (label) WHERE {reading.outcome} = 0"  # fmt: skip
-    many = engine.one(
-        f"SELECT count(*) FROM (SELECT customer, p FROM ({base}) GROUP BY 1, 2 HAVING count(*) > 1)"
-    )
-    if many:
-        found = engine.connection.execute(
-            f"WITH base AS ({base}) SELECT base.* FROM base JOIN (SELECT customer, p FROM base GROUP BY 1, 2 "
-            "HAVING count(*) > 1) USING (customer, p) ORDER BY r"
-        ).df()
-        same = found.duplicated(subset=["customer", "p", "h"], keep="last")
-        mark(engine, found.loc[same, "r"].to_numpy(), "identical")
-        rest = found[~same].sort_values(["loaded", "r"], kind="stable")
-        older = rest.loc[rest.duplicated(subset=["customer", "p"], keep="last"), "r"].to_numpy()
-        mark(engine, older, "superseded")
-        if len(older):
-            reading.found("two_states_in_a_period", rows=len(older), lines=reading.shown(older))
-
-
-# ---- customers ----
-def _part(reading: Reading, sweep: Sweep, follower: HistoryFollower, used: str) -> bool:
-    engine, has = reading.engine, reading.loaded.has
-    first_rows = "seg" in has or "weight" in has
-    columns = [f"max(rows.rowid * {CODES} + code) % {CODES} AS state"]
-    columns += ["coalesce(sum(amount), 0)::BIGINT AS amount"] if "amount" in has else []
-    columns += [f"min(p::HUGEINT * {1 << ROWID_BITS} + rows.rowid) AS origin"] if first_rows else []
-    engine.drop("cells")
-    engine.run(
-        f"CREATE TABLE cells AS SELECT customer, p, {', '.join(columns)} FROM rows JOIN labels USING (label) "
-        f"WHERE {used} GROUP BY 1, 2"
-    )
-    customers = make_customers(
-        engine, weighted="weight" in has, segmented="seg" in has, segments=sweep.segments
-    )
-    sweep.begin(customers)
-    money = ", amount" if "amount" in has else ""
-    cells = engine.arrays(
-        f"SELECT c::INTEGER AS c, (p - {sweep.first})::INTEGER AS p, state::TINYINT AS state{money} FROM cells "
-        "JOIN customers USING (customer)"
-    )
-    engine.drop("cells", "customers")
-    return _blocks(sweep, follower, customers, cells)
-
-
-def _blocks(
-    sweep: Sweep, follower: HistoryFollower, customers: Customers, cells: dict[str, np.ndarray]
-) -> bool:
-    size, any_exit = block_size(follower.periods), False
-    cuts, order = by_block(cells["c"], size, len(customers))
-    for k in range(len(cuts) - 1):
-        begin, end = k * size, min((k + 1) * size, len(customers))
-        mine = order[cuts[k] : cuts[k + 1]]
-        at = (cells["p"][mine], cells["c"][mine] - begin)
-        given = np.full((follower.periods, end - begin), -1, dtype=np.int8)
-        given[at] = cells["state"][mine]
-        amount = None
-        if "amount" in cells:
-            amount = np.zeros(given.shape, dtype=np.int64)
-            amount[at] = cells["amount"][mine]
-        f = follower.follow(given)
-        any_exit |= f.any_exit
-        arrays = (f.state, f.start, f.origin, f.tenure, f.memo, f.memo_state)
-        sweep.tabulate(sweep.block(*arrays, begin=begin, end=end, amount=amount))
-    return any_exit
 
 
 class HistoryFollower:

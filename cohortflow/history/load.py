@@ -1,17 +1,16 @@
 """Sources into one typed table `rows`, a record a row, in the order of the files; rowid is the record's number.
 
-customer  text, never changed          t      instant (events) in microseconds
-label     period as written (history)  code   position of the event or state; -1 ignored, -2 unknown and ignored
-fault     code of columns.FAULTS, 0 = good    bad  the offending text, for messages and --keep-values
-amount, until, seg, weight, event_id, loaded, currency, clock, zoned: only where the study names their columns
-h         64 bits of the whole row
+customer  text, never changed          t     instant (events) in microseconds
+label     period as written (history)  form  how the instant is written: 0 a day, 1 with a clock, 2 with an offset
+fault     code of columns.FAULTS, 0 = good    code  place of the event or state; -1 ignored, -2 unknown
+h         64 bits of the whole row            bad   the offending text, only with keep_values
+amount, until, seg, weight, event_id, loaded, currency: only where the study names their columns
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, field
-from typing import Any
 
 from cohortflow.errors import InputError, listed, nearest
 from cohortflow.history.columns import (
@@ -35,6 +34,7 @@ from cohortflow.study import InputSpec, Study
 
 FOREVER = 1_000_000_000  # ordinal of a valid-until day that never comes
 Progress = Callable[[str, float], None]
+Check = tuple[str, str, str]  # reason, SQL condition, SQL of the offending text
 
 
 @dataclass
@@ -46,6 +46,9 @@ class Loaded:
     time_format: TimeFormat | None = None
     money: Money | None = None
     segment_columns: tuple[tuple[str, str], ...] = ()
+    names: list[tuple[str, str, str]] = field(
+        default_factory=list
+    )  # (name, its code, relation) of each source
 
     @property
     def rows(self) -> int:
@@ -53,10 +56,12 @@ class Loaded:
         return sum(source.rows for source in self.sources)
 
 
-def load(engine: Engine, study: Study, sources: list[Source], progress: Progress) -> Loaded:
+def load(
+    engine: Engine, study: Study, sources: list[Source], progress: Progress, *, keep_values: bool = False
+) -> Loaded:
     """Fill `rows`. InputError for columns, dates or money that cannot be told."""
     loaded = Loaded(sources, segment_columns=segment_columns(study.input))
-    maker = _Maker(engine, study, loaded)
+    maker = _Maker(engine, study, loaded, keep_values)
     done, whole = 0, sum(s.size for s in sources) or 1
     for number, source in enumerate(sources):
         select = maker.select(source)
@@ -119,52 +124,53 @@ def _check_quote(source: Source, kind: str, text: str | None) -> None:
 class _Maker:
     """Builds the statement that reads one source."""
 
-    def __init__(self, engine: Engine, study: Study, loaded: Loaded) -> None:
+    def __init__(self, engine: Engine, study: Study, loaded: Loaded, keep_values: bool) -> None:
         self.engine, self.study, self.loaded = engine, study, loaded
-        self.spec = study.input
+        self.spec, self.keep_values = study.input, keep_values
 
     def select(self, source: Source) -> str:
         """SELECT of one source in the columns of `rows`."""
         columns: dict[str, str] = {}
-        checks: list[tuple[str, str]] = []
+        checks: list[Check] = []
         who = field_of(source, self.spec.customer or "", "customer").text
         columns["customer"] = who
-        checks.append(("id_missing", id_missing_sql(who)))
+        checks.append(("id_missing", id_missing_sql(who), who))
         if self.spec.layout == "events":
             self._event(source, columns, checks)
         else:
             self._state(source, columns, checks)
         self._extras(source, columns, checks)
-        self.loaded.has |= set(columns)
+        self.loaded.has |= set(columns) | ({"bad"} if self.keep_values else set())
         named = ", ".join(f"{sql} AS {name}" for name, sql in columns.items())
-        inner = f"SELECT {named}, {row_hash(source)} AS h, {', '.join(_kept(checks))} FROM {source.relation}"
-        outer = ", ".join(columns)
-        fault = fault_sql([(reason, f"k{i}") for i, (reason, _) in enumerate(checks)])
-        return f"SELECT {outer}, h, {fault} AS fault FROM ({inner})"
+        tests = ", ".join(f"{condition} AS k{i}" for i, (_, condition, _) in enumerate(checks))
+        texts = [f"{text} AS x{i}" for i, (_, _, text) in enumerate(checks)] if self.keep_values else []
+        inner = ", ".join([named, f"{row_hash(source)} AS h", tests, *texts])
+        fault = fault_sql([(reason, f"k{i}") for i, (reason, _, _) in enumerate(checks)])
+        bad = f", {_first_text(len(checks))} AS bad" if self.keep_values else ""
+        return f"SELECT {', '.join(columns)}, h, {fault} AS fault{bad} FROM (SELECT {inner} FROM {source.relation})"
 
     # ---- what happened ----
-    def _event(self, source: Source, columns: dict[str, str], checks: list[tuple[str, str]]) -> None:
+    def _event(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
         when = field_of(source, self.spec.time or "", "time")
         form = self._time_format(source, when.name, when.sql, when.type)
         time = instant_sql(when.sql if when.is_text or form.kind != "step" else when.text, form, when.type)
         event = field_of(source, self.spec.event or "", "event").text
-        codes = event_codes(self.study)
-        columns |= {"t": time.instant, "clock": time.clock, "zoned": time.zoned}
-        columns["code"] = code_sql(event, codes, str(UNKNOWN))
-        columns["bad"] = f"CASE WHEN {columns['code']} = {UNKNOWN} THEN coalesce({event}, '') END"
-        checks.append(("time_unreadable", f"({time.instant}) IS NULL"))
+        columns |= {"t": time.instant, "form": time.form}
+        columns["code"] = code_sql(event, event_codes(self.study), str(UNKNOWN))
+        self.loaded.names.append((event, columns["code"], source.relation))
+        checks.append(("time_unreadable", f"({time.instant}) IS NULL", when.text))
         if self.study.events.others != "ignore":
-            checks.append(("unknown_event", f"{columns['code']} = {UNKNOWN}"))
+            checks.append(("unknown_event", f"({columns['code']}) = {UNKNOWN}", event))
 
-    def _state(self, source: Source, columns: dict[str, str], checks: list[tuple[str, str]]) -> None:
+    def _state(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
         period = field_of(source, self.spec.time or "", "time")
         state = field_of(source, self.spec.state or "", "state").text
-        columns["label"] = f"trim({period.text})"
+        columns["label"] = f"coalesce(trim({period.text}), '')"
         columns["code"] = code_sql(f"trim({state})", state_codes(self.study), str(UNKNOWN))
-        columns["bad"] = f"CASE WHEN {columns['code']} = {UNKNOWN} THEN coalesce({state}, '') END"
-        checks.append(("time_unreadable", f"coalesce({columns['label']}, '') = ''"))
+        self.loaded.names.append((state, columns["code"], source.relation))
+        checks.append(("time_unreadable", f"({columns['label']}) = ''", period.text))
         if self.study.events.others != "ignore":
-            checks.append(("unknown_state", f"{columns['code']} = {UNKNOWN}"))
+            checks.append(("unknown_state", f"({columns['code']}) = {UNKNOWN}", state))
 
     def _time_format(self, source: Source, name: str, sql: str, sql_type: str) -> TimeFormat:
         known = self.loaded.time_format
@@ -195,7 +201,7 @@ class _Maker:
         return in_order(form, bool(found[0]), bool(found[1]), where=where)
 
     # ---- the rest ----
-    def _extras(self, source: Source, columns: dict[str, str], checks: list[tuple[str, str]]) -> None:
+    def _extras(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
         spec = self.spec
         if spec.amount:
             amount = field_of(source, spec.amount, "amount")
@@ -203,13 +209,15 @@ class _Maker:
             delimiter = source.dialect.delimiter if source.dialect else None
             self.loaded.money = money_style(samples, delimiter, spec.decimal)
             columns["amount"], bad = amount_sql(amount, self.loaded.money)
-            checks.append(("amount_unreadable", bad))
+            checks.append(("amount_unreadable", bad, amount.text))
         if spec.valid_until:
             columns["until"], bad = self._until(source)
-            checks.append(("valid_until_unreadable", bad))
+            text = field_of(source, spec.valid_until, "valid_until").text
+            checks.append(("valid_until_unreadable", bad, text))
         if spec.weight:
-            columns["weight"], bad = weight_sql(field_of(source, spec.weight, "weight"))
-            checks.append(("weight_unreadable", bad))
+            weight = field_of(source, spec.weight, "weight")
+            columns["weight"], bad = weight_sql(weight)
+            checks.append(("weight_unreadable", bad, weight.text))
         if self.loaded.segment_columns:
             fields = [field_of(source, name, role) for name, role in self.loaded.segment_columns]
             columns["seg"] = joined_text(fields)
@@ -248,8 +256,9 @@ class _Maker:
         return f"(CASE WHEN make_timestamp({instant}) > TIMESTAMP '{end}' THEN {FOREVER} ELSE -{FOREVER} END)"
 
 
-def _kept(checks: list[tuple[str, str]]) -> list[str]:
-    return [f"coalesce({condition}, false) AS k{i}" for i, (_, condition) in enumerate(checks)]
+def _first_text(checks: int) -> str:
+    """The text of the first fault of a row."""
+    return "CASE " + " ".join(f"WHEN k{i} THEN x{i}" for i in range(checks)) + " END"
 
 
 def event_codes(study: Study) -> dict[str, int]:
@@ -272,30 +281,23 @@ def state_codes(study: Study) -> dict[str, int]:
     return {**ignored, **place, **spelled}
 
 
-def refuse_unknown_names(engine: Engine, study: Study) -> None:
+def refuse_unknown_names(engine: Engine, study: Study, loaded: Loaded) -> None:
     """InputError that lists event or state names used nowhere, with their counts and the nearest known name."""
-    if study.events.others != "refuse":
+    if study.events.others != "refuse" or not engine.one("SELECT count(*) FROM rows WHERE fault IN (3, 7)"):
         return
+    each = [
+        f"SELECT coalesce({name}, '') AS name FROM {relation} WHERE ({code}) = {UNKNOWN}"
+        for name, code, relation in loaded.names
+    ]
     found = engine.rows(
-        "SELECT bad, count(*) FROM rows WHERE fault IN (3, 7) GROUP BY 1 ORDER BY 2 DESC, 1 LIMIT 13"
+        f"SELECT name, count(*) FROM ({' UNION ALL '.join(each)}) GROUP BY 1 ORDER BY 2 DESC, 1 LIMIT 13"
     )
-    if not found:
-        return
     what = "event" if study.input.layout == "events" else "state"
     known = [n for n, c in (event_codes if what == "event" else state_codes)(study).items() if c >= 0]
     shown = "; ".join(f'"{name}" {count:,} times{nearest(name, known)}' for name, count in found[:12])
     more = " and more" if len(found) > 12 else ""
     raise InputError(
-        f"The extract has {what}s that the study does not name: {shown}{more}. Known: {listed(known)}. In [events], "
-        f"map a spelling to a name (map = {{ {known[0] if known else 'name'} = [...] }}), put it under `ignore`, "
-        'or set others = "reject" or "ignore".'
+        f"The extract has {what}s that the study does not name: {shown}{more}. Known: {listed(known)}. In "
+        f"[events], map a spelling to a name (map = {{ {known[0] if known else 'name'} = [...] }}), put it "
+        'under `ignore`, or set others = "reject" or "ignore".'
     )
-
-
-def column_values(engine: Engine, column: str, limit: int = 12) -> Mapping[str, Any]:
-    """Values of a column of the good rows with their counts, most frequent first."""
-    found = engine.rows(
-        f"SELECT {column}, count(*) FROM rows WHERE fault = 0 AND {column} IS NOT NULL "
-        f"GROUP BY 1 ORDER BY 2 DESC, 1 LIMIT {int(limit)}"
-    )
-    return dict(found)

@@ -31,6 +31,14 @@ class PathSample:
         while self.held > 2 * PATHS_SAMPLED:
             self._thin()
 
+    def merge(self, other: PathSample) -> None:
+        """Take over the paths of another worker."""
+        self.least = max(self.least, other.least)
+        self.parts = [p.from_level(self.least) for p in (*self.parts, *other.parts)]
+        self.held = sum(len(p.level) for p in self.parts)
+        while self.held > 2 * PATHS_SAMPLED:
+            self._thin()
+
     def _thin(self) -> None:
         self.least += 1
         self.parts = [p.from_level(self.least) for p in self.parts]

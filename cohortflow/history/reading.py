@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, ClassVar
@@ -10,8 +11,9 @@ import numpy as np
 import pandas as pd
 
 from cohortflow.errors import InputError
+from cohortflow.history.accounts import ANY, SET_ASIDE, Accounts, outcome_of
 from cohortflow.history.check import TOTAL, Check, Finding, balanced, check_balance
-from cohortflow.history.columns import FAULTS, id_missing_sql
+from cohortflow.history.columns import FAULT_OF
 from cohortflow.history.engine import Engine
 from cohortflow.history.lines import LineFinder
 from cohortflow.history.load import Loaded, Progress
@@ -22,19 +24,8 @@ from cohortflow.states import States
 from cohortflow.study import Study
 from cohortflow.tally import Tally
 
-SET_ASIDE = {
-    40: "ignored_event",
-    41: "unknown_event",
-    42: "before_log_start",
-    43: "after_as_of",
-    44: "incomplete_period",
-    45: "after_exit",
-    46: "before_calendar",
-}
-ASIDE_OF = {reason: code for code, reason in SET_ASIDE.items()}
 MOST_MISSING = 0.05
 LINES_SHOWN = 5
-LISTED = ("rejected", "duplicate", "after_exit")
 
 
 @dataclass(frozen=True)
@@ -82,18 +73,15 @@ class History(Record):
 
 @dataclass
 class Reading:
-    """A reading in progress on one engine.
+    """A reading in progress on one engine: table `rows` is filled, findings gather.
 
-    outcome : SQL giving the outcome code of a row of `rows`: 0 used, else FAULTS or SET_ASIDE
     whole : what must be known of the whole extract when this is a part of it (see distribute.py), else None
-    Table `aside_rows` (r) holds the record numbers of rows set aside while labelling.
     """
 
     engine: Engine
     study: Study
     loaded: Loaded
     progress: Progress
-    outcome: str = "fault"
     findings: list[Finding] = field(default_factory=list)
     whole: Whole | None = None
 
@@ -109,11 +97,6 @@ class Reading:
         if self.whole is None:
             missing = int(self.engine.one("SELECT count(*) FROM rows WHERE fault = 1"))
             check_missing(missing, self.loaded.rows, self.study.input.customer)
-
-    def file_of(self, row: str = "rowid") -> str:
-        """SQL for the number of the file that a row came from."""
-        starts = [s.first for s in self.loaded.sources]
-        return step_case(row, starts[1:])
 
     # ---- line numbers ----
     def place(self, rowids: Sequence[int] | np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -145,100 +128,73 @@ class Reading:
         return [(self.loaded.sources[f].name, int(n)) for f, n in zip(file, lines, strict=True)]
 
     # ---- the accounting ----
-    def accounting(self, used_customers: int) -> Check:
+    def accounting(self, accounts: Accounts) -> Check:
         """The accounting of all rows; RuntimeError when it does not balance."""
+        lines = [(*outcome_of(o), f, n, accounts.customers[o, f]) for (o, f), n in accounts.rows.items()]
+        lines += [("rejected", "id_missing", f, n, 0) for f, n in self._without_id()]
+        bad = Counter((k, why) for k, s in enumerate(self.loaded.sources) for _, why in s.bad)
+        lines += [("rejected", why, k, n, 0) for (k, why), n in bad.items()]
         names = [s.name for s in self.loaded.sources]
-        lines = self._counted(names, used_customers)
-        bad = pd.Series([(s.name, reason) for s in self.loaded.sources for _, reason in s.bad], dtype=object)
-        lines += [
-            ("rejected", why, name, int(n), 0) for (name, why), n in bad.value_counts(sort=False).items()
-        ]
-        frame = balanced(lines, self._customers(names, used_customers))
+        known = {(*outcome_of(o), f): n for (o, f), n in accounts.customers.items() if o != ANY}
+        known |= {("read", "", f): n for (o, f), n in accounts.customers.items() if o == ANY}
+        frame = balanced(
+            [(outcome, reason, names[f], n, c) for outcome, reason, f, n, c in lines],
+            {(o, r, TOTAL if f < 0 else names[f]): n for (o, r, f), n in known.items()},
+            files=names,
+        )
         read = {s.name: s.rows + len(s.bad) for s in self.loaded.sources}
         check_balance(frame, {**read, TOTAL: sum(read.values())})
         return Check(frame, tuple(self.findings))
 
-    def _counted(self, names: list[str], used_customers: int) -> list[tuple[str, str, str, int, int]]:
-        who = f"count(DISTINCT CASE WHEN NOT {id_missing_sql('customer')} THEN customer END)"
-        found = self.engine.rows(
-            f"SELECT {self.file_of()} AS f, {self.outcome} AS o, count(*), {who} FROM rows WHERE {self.outcome} <> 0 "
-            "GROUP BY 1, 2"
-        )
-        found += [(f, ASIDE_OF["after_exit"], n, c) for f, n, c in self._after_exit()]
-        aside = {f: n for f, o, n, _ in found if o == ASIDE_OF["after_exit"]}
-        lines = [(*outcome_of(o), names[f], int(n), int(c)) for f, o, n, c in found]
-        used = self.engine.rows(
-            f"SELECT {self.file_of()} AS f, count(*) FROM rows WHERE {self.outcome} = 0 GROUP BY 1"
-        )
-        left = {f: int(n) - aside.get(f, 0) for f, n in used}
+    def _without_id(self) -> list[tuple[int, int]]:
+        """(file, rows) without an id."""
+        starts = [s.first for s in self.loaded.sources]
+        file = step_case("rowid", starts[1:])
         return [
-            *lines,
-            *(("used", "", names[f], n, used_customers) for f, n in left.items() if n or len(names) == 1),
+            (int(f), int(n))
+            for f, n in self.engine.rows(f"SELECT {file} AS f, count(*) FROM rows WHERE fault = 1 GROUP BY 1")
         ]
 
-    def _after_exit(self) -> list[tuple[int, int, int]]:
-        return self.engine.rows(
-            f"SELECT {self.file_of('rows.rowid')} AS f, count(*), count(DISTINCT customer) FROM rows "
-            "JOIN aside_rows ON rows.rowid = aside_rows.r GROUP BY 1"
-        )
-
-    def _customers(self, names: list[str], used_customers: int) -> dict[tuple[str, str, str], int]:
-        """Counts of customers that do not add up over outcomes or files."""
-        there = f"NOT {id_missing_sql('customer')}"
-        out = {("used", "", TOTAL): used_customers}
-        out[("read", "", TOTAL)] = int(
-            self.engine.one(f"SELECT count(DISTINCT customer) FROM rows WHERE {there}")
-        )
-        if len(names) == 1:
-            out[("read", "", names[0])] = out[("read", "", TOTAL)]
-            out[("used", "", names[0])] = used_customers
-            return out
-        file = self.file_of()
-        for f, n in self.engine.rows(
-            f"SELECT {file}, count(DISTINCT customer) FROM rows WHERE {there} GROUP BY 1"
-        ):
-            out[("read", "", names[f])] = int(n)
-        used = f"{self.outcome} = 0 AND rowid NOT IN (SELECT r FROM aside_rows)"
-        for f, n in self.engine.rows(
-            f"SELECT {file}, count(DISTINCT customer) FROM rows WHERE {used} GROUP BY 1"
-        ):
-            out[("used", "", names[f])] = int(n)
-        who = f"count(DISTINCT CASE WHEN {there} THEN customer END)"
-        for o, n in self.engine.rows(
-            f"SELECT {self.outcome} AS o, {who} FROM rows WHERE {self.outcome} <> 0 GROUP BY 1"
-        ):
-            out[(*outcome_of(o), TOTAL)] = int(n)
-        after = "SELECT count(DISTINCT customer) FROM rows JOIN aside_rows ON rows.rowid = aside_rows.r"
-        out[("set_aside", "after_exit", TOTAL)] = int(self.engine.one(after))
-        return out
-
     # ---- the rows themselves ----
-    def rejected(self, *, keep_values: bool = False) -> pd.DataFrame:
+    def rejected(self, accounts: Accounts) -> pd.DataFrame:
         """file, line, column, reason[, value] of rows rejected, dropped, or set aside after an exit."""
-        found = self.engine.connection.execute(
-            f"SELECT rowid AS r, fault::INTEGER AS o, {'bad' if keep_values else 'NULL'} AS v FROM rows WHERE fault > 0 "
-            f"UNION ALL SELECT r, {ASIDE_OF['after_exit']}, NULL FROM aside_rows ORDER BY 1"
-        ).df()
-        file, line = self.place(found["r"].to_numpy())
-        named = self._columns_of_reasons()
-        reasons = [outcome_of(o)[1] for o in found["o"]]
-        parts = [pd.DataFrame({"f": file, "line": line, "reason": reasons, "value": found["v"].to_numpy()})]
+        keep_values = "bad" in self.loaded.has
+        found = self.engine.arrays(
+            f"SELECT rowid AS r, fault::INTEGER AS o{', bad AS v' if keep_values else ''} FROM rows WHERE fault > 0"
+        )
+        record, outcome = accounts.listed_rows()
+        fresh = np.isin(outcome, [*SET_ASIDE, FAULT_OF["identical"]]) | ~np.isin(record, found["r"])
+        record, outcome = record[fresh], outcome[fresh]
+        file, line = self.place(np.concatenate([found["r"], record]))
+        codes = np.concatenate([found["o"], outcome])
+        values = [*(found["v"] if keep_values else [""] * len(found["r"])), *([""] * len(record))]
+        table = pd.DataFrame({"f": file, "line": line, "o": codes, "value": pd.Series(values, dtype=object)})
+        reasons = {code: outcome_of(code)[1] for code in np.unique(codes).tolist()}
+        table["reason"] = table["o"].map(reasons)
+        parts = [table]
         for k, source in enumerate(self.loaded.sources):
             if source.bad:
-                bad = self.finder(k).bad_lines()
-                parts.append(pd.DataFrame({"f": k, "line": bad, "reason": [why for _, why in source.bad]}))
+                why = [reason for _, reason in source.bad]
+                parts.append(
+                    pd.DataFrame({"f": k, "line": self.finder(k).bad_lines(), "reason": why, "value": ""})
+                )
         whole = pd.concat(parts, ignore_index=True).sort_values(
             ["f", "line"], kind="stable", ignore_index=True
         )
+        return self._shown_rows(whole, keep_values)
+
+    def _shown_rows(self, table: pd.DataFrame, keep_values: bool) -> pd.DataFrame:
+        names = {k: s.name for k, s in enumerate(self.loaded.sources)}
+        columns = self._columns_of_reasons()
         out = pd.DataFrame(
             {
-                "file": [self.loaded.sources[int(f)].name for f in whole["f"]],
-                "line": whole["line"].astype("int64"),
-                "column": [named.get(r, "") for r in whole["reason"]],
-                "reason": whole["reason"].astype(object),
+                "file": table["f"].map(names).astype(object),
+                "line": table["line"].astype("int64"),
+                "column": table["reason"].map(columns).fillna("").astype(object),
+                "reason": table["reason"].astype(object),
             }
         )
-        return out.assign(value=whole["value"].fillna("")) if keep_values else out
+        return out.assign(value=table["value"].fillna("")) if keep_values else out
 
     def _columns_of_reasons(self) -> dict[str, str]:
         spec = self.study.input
@@ -272,11 +228,6 @@ def check_missing(missing: int, rows: int, column: str | None) -> None:
             f"({100 * missing / rows:.1f} %); at most {100 * MOST_MISSING:.0f} % are tolerated. See whether "
             "it is the right column (`customer` in [input]), or repair the extract."
         )
-
-
-def outcome_of(code: int) -> tuple[str, str]:
-    """(outcome, reason) of an outcome code."""
-    return FAULTS[code] if code in FAULTS else ("set_aside", SET_ASIDE[code])
 
 
 def step_case(value: str, starts: Sequence[int]) -> str:

@@ -7,11 +7,9 @@ when the stay began. It is carried forward period by period; nothing looks ahead
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-
 import numpy as np
 
-from cohortflow.history.cells import WORD, CellPlan
+from cohortflow.history.cells import NO_DATE, WORD, CellPlan, Columns, flags
 from cohortflow.history.columns import AMOUNT_SCALE
 from cohortflow.study import Condition, Study
 
@@ -37,10 +35,8 @@ class Rules:
         return self.plan.among.index(frozenset(self.place[n] for n in condition.among))
 
     def _flags(self, names: tuple[str, ...]) -> np.ndarray:
-        """(scale + 1,) bool by event position; the last place stands for "no event yet"."""
-        flags = np.zeros(self.plan.scale + 1, dtype=bool)
-        flags[[self.place[n] for n in names]] = True
-        return flags
+        """(events + 1,) bool by event; the last place stands for "no event yet"."""
+        return flags((self.place[n] for n in names), self.plan.events + 1)
 
     def states(self, t: int, memory: Memory) -> np.ndarray:
         """(B,) position of the first rule that holds at the end of period t."""
@@ -117,12 +113,12 @@ class Memory:
     def __init__(self, rules: Rules, periods: int, size: int) -> None:
         self.rules, self.size = rules, size
         plan = rules.plan
-        self.nothing = plan.scale  # the place that stands for "no event yet"
+        self.nothing = plan.events  # the place that stands for "no event yet"
         self.latest = [np.full(size, self.nothing, dtype=np.int16) for _ in plan.among]
         self.last_seen = [np.full(size, NOT_SEEN, dtype=np.int32) for _ in rules.silent]
         self.counted = [Running(periods, size) for _ in plan.counted]
         self.spent = Running(periods if rules.spends else 0, size)
-        self.until = np.full(size, -(2**31), dtype=np.int64)
+        self.until = np.full(size, NO_DATE, dtype=np.int64)
         self.began = np.full(size, 2**30, dtype=np.int32)
         self.known = np.zeros(size, dtype=bool)
         self._words = [[word(s, w) for w in range(plan.words)] for s in rules.silent]
@@ -134,7 +130,7 @@ class Memory:
         for latest in self.latest:
             latest[who] = self.nothing
 
-    def take_in(self, t: int, row: Mapping[str, np.ndarray]) -> None:
+    def take_in(self, t: int, row: Columns) -> None:
         """The used rows of period t."""
         plan = self.rules.plan
         for i, latest in enumerate(self.latest):

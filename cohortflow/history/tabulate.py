@@ -189,6 +189,14 @@ class Tabulator:
         }
         self.adders["memos"].add(keys)
 
+    def merge(self, other: Tabulator) -> None:
+        """Take over what another worker has counted."""
+        for name, adder in self.adders.items():
+            adder.take_over(other.adders[name])
+        self.impossible.update(other.impossible)
+        self.counted += other.counted
+        self.paths.merge(other.paths)
+
     def tables(self) -> dict[str, pd.DataFrame]:
         """All tables so far, buckets as places in the list of buckets."""
         frames = {name: adder.frame() for name, adder in self.adders.items()}

@@ -42,12 +42,13 @@ class TimeFormat:
     """How a column writes instants. kind: iso | pattern | typed | step.
 
     patterns: for kind "pattern", alternatives in strptime codes; `order_unknown`: "/" or "-" when the place
-    of day and month must be found from all rows first.
+    of day and month must be found from all rows first; `width`: usual length of ISO text.
     """
 
     kind: str
     patterns: tuple[str, ...] = ()
     order_unknown: str = ""
+    width: int = 19
 
     @property
     def shown(self) -> str:
@@ -69,7 +70,8 @@ def detect_format(samples: Sequence[str], *, where: str, given: str | None = Non
         )
     best = max(sorted(votes), key=lambda shape: votes[shape])
     if best == "iso":
-        return TimeFormat("iso")
+        widths = Counter(len(v) for v in values if len(v) in (10, 16, 19))
+        return TimeFormat("iso", width=max(widths, key=lambda w: widths[w], default=19))
     if best.startswith("a"):
         return TimeFormat("pattern", order_unknown=best[1])
     return TimeFormat("pattern", tuple(best + clock for clock in _CLOCKS))
@@ -96,49 +98,65 @@ def in_order(form: TimeFormat, first_over_12: bool, second_over_12: bool, *, whe
 
 @dataclass(frozen=True)
 class TimeSql:
-    """Expressions over one column: the instant (NULL when unreadable), whether it has a clock and an offset."""
+    """Expressions over one column: the instant (NULL when unreadable), and how it is written (0 day, 1 clock, 2 zoned)."""
 
     instant: str
-    clock: str
-    zoned: str
+    form: str
 
 
 def instant_sql(column: str, form: TimeFormat, sql_type: str = "VARCHAR") -> TimeSql:
     """SQL for a column (an expression) written in `form` or typed by the file."""
     if form.kind == "step":
         number = f"try_cast({column} AS BIGINT)"
-        return TimeSql(f"CASE WHEN abs({number}) < 1000000000 THEN {number} END", "false", "false")
+        return TimeSql(f"CASE WHEN abs({number}) < 1000000000 THEN {number} END", "0::UTINYINT")
     if form.kind == "typed":
         zoned = "TIME ZONE" in sql_type
-        cast = "TIMESTAMPTZ" if zoned else "TIMESTAMP"
-        clock = "false" if sql_type == "DATE" else "true"
-        return TimeSql(_bounded(f"{column}::{cast}"), clock, str(zoned).lower())
-    text = f"trim({column})"
+        stamp = f"{column}::{'TIMESTAMPTZ' if zoned else 'TIMESTAMP'}"
+        return TimeSql(_bounded(stamp), f"{2 if zoned else int(sql_type != 'DATE')}::UTINYINT")
     if form.kind == "pattern":
-        patterns = "[" + ", ".join(map(quoted, form.patterns)) + "]"
-        with_clock = any("%H" in p or "%I" in p for p in form.patterns)
-        clock = (f"length({text}) > 11" if len(form.patterns) > 1 else "true") if with_clock else "false"
-        zoned = str(any("%z" in p for p in form.patterns)).lower()
-        return TimeSql(_bounded(f"try_strptime({text}, {patterns})"), clock, zoned)
-    return _iso_sql(text)
+        return _pattern_sql(f"trim({column})", form.patterns)
+    return _iso_sql(column, form.width)
 
 
-def _iso_sql(text: str) -> TimeSql:
-    """The engine's cast takes any tail ("10:00 foo") and forgets offsets, so the shape is looked at first."""
+def _pattern_sql(text: str, patterns: tuple[str, ...]) -> TimeSql:
+    listed = "[" + ", ".join(map(quoted, patterns)) + "]"
+    clock = "0"
+    if any("%H" in p or "%I" in p for p in patterns):
+        clock = f"CASE WHEN length({text}) > 11 THEN 1 ELSE 0 END" if len(patterns) > 1 else "1"
+    if any("%z" in p for p in patterns):
+        clock = "2"
+    return TimeSql(_bounded(f"try_strptime({text}, {listed})"), f"({clock})::UTINYINT")
+
+
+def _iso_sql(column: str, width: int) -> TimeSql:
+    """The engine's cast takes any tail ("10:00 foo") and forgets offsets, so the shape is looked at first.
+
+    Values of the usual width are told by one or two characters; only others are looked at closely.
+    """
+    usual = {10: f"length({column}) = 10"}.get(
+        width, f"length({column}) = {width} AND substr({column}, {width - 2}, 1) = ':'"
+    )
+    text = f"trim({column})"
     plain = (
         f"(length({text}) = 10 OR (length({text}) IN (16, 19) AND substr({text}, 14, 1) = ':' "
         f"AND (length({text}) = 16 OR substr({text}, 17, 1) = ':')))"
     )
-    zoned = f"(length({text}) > 16 AND NOT {plain} AND regexp_full_match({text}, '{_ZONED}'))"
+    zoned = f"(length({text}) > 16 AND regexp_full_match({text}, '{_ZONED}'))"
     fraction = f"(length({text}) > 19 AND regexp_full_match({text}, '{_FRACTION}'))"
     instant = (
-        f"CASE WHEN {plain} OR {fraction} THEN {_bounded(f'try_cast({text} AS TIMESTAMP)')} "
+        f"CASE WHEN {usual} THEN {_bounded(f'try_cast({column} AS TIMESTAMP)')} "
+        f"WHEN {plain} OR {fraction} THEN {_bounded(f'try_cast({text} AS TIMESTAMP)')} "
         f"WHEN {zoned} THEN {_bounded(f'try_cast({text} AS TIMESTAMPTZ)')} END"
     )
-    return TimeSql(instant, f"length({text}) > 10", zoned)
+    form = (
+        f"(CASE WHEN {usual} THEN {int(width > 10)} WHEN length({text}) = 10 THEN 0 WHEN {plain} OR {fraction} THEN 1 "
+        f"WHEN {zoned} THEN 2 ELSE 0 END)::UTINYINT"
+    )
+    return TimeSql(instant, form)
 
 
 def _bounded(stamp: str) -> str:
+    """Whole microseconds of a moment within bounds; the engine's infinities are outside."""
     return (
         f"(CASE WHEN {stamp} >= '{EARLIEST}'::TIMESTAMP AND {stamp} < '{LATEST}'::TIMESTAMP "
         f"THEN epoch_us({stamp}) END)"
@@ -167,13 +185,9 @@ class Clock:
         local = datetime(day.year, day.month, day.day, tzinfo=self.zone)
         return int(local.timestamp()) * 1_000_000
 
-    def local_sql(self, instant: str) -> str:
+    def local(self, instant: int) -> int:
         """Local microseconds of an instant."""
-        if not self.changes:
-            return instant
-        whens = " ".join(f"WHEN {instant} < {until} THEN {offset}" for until, offset in self.changes[:-1])
-        shift = f"CASE {whens} ELSE {self.changes[-1][1]} END" if whens else str(self.changes[-1][1])
-        return f"({instant} + {shift})"
+        return instant + next((o for until, o in self.changes if instant < until), 0)
 
     def instant_sql(self, local: str) -> str:
         """The instant of local microseconds; of an hour that comes twice, the first."""
