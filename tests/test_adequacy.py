@@ -80,8 +80,7 @@ def test_refuses(wrong, text):
 
 
 def test_sizes_and_powers_in_a_small_simulation():
-    # 40 seeded worlds of 250 customers; at a true size of .05, P(more than 8 of 40) = .0001 a check
-    # (binomial)
+    # 40 seeded worlds of 250 customers; at a true size of .05, P(more than 8 of 40) is .0001 (binomial)
     jobs = [("markov", 250, s, 39, "step") for s in range(40)]
     jobs += [("own rows", 250, s, 39, "step") for s in range(10)]
     shares = study(jobs, workers=1)

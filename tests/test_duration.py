@@ -28,8 +28,7 @@ def test_bands():
 
 
 def test_statistic_by_hand():
-    # joined in period 1 (tenure known): "..0 ..." four of age 0: two go on to 0, two to 1; then age 1: one
-    # each
+    # joined in period 1 (tenure known): "..0 ..." four of age 0: two go on to 0, two to 1; then one each
     lines = [".00", ".00", ".01", ".01", "..0"]
     found = duration(tally_of(lines), "tenure", replications=19, rng=np.random.default_rng(1))
     assert found.reason == "too_few_moves"  # one band of tenure only

@@ -16,9 +16,9 @@ def p_of(name, **more):
 
 
 def test_statistic_is_that_of_the_contexts():
-    # three histories: 0 0 1, 1 0 0, 0 0 0 0: contexts in state 0: (0 -> 0, 0 -> 1), (1: 0 -> 0), (0: 0 0
-    # twice)
-    found = order(tally_of(["001", "100", "0000"[:3]]), replications=19, rng=np.random.default_rng(1))
+    # three histories: 0 0 1, 1 0 0, 0 0 0 0: contexts in state 0: (0 -> 0, 0 -> 1), (1: 0 -> 0), and (0: 0 -> 0)
+    # from 000
+    found = order(tally_of(["001", "100", "000"]), replications=19, rng=np.random.default_rng(1))
     table = [
         [1, 1],
         [1, 0],
@@ -48,9 +48,8 @@ def test_histories_of_two_periods_cannot_tell():
 
 
 def test_criteria_by_hand():
-    # 0 1 0 0 1: moves 01 10 00 01; order 0 of the four targets 1 0 0 1: 4 log 1/2; order 1: 0 -> 1 twice, 0
-    # once;
-    # 1 -> 0: 2 log 2/3 + log 1/3
+    # 0 1 0 0 1: moves 01 10 00 01; order 0 of the four targets 1 0 0 1: 4 log 1/2; order 1: 0 -> 1 twice,
+    # 0 -> 0 once: 2 log 2/3 + log 1/3
     found = order_criteria([0, 1, 0, 0, 1], most=1)
     assert found["log_likelihood"].tolist() == pytest.approx(
         [4 * np.log(0.5), 2 * np.log(2 / 3) + np.log(1 / 3)]

@@ -171,8 +171,7 @@ TRAIN, TEST, FORECAST = [10, 12, 11, 13, 15, 14, 16], [18, 17, 19], [15, 16, 17]
 
 
 def test_mase():
-    # errors 3 1 2: mean 2; naive in sample (2+1+2+2+1+2)/6 = 5/3: 1.2 (VERIFIED, a run of the R package
-    # forecast)
+    # errors 3 1 2: mean 2; naive in sample (2+1+2+2+1+2)/6 = 5/3: 1.2 (VERIFIED, R package forecast)
     assert scores.mase(FORECAST, TEST, TRAIN) == pytest.approx(1.2)
 
 

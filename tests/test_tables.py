@@ -24,8 +24,7 @@ TABLES = arrays(
 
 
 def test_by_hand():
-    # rows 30, 70; columns 40, 60; expected 12 18 / 28 42; each differs by 8: X2 = 64 (1/12 + 1/18 + 1/28 +
-    # 1/42)
+    # rows 30, 70; columns 40, 60; expected 12 18 / 28 42; each 8 off: X2 = 64 (1/12 + 1/18 + 1/28 + 1/42)
     found = independence([[20, 10], [20, 50]])
     assert found.x2 == pytest.approx(64 * (1 / 12 + 1 / 18 + 1 / 28 + 1 / 42), rel=1e-12)
     # 2 (20 log 20/12 + 10 log 10/18 + 20 log 20/28 + 50 log 50/42)
@@ -107,8 +106,7 @@ def test_pooled_adds_the_strata():
 
 
 def test_random_tables_keep_margins_and_have_the_chi_square_mean():
-    # E of LR under independence is near its df for large counts: 4 x 3 tables, df 6; mean of 400 draws +- 4
-    # sd
+    # E of LR under independence is near its df for large counts: 4 x 3 tables, df 6; mean of 400 +- 4 sd
     cells = np.random.default_rng(0).multinomial(
         4000, np.outer([0.1, 0.2, 0.3, 0.4], [0.5, 0.3, 0.2]).ravel()
     )

@@ -1,8 +1,7 @@
 """Whether a chain is good enough for these customers: every assumption tested, and what its failure would do.
 
 The verdict is `fails` only when a failure is clear and matters: when the model that drops the assumption
-moves
-`all_live` at the horizon by half of the band's half-width or more. With many customers everything is clear.
+moves `all_live` at the horizon by half of the band's half-width or more. With many customers everything is clear.
 """
 
 from __future__ import annotations
@@ -21,7 +20,7 @@ from cohortflow.assessment.finding import Finding, verdict
 from cohortflow.assessment.heterogeneity import customers
 from cohortflow.assessment.ksteps import k_steps
 from cohortflow.assessment.order import order
-from cohortflow.assessment.outlook import Setting
+from cohortflow.assessment.outlook import Setting, known_method
 from cohortflow.assessment.paths import Paths
 from cohortflow.assessment.segments import segments
 from cohortflow.errors import CallError
@@ -54,8 +53,7 @@ class Adequacy(Record):
     def to_frame(self) -> pd.DataFrame:
         """segment, check, what, statistic, df, p_value, effect, verdict, advice.
 
-        verdict : holds | doubtful | fails | not_testable;  advice : the model that repairs it ("" when it
-            holds),
+        verdict : holds | doubtful | fails | not_testable;  advice : the repairing model ("" when it holds),
         for not_testable what is lacking (customer_rows, longer_history, two_cycles, no_calendar,
         segment_column, too_few_moves)
         """
@@ -86,6 +84,7 @@ def adequacy(
     level: float = 0.90,
     replications: int = 199,
     by: str | None = None,
+    joiners: str = "constant",
     effects: bool = True,
     options: Mapping[str, Mapping[str, Any]] | None = None,
 ) -> Adequacy:
@@ -98,6 +97,7 @@ def adequacy(
     level : of the band that an effect is held against
     replications : random tables, permutations and simulated panels behind each p-value
     by : a segment column: test each of its values as well
+    joiners : method of the joiner forecast in that band ("planned" is taken as "last_year")
     effects : False leaves the effects unknown (NaN), so that nothing gets worse than "doubtful"
     options : model -> options of `fit` for the repairing models
 
@@ -115,11 +115,11 @@ def adequacy(
     if horizon < 1:
         raise CallError(f"horizon is a number of periods from 1 on; got {horizon}.")
     random = rng if isinstance(rng, np.random.Generator) else np.random.default_rng(rng)
-    setting = Setting(horizon, level, options=options)
+    setting = Setting(horizon, level, joiners=known_method(joiners), options=options)
     parts = {"all": tally} if by is None else {"all": tally, **tally.by_segment(by)}
     rows, outlooks, gaps = [], [], []
     for name, part in parts.items():
-        found, gap = _findings(part, horizon, replications, random)
+        found, gap = _findings(part, replications, random)
         effect = Effects.of(part, setting, random) if effects else Effects.unknown(part, setting)
         rows += [_row(name, f, effect, effects) for f in found]
         outlooks.append((name, effect.live, effect.half_width))
@@ -132,7 +132,7 @@ def adequacy(
 
 
 def _findings(
-    tally: Tally, horizon: int, replications: int, rng: np.random.Generator
+    tally: Tally, replications: int, rng: np.random.Generator
 ) -> tuple[list[Finding], pd.DataFrame]:
     n = replications
     has_paths = "paths" in tally.meta.tables

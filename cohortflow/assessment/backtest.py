@@ -16,7 +16,7 @@ from typing import Any, ClassVar
 import numpy as np
 import pandas as pd
 
-from cohortflow.assessment.outlook import Setting, SharedLuck
+from cohortflow.assessment.outlook import Setting, SharedLuck, known_method
 from cohortflow.assessment.past import PastForecast, slimmed
 from cohortflow.assessment.rivals import RIVALS, STARTED, Observed, RivalForecasts
 from cohortflow.assessment.scores import crps_normal, crps_sample, interval_score, log_score
@@ -44,9 +44,8 @@ class Backtest(Record):
 
     frame : the table `backtest`;  history : quantity -> (T,) what happened, for scales
     log_scores : model, origin, moves, log_score (mean -log probability of the next period's moves)
-    notes : model, origin, note: forecasts that could not be made (the error's slug); "joiners_unknown" for
-        bare
-        counts, whose base is forecast as if nobody joined
+    notes : model, origin, note: forecasts that could not be made (the error's slug); "joiners_unknown"
+        for bare counts, whose base is forecast as if nobody joined
     models, origins (ordinals), horizon, level, draws, joiners : what it rests on
     """
 
@@ -129,9 +128,8 @@ def backtest(
     models : names of models;  options : model -> options of `fit`
     horizon, origins : periods ahead, and how many origins; each origin is old enough for every horizon
     level : of the bands;  draws : how many make a band (fewer than in a forecast of now)
-    joiners : method of the joiner forecast ("planned" is replaced by "last_year"; where that is too long
-        for an
-        origin's history, "constant")
+    joiners : method of the joiner forecast ("planned" is replaced by "last_year"; where an origin's
+        history is too short for it, "constant")
     totals : named sums of states, scored as well
     rng : seed or Generator; at one origin all models draw from the same random numbers
 
@@ -147,39 +145,59 @@ def backtest(
     >>> found.validated_to("plain")  # no model can be vouched for by four origins
     (0, 'too_few_origins')
     """
-    setting = Setting(
-        horizon, level, draws, "last_year" if joiners == "planned" else joiners, totals, options
-    )
+    setting = Setting(horizon, level, draws, known_method(joiners), totals, options)
     _check(models, setting, origins)
     at = _origins(tally, horizon, origins)
-    seed = int(np.random.default_rng(rng).integers(2**62))
     seen = Observed.of(tally, horizon)
     weights = {**weights_of(tally.states, totals), OF_ORIGIN: tally.states.live_mask.astype(float)}
+    book = _Book(_rival_rows(tally, seen, at, setting, weights), [], [])
+    if "starts" not in tally.meta.tables:
+        book.notes.append(("", "", "joiners_unknown"))
+    seed = int(np.random.default_rng(rng).integers(2**62))
     slim = slimmed(tally, segments="segment" in models)
-    rows: list[tuple[Any, ...]] = _rival_rows(tally, seen, at, setting, weights)
-    logs: list[tuple[Any, ...]] = []
-    notes = [] if "starts" in tally.meta.tables else [("", "", "joiners_unknown")]
     for origin in at:
-        past, luck, label = slim.at_origin(origin), SharedLuck(), tally.calendar.label(origin)
-        happened = {q: _happened(seen, origin - seen.first, horizon, q, w) for q, w in weights.items()}
+        book.write(slim, seen, origin, models, setting, weights, seed)
+    return Backtest(
+        pd.DataFrame(book.rows, columns=list(COLUMNS)),
+        pd.DataFrame(book.logs, columns=["model", "origin", "moves", "log_score"]),
+        pd.DataFrame(book.notes, columns=["model", "origin", "note"]),
+        {q: seen.mix @ w for q, w in weights.items()},
+        tuple(models), tuple(at), seen.first, horizon, level, draws, setting.joiners,
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _Book:
+    """Rows of the tables of a Backtest, as they are made."""
+
+    rows: list[tuple[Any, ...]]
+    logs: list[tuple[Any, ...]]
+    notes: list[tuple[Any, ...]]
+
+    def write(
+        self,
+        slim: Tally,
+        seen: Observed,
+        origin: int,
+        models: Sequence[str],
+        setting: Setting,
+        weights: Weights,
+        seed: int,
+    ) -> None:
+        """Every model's forecasts from one origin."""
+        past, luck, label = slim.at_origin(origin), SharedLuck(), slim.calendar.label(origin)
+        o = origin - seen.first
+        happened = {q: _happened(seen, o, setting.horizon, q, w) for q, w in weights.items()}
         for model in models:
             try:
                 made = PastForecast.of(
-                    past, model, setting, luck, np.random.default_rng([seed, origin - at[0]])
+                    past, model, setting, luck, np.random.default_rng([seed, origin % 2**31])
                 )
             except CohortflowError as error:
-                notes.append((model, label, error.slug))
+                self.notes.append((model, label, error.slug))
                 continue
-            rows += _model_rows(model, label, made, happened, weights, setting)
-            logs.append((model, label, *_log_score(slim, origin, made.next_step)))
-    frame = pd.DataFrame(rows, columns=list(COLUMNS))
-    history = {q: seen.mix @ w for q, w in weights.items()}
-    return Backtest(
-        frame,
-        pd.DataFrame(logs, columns=["model", "origin", "moves", "log_score"]),
-        pd.DataFrame(notes, columns=["model", "origin", "note"]),
-        history, tuple(models), tuple(at), seen.first, horizon, level, draws, setting.joiners,
-    )  # fmt: skip
+            self.rows.extend(_model_rows(model, label, made, happened, weights, setting))
+            self.logs.append((model, label, *_log_score(slim, origin, made.next_step)))
 
 
 def _model_rows(

@@ -1,17 +1,13 @@
 """Which model: the one whose past bands were best, by how much, and how sure that is.
 
-    loss of an origin = mean over horizons and quantities of  interval score / mean interval score of the
-    reference
+    loss of an origin = mean over horizons and quantities of  interval score / the reference model's mean score
 
 so that a loss of 0.9 means scores a tenth better than the reference model's ("plain", else the first named).
-Only origins from which every model forecast count. Doubt: the paired difference to the next best with an
-error
-that allows for overlapping horizons, and the share of resampled records (circular blocks of origins as long
-as
-the horizon) in which each model comes first.
+Only origins from which every model forecast count. Doubt: the paired difference to the next best, with an
+error that allows for overlapping horizons, and the share of resampled records (circular blocks of origins, as
+long as the horizon) in which each model comes first.
 
-Sources: Diebold & Mariano (1995) J. Bus. Econ. Stat. 13, 253; Politis & Romano (1992), circular block
-bootstrap.
+Sources: Diebold & Mariano (1995) J. Bus. Econ. Stat. 13, 253; Politis & Romano (1992), circular blocks.
 """
 
 from __future__ import annotations

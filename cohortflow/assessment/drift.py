@@ -2,9 +2,8 @@
 
 Three questions with three answers for the user:
 
-periods   any two periods may differ: one table for each origin, rows = periods. If they do, future months
-will
-          differ too, which the band's part "common_shocks" covers; the mean forecast need not move.
+periods   any two periods may differ: one table for each origin, rows = periods. If they do, future
+          months will differ too, which the band's part "common_shocks" covers; the mean forecast need not move.
 eras      consecutive stretches of the history differ: the rates are moving, and old ones mislead.
 seasons   places in the calendar differ.
 

@@ -1,5 +1,4 @@
-"""Duration: does the next state depend on how long ago the customer joined, or on the time spent in the
-state?
+"""Duration: does the next state depend on how long ago the customer joined, or on the time in the state?
 
 Tables as in order.py, rows = bands of periods since joining (tenure) or already spent in the state; unknown
 durations (histories that began before the log) are left out, and each period is its own stratum.

@@ -3,8 +3,7 @@
     D_k = sum_ij (N^(k)_ij - n^(k)_i (P^k)_ij)^2 / (n^(k)_i (P^k)_ij)
 
 The windows overlap and P is estimated from the same moves, so there is no chi-square law: the reference
-simulates the same stays (first state, period, window) from the estimated chain and estimates P anew each
-time.
+simulates the same stays (first state, period, window) from the estimated chain and estimates P anew.
 The signed gaps show the direction: customers who differ make a pooled chain lose too many of them late.
 """
 

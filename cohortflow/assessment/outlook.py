@@ -40,6 +40,11 @@ class Setting:
         return fit(tally, model=model, **{**(self.options or {}).get(model, {}), **more})
 
 
+def known_method(joiners: str) -> str:
+    """The method itself; for "planned" the same periods of last year, since past plans are not known."""
+    return "last_year" if joiners == "planned" else joiners
+
+
 def coming(tally: Tally, setting: Setting) -> Joiners | None:
     """Joiners by the setting's method, "constant" where the history is too short; None for bare counts."""
     if "starts" not in tally.meta.tables or setting.joiners == "none":

@@ -43,8 +43,7 @@ class PastForecast:
     ) -> PastForecast:
         """Refit and project from the last period of `past`.
 
-        Joiners are drawn apart from the customers of the origin, under the same draws of the rates, and
-        added.
+        Joiners are drawn apart from the customers of the origin, with the same draws of rates, and added.
         """
         fitted = setting.fit(past, model)
         shaken = luck.draws(fitted, setting, rng)
@@ -60,12 +59,9 @@ class PastForecast:
 
 
 def slimmed(tally: Tally, *, segments: bool) -> Tally:
-    """The tally with what refitting needs: coarser buckets, fewer tables, and segments only where they are
-    used.
+    """The tally with what refitting needs: coarser buckets, fewer tables, segments only where used.
 
-    The covariance by customer is right for any number of buckets, so rates and bands stay what they were up
-    to
-    the draws.
+    The covariance by customer is right for any number of buckets, so rates stay, and bands up to the draws.
     """
     kept = {name: tally.tables[name] for name in USED if name in tally.meta.tables}
     meta = replace(tally.meta, tables=tuple(kept))

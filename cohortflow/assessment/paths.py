@@ -20,8 +20,7 @@ class Paths:
     """Runs of states, one entry a run, in order of customer and time; gaps are left out.
 
     customer : (E,) 0 .. customers-1;  state, start, length : (E,) state, first period, periods
-    stay : (E,) number of the stay; a new one begins with the path, after an exit, after a gap and after a
-        move
+    stay : (E,) number of the stay; a new one begins with the path, after an exit, a gap, or a move
         declared impossible (which was set aside)
     segment : (C,) segment code of each customer;  exits : (K,) bool;  last : last period of the window
     """

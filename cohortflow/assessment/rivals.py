@@ -5,14 +5,12 @@ constant_churn  one churn rate for all: r_h = r_{h-1} (1 - c) + joiners, c = exi
                 split over the states as at the origin
 last_year       the base as it was in the same period a year before; of the customers of now, the share is
                 still live that was of those a year before
-cohort_curve    every cohort keeps the share that earlier cohorts kept at the same age; customers whose
-joining
+cohort_curve    every cohort keeps the share that earlier cohorts kept at the same age; customers whose joining
                 was not seen keep what their like kept, age unknown
 
 Joiners of the second and fourth: as many as in the same period a year before, else the mean of what was seen
-since. Each rival's band comes from how wrong it was at earlier origins: forecast +- t x root mean square
-error
-of its h-step forecasts that had come true by the origin.
+since. Each rival's band comes from how wrong it was at earlier origins: forecast +- t x root mean square error of
+its h-step forecasts that had come true by the origin.
 """
 
 from __future__ import annotations
@@ -121,8 +119,7 @@ def _ages(tally: Tally) -> Array:
     return out
 
 
-# ---- one forecast each: (H+1, K) base, (H+1,) live customers of the origin; NaN where it has nothing to
-# say ----
+# ---- one forecast each: (H+1, K) base, (H+1,) live customers of the origin; NaN: nothing to say ----
 Forecast = tuple[Array, Array]
 
 
@@ -197,8 +194,7 @@ def _aged(counts: Array, keep: Array) -> Array:
 
 
 def _retention_by_age(known: Array) -> Array:
-    """(A,) live at age a + 1 over live at age a, one period later, over all periods; older ages lend to
-    thin ones.
+    """(A,) live at age a + 1 over live at age a, one period later, over all periods; older ages help thin ones.
 
     >>> _retention_by_age(np.array([[100.0, 0, 0], [0, 60, 0], [0, 0, 45]])).tolist()
     [0.6, 0.75, 0.75]

@@ -8,8 +8,8 @@
 
 All are losses: smaller is better. Each is an expectation that honest forecasting minimises ("proper").
 Sources: Gneiting & Raftery (2007) JASA 102, 359; Hyndman & Koehler (2006) Int. J. Forecasting 22, 679;
-Diebold & Mariano (1995) J. Bus. Econ. Stat. 13, 253; Harvey, Leybourne & Newbold (1997) Int. J. Forecasting
-13, 281.
+Diebold & Mariano (1995) J. Bus. Econ. Stat. 13, 253; Harvey, Leybourne & Newbold (1997)
+Int. J. Forecasting 13, 281.
 """
 
 from __future__ import annotations
@@ -160,8 +160,7 @@ def naive_scale(history: ArrayLike, *, season: int = 1, power: int = 1) -> float
 
 
 def mase(forecast: ArrayLike, actual: ArrayLike, history: ArrayLike, *, season: int = 1) -> float:
-    """Mean |error| over the naive forecast's in the history: below 1 is better than it. NaN for a constant
-    history.
+    """Mean |error| over the naive forecast's in the history: below 1 is better than it. NaN if that is 0.
 
     >>> round(mase([15, 16, 17], [18, 17, 19], [10, 12, 11, 13, 15, 14, 16]), 9)
     1.2
@@ -207,8 +206,7 @@ class Coverage:
 def coverage(inside: ArrayLike, *, horizon: int = 1) -> Coverage:
     """Coverage of `inside` (one flag an origin); origins closer than the horizon share their luck.
 
-    effective origins = origins / horizon (at least 1): the Wilson interval is as wide as that few would
-    make it.
+    effective origins = origins / horizon (at least 1): the Wilson interval is as wide as so few make it.
 
     >>> found = coverage([True] * 9 + [False] * 3, horizon=3)
     >>> found.share, found.effective, round(found.low, 3), round(found.high, 3)  # Wilson at 3 of 4

@@ -65,8 +65,7 @@ def validated(scores: pd.DataFrame, level: float) -> pd.DataFrame:
     """model, quantity, periods, reason for every model and quantity; see the module text.
 
     reason : what stopped it at the next horizon: too_few_origins | coverage | not_better_than_last_mix; ""
-        when
-    every horizon that was tried is borne out
+    when every horizon that was tried is borne out
     """
     rows = []
     for (model, quantity), group in scores.groupby(["model", "quantity"], sort=False):

