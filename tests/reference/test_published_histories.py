@@ -339,3 +339,43 @@ def test_receivables_from_a_file_to_stdout(tmp_path, capsys):
         ("overdue", "bad"): 0.1,
     }.items():
         assert printed[move] == pytest.approx(published, abs=1e-15)
+
+
+RAIN = """
+[study]
+period = "day"
+as_of = "1990-12-31"
+level = 0.95
+[input]
+layout = "counts"
+files = ["moves.csv"]
+time = "day"
+from = "today"
+to = "tomorrow"
+n = "days"
+[[state]]
+name = "none"
+[[state]]
+name = "light"
+[[state]]
+name = "heavy"
+"""
+
+
+def test_alofi_rain_from_a_study_file_and_a_table_of_counts(tmp_path, capsys):
+    """The Alofi rates and stationary shares, see above, by `fit` and `project --out`."""
+    names = ["none", "light", "heavy"]
+    counts = [[362, 126, 60], [136, 90, 68], [50, 79, 124]]
+    moves = [("1990-01-01", names[i], names[j], counts[i][j]) for i in range(3) for j in range(3)]
+    written(tmp_path / "moves.csv", pd.DataFrame(moves, columns=["day", "today", "tomorrow", "days"]))
+    study = tmp_path / "rain.toml"
+    study.write_text(RAIN)
+    command("fit", study, "--format", "csv")
+    printed = pd.read_csv(io.StringIO(capsys.readouterr().out)).set_index(["from", "to"])["probability"]
+    assert printed.loc["light"][names].tolist() == pytest.approx(
+        [0.4625850, 0.3061224, 0.2312925], abs=5.001e-8
+    )
+    command("project", study, "--out", tmp_path / "out")
+    long_run = pd.read_csv(tmp_path / "out" / "tables" / "long_run.csv")
+    settled = long_run[long_run["measure"] == "stationary_share"].set_index("state")["value"]
+    assert settled[names].tolist() == pytest.approx([0.5008871, 0.2693656, 0.2297473], abs=5.001e-8)
