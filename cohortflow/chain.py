@@ -75,7 +75,14 @@ class Schedule(Record):
     """Weighted components over the declared states: the one form that every model takes.
 
     `unknown` names declared states whose row is not identified (no departures seen); anything that can reach
-    one of them is NaN with that reason.
+    one of them is NaN with that reason. `first` is the ordinal of the period in which step 0 begins, where the
+    matrices belong to calendar periods. CallError when the components' laws do not add up to 1.
+
+    >>> states = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> summer, winter = np.eye(3), [[0.0, 0.8, 0.2], [0.0, 0.9, 0.1], [0.0, 0.0, 1.0]]
+    >>> part = Component([summer, winter], [0, 1, 2], np.eye(3), np.eye(3), tail="cycle")
+    >>> Schedule(states, (part,))
+    <schedule of 1 component(s) per month; all: 2 x 3 states (cycle)>
     """
 
     states: States
@@ -248,6 +255,12 @@ class Draws(Record):
     matrices : one (D, L, m, m) array a component
     start, join : one (D or 1, K, m) array a component
     part : what scatters: "rates" (estimation) or "rates and common shocks" (future periods differ as well)
+
+    >>> states = States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> chain = Chain(states, [[0.0, 0.8, 0.2], [0.0, 0.9, 0.1], [0.0, 0.0, 1.0]])
+    >>> draws = Draws.of_matrices(chain.schedule, [np.stack([[chain.matrix], [np.eye(3)]])])
+    >>> draws.matrix(0, step=7)[:, 1, 1].tolist()
+    [0.9, 1.0]
     """
 
     schedule: Schedule

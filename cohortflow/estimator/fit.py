@@ -210,8 +210,8 @@ def fit(
     Parameters
     ----------
     tally : Tally
-    model : plain | recent | seasonal | tenure | time_in_state | segment | second_order | mover_stayer |
-    mixture window : use only the latest `window` periods of moves
+    model : plain | recent | seasonal | tenure | time_in_state | segment | second_order | mover_stayer | mixture
+    window : use only the latest `window` periods of moves
     half_life : a move's weight halves every so many periods
     exclude : labels or ordinals of periods whose moves are left out
     by : a segment column: also fit each of its values (`Fit.segments`)
@@ -219,6 +219,12 @@ def fit(
 
     Raises CallError for unknown models, options, segments; NotIdentified when nothing is left to count or the
     model needs counts that this source does not hold; InputError when an impossible move was counted.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> moves = [(1, "fresh", "steady", 8), (1, "fresh", "left", 2), (2, "steady", "steady", 9), (2, "steady", "left", 1)]
+    >>> fit(cf.read_counts(moves, states), model="plain").matrix.loc["fresh"].tolist()
+    [0.0, 0.8, 0.2]
     """
     if model not in MODELS:
         raise CallError(f'Unknown model "{model}"{nearest(model, MODELS)}. Models: {listed(MODELS)}.')

@@ -105,7 +105,13 @@ def files_of(content: Content) -> Mapping[str, str]:
 
 
 def write_report(run: Any, path: str | Path, *, segment: str = ALL, force: bool = False) -> Path:
-    """Write the page of a run to `path`. OutputError when the file is there already, unless `force`."""
+    """Write the page of a run to `path`. OutputError when the file is there already, unless `force`.
+
+    >>> import cohortflow as cf
+    >>> done = cf.run("veg_box/veg_box.toml")  # doctest: +SKIP
+    >>> cf.write_report(done, "report.html")  # doctest: +SKIP
+    PosixPath('report.html')
+    """
     target = Path(path)
     if target.exists() and not force:
         raise OutputError(
