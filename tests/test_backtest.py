@@ -9,8 +9,10 @@ from cohortflow.assessment.past import slimmed
 from cohortflow.assessment.scores import interval_score
 from cohortflow.errors import CallError, NotIdentified
 from cohortflow.estimator import fit
+from cohortflow.states import States
 from tests.adequacy_cases import STATES, full_tally, monthly, simulate, tally_of
 from tests.bench.adequacy_sizes import P
+from tests.bench.worlds import panel_tally
 
 
 @pytest.fixture(scope="module")
@@ -161,3 +163,21 @@ def test_headline_and_settings(found):
     assert found.headline() == "backtest of plain, recent: 10 origins x 3 periods, 90% bands"
     about = found.about()
     assert (about["draws"], about["origins"], about["joiners"]) == (200, 10, "last_year")
+
+
+def test_a_model_by_segment_finds_its_segments():
+    rng = np.random.default_rng(3)
+    group = rng.integers(0, 2, 400)
+    law = np.array([[[0.9, 0.1], [0, 1]], [[0.98, 0.02], [0, 1]]])[group]
+    grid = simulate(law, np.zeros(400, dtype=int), 16, rng)
+    tally = panel_tally(grid, States(["here", "gone"], exits=["gone"]), segment=group)
+    found = backtest(
+        tally,
+        models=["plain", "segment"],
+        horizon=2,
+        origins=3,
+        draws=50,
+        options={"segment": {"by": "group"}},
+    )
+    assert found.notes.empty
+    assert {"plain", "segment"} <= set(found.to_frame()["model"])

@@ -103,6 +103,7 @@ class Backtest(Record):
             "level": self.level,
             "draws": self.draws,
             "joiners": self.joiners,
+            "validated": self.validated.to_dict(orient="records"),
             "notes": self.notes.to_dict(orient="records"),
         }
 
@@ -154,7 +155,7 @@ def backtest(
     if "starts" not in tally.meta.tables:
         book.notes.append(("", "", "joiners_unknown"))
     seed = int(np.random.default_rng(rng).integers(2**62))
-    slim = slimmed(tally, segments="segment" in models)
+    slim = slimmed(tally, segments=any("by" in setting.of_model(m) for m in models))
     for origin in at:
         book.write(slim, seen, origin, models, setting, weights, seed)
     return Backtest(

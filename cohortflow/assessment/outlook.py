@@ -35,9 +35,13 @@ class Setting:
     totals: Mapping[str, Sequence[str]] | None = None
     options: Mapping[str, Mapping[str, Any]] | None = None
 
+    def of_model(self, model: str) -> Mapping[str, Any]:
+        """Options of one model."""
+        return (self.options or {}).get(model, {})
+
     def fit(self, tally: Tally, model: str, **more: Any) -> Fit:
         """The model fitted to the tally with its options."""
-        return fit(tally, model=model, **{**(self.options or {}).get(model, {}), **more})
+        return fit(tally, model=model, **{**self.of_model(model), **more})
 
 
 def known_method(joiners: str) -> str:
