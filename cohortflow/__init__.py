@@ -1,6 +1,7 @@
 """Customer lifecycle and churn projection: from raw event logs to a forecast that can be defended.
 
-The public names in reading order; the parts behind them load on first use, so `import cohortflow` is light.
+The public names in reading order, each with the module that defines it: they load on first use, so that
+`import cohortflow` is light.
 """
 
 from __future__ import annotations
@@ -14,33 +15,33 @@ _HOME = {
     "CohortflowError": "errors",
     "States": "states",
     "Calendar": "periods",
-    "read_study": "study",
-    "read": "history",
-    "read_events": "history",
-    "read_history": "history",
-    "read_counts": "history",
-    "count": "history",
+    "read_study": "study.reading",
+    "read": "history.door",
+    "read_events": "history.door",
+    "read_history": "history.door",
+    "read_counts": "history.door",
+    "count": "history.door",
     "Tally": "tally",
     "Chain": "chain",
     "Schedule": "chain",
     "Draws": "chain",
-    "fit": "estimator",
-    "project": "projector",
-    "long_run": "projector",
-    "time_to_exit": "projector",
-    "retention": "projector",
-    "value": "projector",
-    "adequacy": "assessment",
-    "backtest": "assessment",
-    "Change": "whatif",
-    "Scenario": "whatif",
-    "what_if": "whatif",
-    "sensitivity": "whatif",
-    "required_change": "whatif",
-    "compare_arms": "whatif",
-    "trial_size": "whatif",
-    "run": "runs",
-    "write_report": "report",
+    "fit": "estimator.fit",
+    "project": "projector.project",
+    "long_run": "projector.longrun",
+    "time_to_exit": "projector.exits",
+    "retention": "projector.retention",
+    "value": "projector.value",
+    "adequacy": "assessment.adequacy",
+    "backtest": "assessment.backtest",
+    "Change": "whatif.change",
+    "Scenario": "whatif.scenario",
+    "what_if": "whatif.what_if",
+    "sensitivity": "whatif.levers",
+    "required_change": "whatif.required",
+    "compare_arms": "whatif.arms",
+    "trial_size": "whatif.trial_size",
+    "run": "runs.folder",
+    "write_report": "report.of_run",
 }
 __all__ = ["__version__", *_HOME]
 
