@@ -23,7 +23,7 @@ from cohortflow.estimator.patterns import Patterns
 Array = NDArray[np.float64]
 
 TINY = 1e-300
-TOLERANCE = 1e-10
+TOLERANCE = 1e-4  # of log-likelihood, far below what one customer weighs
 MOST_ROUNDS = 400
 
 
@@ -81,7 +81,7 @@ def run(
     rounds: int = MOST_ROUNDS,
     tolerance: float = TOLERANCE,
 ) -> Types:
-    """From a start until the penalised likelihood changes by less than `tolerance` of itself, or `rounds`."""
+    """From a start until the penalised log-likelihood gains less than `tolerance`, or `rounds`."""
     weight = _prior_weight(patterns, prior)
     now = _look(patterns, start, weight)
     for k in range(1, rounds + 1):
@@ -89,7 +89,7 @@ def run(
         two = _look(patterns, _step(patterns, one, weight), weight)
         far = _look(patterns, _stretched(now.types, one.types, two.types), weight)
         best = far if far.score > two.score else two
-        done = best.score - now.score <= tolerance * abs(best.score)
+        done = best.score - now.score <= max(tolerance, 1e-14 * abs(best.score))
         now = best if best.score >= now.score else now
         if done:
             return _finished(now, k, True)

@@ -41,7 +41,7 @@ GAIN_ERRORS = 2.0
 MOST_TYPES = 3
 STARTS = 10
 LONG_HISTORIES = 0.1  # share of customers with 2G - 1 moves below which G types are not identified
-FINISHED = 2  # best starts that are run to the end
+FINISHED = 2  # best starts that are run to the end on them; the best of these goes on to all customers
 SCREENED = 10_000  # customers on whom starts and numbers of types are tried
 SCREEN_ROUNDS = 12
 SEED = 20_260_930
@@ -72,7 +72,7 @@ def mixture(
 def mover_stayer(tally: Tally, window: Window, rates: RowCounts) -> Built:
     """Movers and stayers; NotIdentified without paths of customers."""
     patterns = patterns_of(tally, window)
-    found = run(patterns, stayer_start(patterns), prior=0.0, rounds=2000, tolerance=1e-14)
+    found = run(patterns, stayer_start(patterns), prior=0.0, rounds=2000, tolerance=1e-10)
     return _built(tally, rates, patterns, found, 0.0, {"customers": int(patterns.n.sum())})
 
 
@@ -86,8 +86,8 @@ def best_types(patterns: Patterns, count: int, starts: int, rng: np.random.Gener
         for _ in range(starts)
     ]
     tried.sort(key=lambda t: -t.score)
-    finished = [run(patterns, start, prior=PRIOR) for start in tried[:FINISHED]]
-    return max(finished, key=lambda t: t.score)
+    finished = [run(screen, start, prior=PRIOR) for start in tried[:FINISHED]]
+    return run(patterns, max(finished, key=lambda t: t.score), prior=PRIOR)
 
 
 def held_out_gains(

@@ -94,7 +94,7 @@ def test_closed_form_and_em_agree_on_three_states():
     rest = (N - np.diag(T * S)).ravel() / (n0 - S).sum()
     patterns = Patterns(cells, np.array([*stay, rest, rest, rest]), np.r_[S, n0 - S], np.r_[0:3, 0:3],
                         np.full(6, -1), 3)  # fmt: skip
-    found = run(patterns, stayer_start(patterns), prior=0.0, rounds=2000, tolerance=1e-15)
+    found = run(patterns, stayer_start(patterns), prior=0.0, rounds=2000, tolerance=1e-11)
     assert found.loglik == pytest.approx(-3450.7232160, abs=2e-7)
     assert found.share[:3, 1] == pytest.approx(s, abs=1e-6) and np.allclose(found.P[0], M, atol=1e-6)
 
