@@ -110,20 +110,89 @@ def cells_own_rows(task):
     return (low <= P[:4]) & (P[:4] <= high), rows.N[:4]
 
 
+def cells_table(replications, cores=None, sizes=(50, 200, 1000)):
+    """Bars 1 and 2: coverage of cells; least and mean of each method, world and size."""
+    rows = []
+    for customers in sizes:
+        for method, inside in cells_markov(customers, replications, seed=customers).items():
+            rows.append(("Markov", customers, method, inside.min(), inside.mean()))
+    limit = pooled_limit()
+    for customers in (200, 1000):
+        tasks = [(customers, seed, limit) for seed in range(replications)]
+        found = spread_over_cores(cells_own_rows, tasks, cores)
+        usual = np.mean([counts for _, counts in found], axis=0) >= 5
+        inside = np.mean([hit for hit, _ in found], axis=0)[usual]
+        rows.append(("own rows", customers, "wilson, effective n", inside.min(), inside.mean()))
+    return pd.DataFrame(rows, columns=["world", "customers", "method", "least", "mean"])
+
+
 # ---- bars 3 and 4: derived quantities ----
-def derived(fitted, level=0.95, covariance=None):
-    """name -> (value, low, high) of the 12-period active share, the mean time to exit, the survivors' mix."""
-    kind = covariance or fitted.best_covariance
-    share = retention(fitted, start={"N": 1}, periods=12, level=level, covariance=kind).to_frame().iloc[-1]
+QUANTITIES = ("active share at 12", "mean time to exit", "survivors in R")
+
+
+def truths(P):
+    """The three quantities of a matrix, by plain linear algebra."""
+    Q = P[:4, :4]
+    values, vectors = np.linalg.eig(Q[1:, 1:].T)
+    mix = np.abs(vectors[:, values.real.argmax()].real)
+    share = np.linalg.matrix_power(P, 12)[0, :4].sum()
+    return np.array([share, np.linalg.inv(np.eye(4) - Q)[0].sum(), mix[0] / mix.sum()])
+
+
+def derived(fitted, kind, level=0.95):
+    """(3, 2) limits of the quantities through the public calls; NaN where one does not exist."""
+    curve = retention(fitted, start={"N": 1}, periods=12, level=level, covariance=kind)
     exits = time_to_exit(fitted, level=level, covariance=kind).to_frame()
-    life = exits[(exits["measure"] == "mean_time") & (exits["from"] == "N")].iloc[0]
     settled_mix = long_run(fitted, level=level, covariance=kind).to_frame()
-    mix = settled_mix[(settled_mix["measure"] == "remaining_mix") & (settled_mix["state"] == "R")].iloc[0]
-    return {
-        "active share": tuple(share[["model", "low", "high"]]) if "low" in share else None,
-        "mean time": tuple(life[["value", "low", "high"]]),
-        "survivors in R": tuple(mix[["value", "low", "high"]]),
-    }
+    life = exits[(exits["measure"] == "mean_time") & (exits["from"] == "N")]
+    mix = settled_mix[(settled_mix["measure"] == "remaining_mix") & (settled_mix["state"] == "R")]
+    pairs = [(curve.low[-1], curve.high[-1]), *(tuple(t[["low", "high"]].iloc[0]) for t in (life, mix))]
+    return np.array(pairs, dtype=float)
+
+
+def derived_replication(task):
+    """(3,) inside or not, NaN where no limits exist."""
+    world, customers, seed, truth = task
+    rng = np.random.default_rng([seed, customers])
+    start = np.zeros(customers, int)
+    if world == "shocks":
+        f = 0.3 * rng.standard_normal(12)
+        hit = STATES.mask(["D", "C"])
+        rates = shocked_rates(CHAIN, hit, f, np.zeros((12, 5, 5)))
+        panel = simulate(rates, start, 13, rng, entry=rng.integers(0, 12, customers))
+    else:
+        panel = simulate(own_rows(customers, rng) if world == "own rows" else CHAIN, start, 13, rng)
+    fitted = fit(panel_tally(panel, STATES, full=False))
+    limits = derived(fitted, "two_way" if world == "shocks" else "customer")
+    inside = (limits[:, 0] <= truth) & (truth <= limits[:, 1])
+    return np.where(np.isnan(limits).any(axis=1), np.nan, inside)
+
+
+def shocked_limit(draws=400_000, seed=7):
+    """The rates that pooling over many months with shocks tends to: their mean."""
+    f = 0.3 * np.random.default_rng(seed).standard_normal(draws)
+    hit = STATES.mask(["D", "C"])
+    parts = [
+        shocked_rates(CHAIN, hit, part, np.zeros((len(part), 5, 5))).mean(axis=0) for part in np.split(f, 20)
+    ]
+    return np.mean(parts, axis=0)
+
+
+def derived_table(replications, cores=None):
+    """Bars 3 and 4: coverage of derived quantities by world and size."""
+    limits = {"Markov": CHAIN, "own rows": pooled_limit(), "shocks": shocked_limit()}
+    rows = []
+    for world, sizes in (
+        ("Markov", (50, 200, 1000)),
+        ("own rows", (50, 200, 1000)),
+        ("shocks", (200, 1000, 5000)),
+    ):
+        for customers in sizes:
+            tasks = [(world, customers, seed, truths(limits[world])) for seed in range(replications)]
+            found = np.array(spread_over_cores(derived_replication, tasks, cores), dtype=float)
+            rows.append((world, customers, *np.nanmean(found, axis=0), float(np.isnan(found).mean())))
+            print(*rows[-1], flush=True)
+    return pd.DataFrame(rows, columns=["world", "customers", *QUANTITIES, "without limits"])
 
 
 # ---- bar 6: predictive bands of the live base ----
@@ -199,10 +268,16 @@ def spread_over_cores(job, tasks, cores=None):
 
 def main():
     parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--bars", nargs="*", type=int, default=[1, 2, 3, 4, 6])
+    parser.add_argument(
+        "--bars", nargs="*", type=int, default=[1, 3, 6], help="1 also makes 2, 3 also makes 4"
+    )
     parser.add_argument("--replications", type=int, default=400)
     parser.add_argument("--cores", type=int)
     options = parser.parse_args()
+    if {1, 2} & set(options.bars):
+        print(cells_table(max(options.replications, 1000), options.cores).round(3).to_string(index=False))
+    if {3, 4} & set(options.bars):
+        print(derived_table(options.replications, options.cores).round(3).to_string(index=False))
     if 6 in options.bars:
         bands(options.replications, cores=options.cores)
 

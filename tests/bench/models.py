@@ -23,13 +23,31 @@ from cohortflow.tally import Tally
 from tests.bench.coverage import spread_over_cores
 from tests.bench.worlds import CHAIN, STATES, panel_tally, simulate
 
-EIGHT = States(["left", "lapsed", "paused", "new", "weekly", "fortnightly", "monthly", "quiet"],
-               exits=["left", "lapsed"], entries=["new"], away=["paused"])  # fmt: skip
+EIGHT = States(
+    ["left", "lapsed", "paused", "new", "weekly", "fortnightly", "monthly", "quiet"],
+    exits=["left", "lapsed"],
+    entries=["new"],
+    away=["paused"],
+)
 
-STICKY = np.array([[0, .60, .05, .30, .05], [0, .80, .08, .11, .01], [0, .08, .90, .02, .00],
-                   [0, .20, .02, .70, .08], [0, 0, 0, 0, 1]])  # fmt: skip
-FRAGILE = np.array([[0, .40, .05, .30, .25], [0, .60, .12, .18, .10], [0, .15, .70, .10, .05],
-                    [0, .10, .00, .55, .35], [0, 0, 0, 0, 1]])  # fmt: skip
+STICKY = np.array(
+    [
+        [0, 0.60, 0.05, 0.30, 0.05],
+        [0, 0.80, 0.08, 0.11, 0.01],
+        [0, 0.08, 0.90, 0.02, 0.00],
+        [0, 0.20, 0.02, 0.70, 0.08],
+        [0, 0, 0, 0, 1],
+    ]
+)
+FRAGILE = np.array(
+    [
+        [0, 0.40, 0.05, 0.30, 0.25],
+        [0, 0.60, 0.12, 0.18, 0.10],
+        [0, 0.15, 0.70, 0.10, 0.05],
+        [0, 0.10, 0.00, 0.55, 0.35],
+        [0, 0, 0, 0, 1],
+    ]
+)
 
 
 def big_tally(customers=1_000_000, block=100_000, periods=37, seed=1):
@@ -47,8 +65,12 @@ def big_tally(customers=1_000_000, block=100_000, periods=37, seed=1):
         entry = np.where(rng.random(block) < 0.3, 0, rng.integers(0, periods - 1, block))
         half = block // 2
         new = np.full(half, 3)
-        panel = np.vstack([simulate(P, new, periods, rng, entry=entry[i * half : (i + 1) * half])
-                           for i, P in enumerate(chains)])  # fmt: skip
+        panel = np.vstack(
+            [
+                simulate(P, new, periods, rng, entry=entry[i * half : (i + 1) * half])
+                for i, P in enumerate(chains)
+            ]
+        )
         part = panel_tally(
             panel, EIGHT, buckets=128, segment=rng.integers(0, 3, block), calendar="month", first=600
         )
@@ -121,8 +143,10 @@ def generator_race(rows=20_000, seed=1):
     numerical = minimize(loss, np.log(panel.crude(Q > 0)[cells]), method="BFGS")
     theirs = time.perf_counter() - clock
     gap = found.settings["log_likelihood"] + numerical.fun * rows
-    print(f"analytic {ours:.2f} s, numerical {theirs:.2f} s, ratio {theirs / ours:.1f}; log-likelihood {gap:+.2e}; "
-          f"largest error {np.abs(found.Q - Q).max():.3f}; converged {found.settings['converged']}")  # fmt: skip
+    print(
+        f"analytic {ours:.2f} s, numerical {theirs:.2f} s, ratio {theirs / ours:.1f}; log-likelihood {gap:+.2e}; "
+        f"largest error {np.abs(found.Q - Q).max():.3f}; converged {found.settings['converged']}"
+    )
     return ours, theirs, gap
 
 
@@ -150,9 +174,12 @@ def types(replications=50, customers=5000, cores=None):
         truth, plain, mixed, number, low, high = found.T
         errors = [np.abs(v - truth).mean() for v in (plain, mixed)]
         inside = ((low <= truth) & (truth <= high)).mean()
-        print(f"{'two types' if two else 'one type'}: truth {truth[0]:.4f}, mean error plain {errors[0]:.4f}, "
-              f"mixture {errors[1]:.4f}, ratio {errors[1] / errors[0]:.2f}; types chosen "
-              f"{np.bincount(number.astype(int))[1:].tolist()}; limits hold the truth {inside:.2f}", flush=True)  # fmt: skip
+        print(
+            f"{'two types' if two else 'one type'}: truth {truth[0]:.4f}, mean error plain {errors[0]:.4f}, "
+            f"mixture {errors[1]:.4f}, ratio {errors[1] / errors[0]:.2f}; types chosen "
+            f"{np.bincount(number.astype(int))[1:].tolist()}; limits hold the truth {inside:.2f}",
+            flush=True,
+        )
 
 
 def main():
