@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from cohortflow.whatif import Change, Scenario, what_if
-from cohortflow.whatif.compare import Pair, alone, paired, payback
+from cohortflow.whatif.compare import Pair, limits, payback
 from tests.projector_cases import CHAIN
 from tests.whatif_cases import JOINERS, MONEY, START, draws_of_chain
 
@@ -56,13 +56,16 @@ def test_record_manners():
 def test_payback_counts_from_the_scenarios_start_and_must_last():
     # sums from step 1: -3, -1, +2 -> the third period; and one that falls back below 0 has not paid
     net = np.array([[0, -3.0, 2, 3], [0, 1, -2.0, 0.5], [0, 0, 0, 0], [0, 2, -1, -1]])
-    assert payback(net, 1).tolist() == [3, np.inf, 1, 1]
+    assert payback(net.T, 1).tolist() == [3, np.inf, 1, 1]
 
 
 def test_pairs():
-    base, changed = np.array([1.0, np.nan]), np.array([3.0, 4.0])
-    drawn = (np.zeros((5, 2)), np.arange(10.0).reshape(5, 2))
-    pair = paired(base, changed, drawn, 0.5)
-    assert pair.low[0] == 2 and pair.high[0] == 6 and np.isnan(pair.low[1])
-    assert alone(2.0, np.array([1.0, 2.0, np.inf]), 0.5).high == np.inf
-    assert Pair(*(np.array([v]) for v in (1.0, 2.0, 0.5, 1.5))).only().difference == 1.0
+    drawn = np.random.default_rng(2).normal(size=(3, 4, 200))
+    assert limits(drawn, 0.9) == pytest.approx(np.quantile(drawn, [0.05, 0.95], axis=-1), abs=1e-12)
+    drawn[1, 2, 7] = np.nan
+    assert np.isnan(limits(drawn, 0.9)).sum() == 2
+    assert limits(np.array([[4.0]]), 0.9).ravel().tolist() == [4, 4]
+    assert limits(np.array([[1.0, 2.0, np.inf]]), 0.5).ravel().tolist() == [1.5, np.inf]
+    pair = Pair(np.array([1.0, np.nan]), np.array([3.0, 4.0]), lambda: np.arange(10.0).reshape(2, 5), 0.5)
+    assert pair.low[0] == 1 and pair.high[0] == 3 and np.isnan(pair.low[1])
+    assert Pair(1.0, 2.0, None, 0.5).difference == 1.0 and np.isnan(Pair(1.0, 2.0, None, 0.5).low)

@@ -9,7 +9,8 @@ from cohortflow.projector.money import money_terms
 from cohortflow.states import States
 from cohortflow.whatif.change import Change
 from cohortflow.whatif.course import Course
-from cohortflow.whatif.settle import settle
+from cohortflow.whatif.paths import steps_of
+from cohortflow.whatif.settle import settle as settle_steps
 from tests.projector_cases import CHAIN, STATES, P, dirichlet_draws, seasonal
 from tests.whatif_cases import MONEY, OTHER, amounts
 
@@ -18,6 +19,12 @@ OPEN, JOIN = np.array([40.0, 200, 30, 0, 0]), np.array([[25.0, 5, 0, 0, 0]])
 
 def nothing(step):
     return None
+
+
+def settle(course, start, inflow, prices, *, draws=None):
+    found = settle_steps(steps_of(course, prices, draws), start, inflow[0], draws.size if draws else 1)
+    assert found.counts.shape[1] == (draws.size if draws else 1)
+    return type(found)(found.counts.T, found.paid, found.treated, found.reason)
 
 
 def test_settled_base_is_that_of_the_markov_room():

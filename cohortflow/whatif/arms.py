@@ -16,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, ClassVar
 
 import numpy as np
@@ -36,7 +37,7 @@ from cohortflow.projector.project import as_joiners
 from cohortflow.record import Record
 from cohortflow.tally import Tally
 from cohortflow.whatif.arm_rows import ArmRows, arm_rows, choose_arms, holm, move_differences
-from cohortflow.whatif.compare import paired
+from cohortflow.whatif.compare import Pair
 from cohortflow.whatif.course import Course
 from cohortflow.whatif.money import Money, as_money
 from cohortflow.whatif.paths import Paths, walk_paths
@@ -287,23 +288,21 @@ class _Asked:
         for which, matrix in zip((self.rows.arms[0], arm), self._pair(arm), strict=True):
             schedule = self._schedule(matrix)
             draws = Draws.of_matrices(schedule, [filled(self.rows.matrices(drawn, which))[:, None]])
-            inflow = as_joiners(joiners, schedule, self.tally.meta.last, self.horizon).expected()[None]
+            inflow = as_joiners(joiners, schedule, self.tally.meta.last, self.horizon).expected()[..., None]
             course = Course.of(schedule, (), None, 0)
             for kept, source in ((paths, None), (scattered, draws)):
                 kept.append(walk_paths(course, counts, inflow, lambda step: money.terms, draws=source))
         figures = {"all_live": states.live_mask.astype(float)}
         figures |= {name: np.eye(len(states))[states.index(name)] for name in states.exits}
-        pairs = {
-            name: paired(
-                paths[0].counts[0, 1:] @ w, paths[1].counts[0, 1:] @ w,
-                (scattered[0].counts[:, 1:] @ w, scattered[1].counts[:, 1:] @ w), self.level,
-            )
-            for name, w in figures.items()
-        }  # fmt: skip
+        sides = {name: ([w @ p.counts[1:] for p in paths], [w @ p.counts[1:] for p in scattered])
+                 for name, w in figures.items()}  # fmt: skip
         if money.terms is not None:
-            factor = money.terms.factor ** (np.arange(self.horizon) + money.terms.lag)
-            two, many = ([(factor * p.paid) for p in kept] for kept in (paths, scattered))
-            pairs["value"] = paired(two[0][0], two[1][0], (many[0], many[1]), self.level)
+            factor = np.power(money.terms.factor, np.arange(self.horizon) + money.terms.lag)[:, None]
+            sides["value"] = ([factor * p.paid for p in paths], [factor * p.paid for p in scattered])
+        pairs = {
+            name: Pair(two[0][:, 0], two[1][:, 0], partial(np.subtract, many[1], many[0]), self.level)
+            for name, (two, many) in sides.items()
+        }
         frames = [
             pd.DataFrame({
                 "measure": "rollout", "arm": arm, "against": self.rows.arms[0], "quantity": name,

@@ -16,8 +16,9 @@ expectations; the luck of single customers is in the bands of `project`.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any, ClassVar
 
 import numpy as np
@@ -25,8 +26,6 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from cohortflow.chain import Schedule
-from cohortflow.projector.bands import quantile_band
-from cohortflow.projector.delta import quantiles
 from cohortflow.projector.joiners import period_label
 from cohortflow.record import Record, frozen_mapping
 from cohortflow.whatif.scenario import Scenario
@@ -42,22 +41,38 @@ COLUMNS = [
 
 @dataclass(frozen=True, eq=False)
 class Pair:
-    """One quantity without and with the scenario, and the limits of the difference; arrays over periods or
-    numbers.
+    """One quantity without and with the scenario: arrays over periods, or numbers.
+
+    drawn : makes the differences of all draws (..., D); None without draws. Limits are made when asked for.
     """
 
     base: Any
     changed: Any
-    low: Any
-    high: Any
+    drawn: Callable[[], Array] | None
+    level: float
 
     @property
     def difference(self) -> Any:
         return self.changed - self.base
 
-    def only(self) -> Pair:
-        """A Pair of numbers out of one of arrays of length 1."""
-        return Pair(*(float(v[0]) for v in (self.base, self.changed, self.low, self.high)))
+    @property
+    def low(self) -> Any:
+        """Lower limit of the difference."""
+        return self._limits[0]
+
+    @property
+    def high(self) -> Any:
+        """Upper limit of the difference."""
+        return self._limits[1]
+
+    @cached_property
+    def _limits(self) -> tuple[Any, Any]:
+        known = ~np.isnan(self.difference)
+        found = np.full((2, *np.shape(self.base)), np.nan)
+        if self.drawn is not None:
+            found = np.where(known, limits(self.drawn(), self.level), np.nan)
+        low, high = found
+        return (float(low), float(high)) if low.ndim == 0 else (low, high)
 
 
 @dataclass(frozen=True, repr=False, eq=False)
@@ -102,7 +117,9 @@ class WhatIf(Record):
     def at_horizon(self, quantity: str) -> Pair:
         """One quantity in the last period."""
         pair = self.by_period[quantity]
-        return Pair(*(float(np.asarray(v)[-1]) for v in (pair.base, pair.changed, pair.low, pair.high)))
+        drawn = pair.drawn
+        last = None if drawn is None else lambda: drawn()[-1]
+        return Pair(float(pair.base[-1]), float(pair.changed[-1]), last, pair.level)
 
     def to_frame(self) -> pd.DataFrame:
         """The table `scenarios`: segment, scenario, period, quantity, base, with_change, difference, low,
@@ -154,32 +171,41 @@ def _rows(pair: Pair, labels: list[str], quantity: str) -> pd.DataFrame:
     )
 
 
-def paired(base: Array, changed: Array, drawn: tuple[Array, Array] | None, level: float) -> Pair:
-    """A Pair of (H,) arrays from the estimate and, if there are draws, (D, H) values without and with."""
-    if drawn is None:
-        nothing = np.full_like(base, np.nan)
-        return Pair(base, changed, nothing, nothing)
-    low, high = quantile_band(drawn[1] - drawn[0], level)
-    lost = np.isnan(base + changed)
-    return Pair(base, changed, np.where(lost, np.nan, low), np.where(lost, np.nan, high))
+def limits(drawn: Array, level: float) -> Array:
+    """(2, ...) quantiles over draws (last axis) around the median; NaN where any draw is.
+
+    Interpolated between draws, but not where one of them is infinite.
+
+    >>> limits(np.arange(11.0)[None], 0.8).ravel()
+    array([1., 9.])
+    """
+    last = drawn.shape[-1] - 1
+    places = [(1 - level) / 2 * last, (1 + level) / 2 * last]
+    below = [int(place) for place in places]
+    above = [min(place + 1, last) for place in below]
+    ordered = np.partition(drawn, sorted({*below, *above}), axis=-1)
+    found = [
+        _between(ordered[..., lo], ordered[..., hi], p - lo)
+        for p, lo, hi in zip(places, below, above, strict=True)
+    ]
+    return np.where(np.isnan(drawn).any(axis=-1), np.nan, found)
 
 
-def alone(value: float, drawn: Array | None, level: float) -> Pair:
-    """A figure that only the scenario has (payback, break-even cost): base 0, infinities kept."""
-    low, high = (np.nan, np.nan) if drawn is None else (v[0] for v in quantiles(drawn[:, None], level))
-    return Pair(0.0, value, float(low), float(high))
+def _between(low: Array, high: Array, share: float) -> Array:
+    finite = np.isfinite(low) & np.isfinite(high)
+    step = np.subtract(high, low, out=np.zeros_like(high), where=finite)
+    return np.where(finite, low + share * step, high if share > 0 else low)
 
 
 def payback(net: Array, first: int) -> Array:
-    """(D,) periods from step `first` until the summed net (D, H) is, and stays, not below 0; inf: not within
+    """(D,) periods from step `first` until the summed net (H, D) is, and stays, not below 0; inf: not within
     H.
 
-    >>> payback(np.array([[0.0, -5.0, 3.0, 3.0], [0.0, -5.0, 1.0, 1.0]]), 1)
+    >>> payback(np.array([[0.0, 0], [-5, -5], [3, 1], [3, 1]]), 1)
     array([ 3., inf])
     """
-    ahead = net[:, first:].cumsum(axis=1) >= -1e-9 * np.maximum(
-        np.abs(net).max(axis=1, keepdims=True), 1e-300
-    )
-    stays = np.flip(np.cumprod(np.flip(ahead, axis=1), axis=1), axis=1).astype(bool)
-    found = np.argmax(stays, axis=1) + 1.0
-    return np.where(stays.any(axis=1), found, np.inf)
+    summed = net[first:].cumsum(axis=0)
+    below = summed < -1e-9 * np.maximum(np.abs(net).max(axis=0), 1e-300)
+    late = len(below) - np.argmax(below[::-1], axis=0)  # periods up to the last one below 0
+    found = np.where(below.any(axis=0), late + 1.0, 1.0)
+    return np.where(found <= len(below), found, np.inf)

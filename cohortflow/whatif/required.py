@@ -225,7 +225,7 @@ def _net(model: Any, change: Change, costs: Mapping[str, Any], opened: Mapping[s
             for side, inflow in zip(at.sides, at.inflows(), strict=True)
         ]
         gain = paths[1].paid - paths[0].paid - at.costs(paths[1].treated)
-        return float((gain @ at.discount)[0])
+        return float((at.discount @ gain)[0])
 
     return figure
 

@@ -109,35 +109,40 @@ class Setting:
         return self.without, self.under
 
     def inflows(self, size: int | None = None, rng: np.random.Generator | None = None) -> tuple[Array, Array]:
-        """(D or 1, H, K) all who arrive, without and with the scenario: as expected, or `size` draws."""
+        """(H, K, D or 1) all who arrive, without and with the scenario: as expected, or `size` draws."""
         joined, back = (self._arrivals(kind, size, rng) for kind in ("joined", "returned"))
         new = joiners_under(self.scenario, joined, self.schedule.states, self.window)
-        return joined + back, new + back
+        return tuple(np.moveaxis(side + back, 0, -1) for side in (joined, new))  # type: ignore[return-value]
 
     def long_inflows(self) -> tuple[Array, Array]:
-        """(1, K) those who arrive a period in the long run: the average over the last full cycle."""
+        """(K,) those who arrive a period in the long run: the average over the last full cycle."""
         cycle = min(self.periods, self.schedule.calendar.cycle)
-        joined, back = (self.joiners.expected(k)[None, -cycle:] for k in ("joined", "returned"))
+        joined, back = (self.joiners.expected(k)[-cycle:] for k in ("joined", "returned"))
         kept = Window() if np.isinf(self.window.last) else Window(0, 0)
         new = joiners_under(self.scenario, joined, self.schedule.states, kept)
-        return (joined + back).mean(axis=1), (new + back).mean(axis=1)
+        return (joined + back).mean(axis=0), (new + back).mean(axis=0)
 
     def drawn_shift(self, size: int, rng: np.random.Generator) -> Array | None:
-        """(D, K) draws of the error of estimated amounts; None where amounts are given."""
+        """(K, D) draws of the error of estimated amounts; None where amounts are given."""
         terms = self.money.terms
         if terms is None or terms.error is None:
             return None
-        return rng.multivariate_normal(np.zeros(len(terms.error)), terms.error, size, method="eigh")
+        return rng.multivariate_normal(np.zeros(len(terms.error)), terms.error, size, method="eigh").T
 
     def costs(self, treated: Array) -> Array:
-        """(D, H) undiscounted costs, from the customers treated (D, H)."""
-        on = np.array([self.window.holds(h) for h in range(self.periods)])
+        """(H, D) undiscounted costs, from the customers treated (H, D)."""
+        on = np.array([self.window.holds(h) for h in range(self.periods)])[:, None]
         return self.scenario.cost_per_customer * treated + self.scenario.fixed_cost * on
+
+    def late_costs(self, treated: Array) -> Array:
+        """(D,) costs a period in the long run, from the customers treated (D,)."""
+        fixed = self.scenario.fixed_cost if np.isinf(self.window.last) else 0.0
+        return self.scenario.cost_per_customer * treated + fixed
 
     @property
     def fixed_costs(self) -> Array:
         """(H,) the part of the costs that nobody's treatment causes."""
-        return self.costs(np.zeros((1, self.periods)))[0]
+        return self.costs(np.zeros((self.periods, 1)))[:, 0]
 
     @property
     def discount(self) -> Array:
@@ -152,8 +157,9 @@ class Setting:
         return min([*own, *([] if own else [self.window.first])])
 
     def _arrivals(self, kind: str, size: int | None, rng: np.random.Generator | None) -> Array:
-        if size is None or rng is None or kind not in self.joiners.inflows:
-            return self.joiners.expected(kind)[None]
+        expected = self.joiners.expected(kind)
+        if size is None or rng is None or not expected.any():
+            return expected[None]
         return self.joiners.inflows[kind].draw(size, rng)
 
 

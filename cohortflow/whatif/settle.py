@@ -12,15 +12,14 @@ reason.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from cohortflow.chain import Draws
 from cohortflow.markov.structure import leads_to, reachability
-from cohortflow.whatif.course import Course
-from cohortflow.whatif.paths import Prices, Step, through
+from cohortflow.whatif.paths import Step, pay_of, through
 
 Array = NDArray[np.float64]
 
@@ -29,7 +28,7 @@ SQUARINGS = 60
 
 @dataclass(frozen=True, eq=False)
 class Settled:
-    """counts (D, K): customers by state, at exits those lost a period; paid, treated (D,) a period; reason:
+    """counts (K, D): customers by state, at exits those lost a period; paid, treated (D,) a period; reason:
     code.
     """
 
@@ -39,99 +38,91 @@ class Settled:
     reason: str = ""
 
 
-def settle(
-    course: Course,
-    start: Array,
-    inflow: Array,
-    prices: Prices,
-    *,
-    draws: Draws | None = None,
-    shift: Array | None = None,
-) -> Settled:
-    """Where it settles when `inflow` (D or 1, K) join in every period, from the opening counts (K,)."""
-    size = len(course.schedule.states)
-    wide = draws.size if draws is not None else 1
-    total = Settled(np.zeros((wide, size)), np.zeros(wide), np.zeros(wide))
-    for c in range(len(course.schedule.components)):
-        ring = _Ring(Step(course, c, prices, draws, shift))
-        reason = ring.endless(inflow.max(axis=0))
+def settle(steps: Sequence[Step], start: Array, inflow: Array, wide: int = 1) -> Settled:
+    """Where it settles when `inflow` (K,) join in every period, from the opening counts (K,); `wide`
+    draws.
+    """
+    size = len(start)
+    total = Settled(np.zeros((size, wide)), np.zeros(wide), np.zeros(wide))
+    for step_of in steps:
+        ring = _Ring(step_of, inflow)
+        reason = ring.endless()
         if reason:
             nothing = np.full(wide, np.nan)
-            return Settled(np.full((wide, size), np.nan), nothing, nothing, reason)
-        ring.add(total, ring.first(start, inflow), inflow)
+            return Settled(np.full((size, wide), np.nan), nothing, nothing, reason)
+        ring.add(total, ring.first(start))
     return total
 
 
 class _Ring:
-    """The matrices of one component that come round for ever."""
+    """The matrices of one component that come round for ever; arrays end with the draws (D or 1)."""
 
-    def __init__(self, step_of: Step) -> None:
-        self.step_of, self.part, self.draws = step_of, step_of.part, step_of.draws
-        self.states = step_of.course.schedule.states
+    def __init__(self, step_of: Step, inflow: Array) -> None:
+        self.step_of, self.part, self.joins = step_of, step_of.part, bool(inflow.any())
         season = self.part.tail == "cycle"
         self.begins = max(step_of.course.settled_after, 0 if season else len(self.part.matrices))
         self.length = len(self.part.matrices) if season else 1
-        self.exits = self.states.exit_mask[self.part.report]
-        c = step_of.component
-        self.join = self.part.join[None] if self.draws is None else self.draws.join[c]
-        self.opening = self.part.start[None] if self.draws is None else self.draws.start[c]
+        self.exits = step_of.course.schedule.states.exit_mask[self.part.report]
         self.turns = [step_of(self.begins + k) for k in range(self.length)]
+        self.coming = step_of.arriving(inflow[:, None])
 
-    def product(self, first: int = 0) -> Array:
+    def endless(self) -> str:
+        """Why joiners have no settled base: some of them can never leave; or nothing is known about a row."""
+        arriving = self.coming.max(axis=1) > 0
+        moves = np.stack([(m > 0).any(axis=2) for m, _, _ in self.turns]).any(axis=0)
+        reached = reachability(np.asarray(moves))[arriving].any(axis=0)
+        if np.isnan(self.part.matrices).any(axis=(0, 2))[reached].any():
+            return "rows_without_data"
+        leaving = leads_to(np.asarray(moves), np.flatnonzero(self.exits).tolist())
+        return "" if leaving[reached].all() else "grows_without_limit"
+
+    def first(self, start: Array) -> Array:
+        """(m, D) customers at the first place of the cycle; nobody in the exits."""
+        if not self.joins and self._all_leave():
+            return np.zeros((len(self.exits), 1))
+        product = self._product()
+        if not self.joins:
+            there = through(self._walked(start), np.moveaxis(_limit(product), 0, -1))
+            return np.where(self.exits[:, None], 0.0, there)
+        inside = np.flatnonzero(~self.exits)
+        after = [np.moveaxis(self._product(k + 1), 0, -1) for k in range(self.length)]
+        entering = np.sum([through(self.coming, m) for m in after], axis=0)[inside].T
+        system = np.eye(len(inside)) - product[:, inside[:, None], inside]
+        wide = max(len(system), len(entering))
+        out = np.zeros((len(self.exits), wide))
+        right = np.broadcast_to(entering, (wide, len(inside)))
+        out[inside] = _solved(np.swapaxes(system, 1, 2), right).T
+        return out
+
+    def add(self, total: Settled, x: Array) -> None:
+        """Add the averages over the cycle to the totals."""
+        gone = self.exits[:, None]
+        for matrices, money, treated in self.turns:
+            onward = through(x, matrices)
+            total.counts[:] += self.step_of.folded(np.where(gone, onward, x)) / self.length
+            total.treated[:] += x[treated].sum(axis=0) / self.length
+            if money is not None:
+                total.paid[:] += pay_of(x, money) / self.length
+            x = np.where(gone, 0.0, onward) + self.coming
+
+    def _product(self, first: int = 0) -> Array:
         """(D or 1, m, m) M_first ... M_{n-1}."""
         out = np.eye(len(self.exits))[None]
         for matrices, _, _ in self.turns[first:]:
-            out = out @ matrices
+            out = out @ np.moveaxis(matrices, -1, 0)
         return out
 
-    def endless(self, inflow: Array) -> str:
-        """Why joiners have no settled base: some of them can never leave; or nothing is known about a row."""
-        arriving = inflow @ self.join.max(axis=0) > 0
-        reached = reachability(self._moves())[arriving].any(axis=0)
-        if np.isnan(self.part.matrices).any(axis=(0, 2))[reached].any():
-            return "rows_without_data"
-        if not arriving.any():
-            return ""
-        leaving = leads_to(self._moves(), np.flatnonzero(self.exits).tolist())
-        return "" if leaving[reached].all() else "grows_without_limit"
-
-    def _moves(self) -> NDArray[np.bool_]:
-        return np.asarray(np.stack([(m > 0).any(axis=0) for m, _, _ in self.turns]).any(axis=0))
-
-    def first(self, start: Array, inflow: Array) -> Array:
-        """(D, m) customers at the first place of the cycle; nobody in the exits."""
-        whole = self.product()
-        if not inflow.any():
-            return np.where(self.exits, 0.0, through(self._walked(start), _limit(whole)))
-        inside = np.flatnonzero(~self.exits)
-        arriving = through(inflow, self.join)
-        entering = np.sum([through(arriving, self.product(k + 1)) for k in range(self.length)], axis=0)
-        system = np.eye(len(inside)) - whole[:, inside[:, None], inside]
-        wide = max(len(system), len(entering))
-        right = np.broadcast_to(entering[:, inside], (wide, len(inside)))
-        out = np.zeros((wide, len(self.exits)))
-        out[:, inside] = _solved(np.swapaxes(system, 1, 2), right)
-        return out
+    def _all_leave(self) -> bool:
+        """Whether nobody stays for ever, in every draw."""
+        every = np.stack([(m > 0).all(axis=2) for m, _, _ in self.turns]).all(axis=0)
+        return bool(np.all(leads_to(np.asarray(every), np.flatnonzero(self.exits).tolist())))
 
     def _walked(self, start: Array) -> Array:
         """Where those who are there now stand when the cycle begins."""
-        x = through(start[None], self.opening)
+        x = self.step_of.opening(start)
         for h in range(self.begins):
             x = through(x, self.step_of(h)[0])
         return x
-
-    def add(self, total: Settled, x: Array, inflow: Array) -> None:
-        """Add the averages over the cycle to the totals."""
-        fold = self.part.collapse(len(self.states)) / self.length
-        arriving = through(inflow, self.join)
-        for matrices, money, treated in self.turns:
-            total.counts[:] += np.where(self.exits, 0.0, x) @ fold
-            total.treated[:] += x @ treated / self.length
-            if money is not None:
-                total.paid[:] += (x * money).sum(axis=1) / self.length
-            onward = through(x, matrices)
-            total.counts[:] += np.where(self.exits, onward, 0.0) @ fold
-            x = np.where(self.exits, 0.0, onward) + arriving
 
 
 def _limit(matrices: Array) -> Array:

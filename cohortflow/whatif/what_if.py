@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -12,17 +13,14 @@ from numpy.typing import NDArray
 from cohortflow.chain import Draws
 from cohortflow.projector import accept
 from cohortflow.projector.mix import walk
-from cohortflow.whatif.compare import Pair, WhatIf, alone, paired, payback
-from cohortflow.whatif.paths import Paths, walk_paths
+from cohortflow.whatif.compare import Pair, WhatIf, payback
+from cohortflow.whatif.paths import Gains, Paths, steps_of, walk_paths
+from cohortflow.whatif.scattered import MONEY, Scattered, settle_both
 from cohortflow.whatif.scenario import as_scenario
 from cohortflow.whatif.setting import Setting, for_segment
-from cohortflow.whatif.settle import Settled, settle
 
 Array = NDArray[np.float64]
-Two = tuple[Array, Array]
 Both = tuple[Paths, Paths]
-Figures = dict[str, Two]
-Flags = Any  # bool arrays; numpy's stubs take any() for a number
 
 DRAWS = 2000
 
@@ -70,19 +68,15 @@ def what_if(
     at = Setting.of(
         model, plan, periods=periods, start=start, joiners=joiners, value=value, base_period=base_period
     )
+    drawn = accept.draws_of(model, draws, generator := accept.as_rng(rng), covariance)
     weights = _weights(at, totals)
-    generator = accept.as_rng(rng)
-    drawn = accept.draws_of(model, draws, generator, covariance)
-    asked = _Asked(at, weights, accept.as_level(level), drawn)
-    estimate = asked.paths(at.inflows(), None)
-    shift = None if drawn is None else at.drawn_shift(drawn.size, generator)
-    scattered = None if drawn is None else asked.paths(at.inflows(drawn.size, generator), drawn, shift)
-    by_period = asked.by_period(estimate, scattered)
-    settled, why = asked.settled(shift)
+    scattered = None if drawn is None else Scattered.of(at, weights, drawn, generator)
+    asked = _Asked(at, weights, accept.as_level(level), scattered)
+    by_period, total = asked.ahead()
+    settled, why = asked.settled()
     return WhatIf(
-        plan, at.schedule, at.base, by_period, asked.total(by_period, estimate, scattered), settled, level,
-        "none" if drawn is None else "draws", 0 if drawn is None else drawn.size, at.money.currency,
-        _reasons(at, why, scattered), segment,
+        plan, at.schedule, at.base, by_period, total, settled, level, "none" if drawn is None else "draws",
+        0 if drawn is None else drawn.size, at.money.currency, _reasons(at, why, scattered), segment,
     )  # fmt: skip
 
 
@@ -92,133 +86,132 @@ def _weights(at: Setting, totals: Mapping[str, Sequence[str]] | None) -> dict[st
     return accept.weights_of(states, totals) | {n: np.eye(len(states))[states.index(n)] for n in states.exits}
 
 
-def _reasons(at: Setting, why: str, scattered: Both | None) -> tuple[str, ...]:
+def _reasons(at: Setting, why: str, scattered: Scattered | None) -> tuple[str, ...]:
     reasons = [f"rows_without_data:{s}" for s in at.schedule.unknown]
     reasons += [f"settled:{why}"] if why else []
-    if scattered and scattered[1].short:
-        reasons.append(f"change_cut_short_in_draws:{scattered[1].short:.3g}")
+    if scattered and scattered.gains.short:
+        reasons.append(f"change_cut_short_in_draws:{scattered.gains.short:.3g}")
     return tuple(reasons)
 
 
 @dataclass(frozen=True, eq=False)
 class _Asked:
-    """The figures of one comparison; every pair stands without and with the scenario."""
+    """The figures of one comparison.
+
+    A table of figures (P, Q) has a column for each quantity of `weights` and, with money, for value, cost and
+    net.
+    """
 
     at: Setting
     weights: Mapping[str, Array]
     level: float
-    draws: Draws | None
+    scattered: Scattered | None
 
-    def paths(self, inflows: Two, draws: Draws | None, shift: Array | None = None) -> Both:
-        start = self.at.start
+    def ahead(self) -> tuple[dict[str, Pair], dict[str, Pair]]:
+        """By period, and over all periods."""
+        estimate = self._estimate()
+        base, changed = self._tables(estimate)
+        gone = self._undefined()
+        base, changed = np.where(gone[0], np.nan, base), np.where(gone[1], np.nan, changed)
+        by_period = {
+            n: self._pair(base[:, q], changed[:, q], self._drawn("by_period", n))
+            for q, n in enumerate(self.names)
+        }
+        if self.at.money.terms is None:
+            return by_period, {}
+        total = {
+            n: self._pair(by_period[n].base.sum(), by_period[n].changed.sum(), self._drawn("total", n))
+            for n in MONEY
+        }
+        if not np.isnan(total["net"].difference):
+            total |= self._judged(_gain(estimate))
+        return by_period, total
+
+    def settled(self) -> tuple[dict[str, Pair], str]:
+        """A period in the long run, and why there is none."""
+        steps = [steps_of(side.course, side.prices, None) for side in self.at.sides]
+        first, second = settle_both(self.at, (steps[0], steps[1]), 1)
+        reason = first.reason or second.reason
+        base = self._table(first.counts.T, first.paid, np.zeros(1))[0]
+        changed = self._table(second.counts.T, second.paid, self.at.late_costs(second.treated))[0]
+        return {
+            n: self._pair(base[q], changed[q], None if reason else self._drawn("settled", n))
+            for q, n in enumerate(self.names)
+        }, reason
+
+    # ---- inner ----
+    @property
+    def names(self) -> tuple[str, ...]:
+        """The columns of a table."""
+        return (*self.weights, *(MONEY if self.at.money.terms is not None else ()))
+
+    @property
+    def _columns(self) -> Array:
+        """(Q, K) weights of the quantities."""
+        return np.array(list(self.weights.values()))
+
+    def _table(self, counts: Array, paid: Array, cost: Array) -> Array:
+        """(P, Q) from (P, K) customers, (P,) discounted pay and costs."""
+        customers = counts @ self._columns.T
+        if self.at.money.terms is None:
+            return customers
+        return np.column_stack([customers, paid, cost, paid - cost])
+
+    def _estimate(self) -> Both:
         first, second = (
-            walk_paths(side.course, start, inflow, side.prices, draws=draws, shift=shift)
-            for side, inflow in zip(self.at.sides, inflows, strict=True)
+            walk_paths(side.course, self.at.start, inflow, side.prices)
+            for side, inflow in zip(self.at.sides, self.at.inflows(), strict=True)
         )
         return first, second
 
-    def by_period(self, estimate: Both, scattered: Both | None) -> dict[str, Pair]:
-        """Customers of every quantity; discounted value, cost and net."""
-        unknown = self._undefined()
-        lost: dict[str, Flags] = {n: unknown[:, 1:, w != 0].any(axis=2) for n, w in self.weights.items()}
-        out = self._pairs(self._counts(estimate), scattered and self._counts(scattered), lost)
-        if self.at.money.terms is None:
-            return out
-        figures = self._money(estimate)
-        any_lost: dict[str, Flags] = dict.fromkeys(figures, unknown[:, 1:].any(axis=2))
-        return out | self._pairs(figures, scattered and self._money(scattered), any_lost)
+    def _tables(self, paths: Both) -> tuple[Array, Array]:
+        """(P, Q) of the estimate, without and with."""
+        first, second = ((p.counts[1:, :, 0], self.at.discount * p.paid[:, 0]) for p in paths)
+        cost = self.at.discount * self.at.costs(paths[1].treated)[:, 0]
+        return self._table(*first, np.zeros_like(cost)), self._table(*second, cost)
 
-    def total(self, by_period: Mapping[str, Pair], estimate: Both, scattered: Both | None) -> dict[str, Pair]:
-        """Over all periods: value, cost, net; the cost that breaks even; when it has paid."""
-        if self.at.money.terms is None:
-            return {}
-        lost: Flags = np.isnan([by_period["net"].base, by_period["net"].changed]).any(axis=1)
-        figures = _summed(self._money(estimate))
-        many = None if scattered is None else _summed(self._money(scattered))
-        pairs = self._pairs(figures, many, dict.fromkeys(figures, lost))
-        out = {name: pair.only() for name, pair in pairs.items()}
+    def _pair(self, base: Any, changed: Any, drawn: Callable[[], Array] | None) -> Pair:
+        return Pair(base, changed, drawn, self.level)
+
+    def _drawn(self, kind: str, name: str) -> Callable[[], Array] | None:
+        """The draws of a figure, made when they are asked for."""
+        return None if self.scattered is None else partial(getattr(self.scattered, kind), name)
+
+    def _undefined(self) -> NDArray[np.bool_]:
+        """(2, P, Q) what depends on a state that can be reached from one without data."""
+        at, weights = self.at, self._columns.T != 0
+        if at.money.terms is not None:
+            weights = np.column_stack([weights, np.ones((len(weights), 3), dtype=bool)])
+        out = np.zeros((2, at.periods, weights.shape[1]), dtype=bool)
+        if at.schedule.unknown:
+            for n, (side, inflow) in enumerate(zip(at.sides, at.inflows(), strict=True)):
+                gone = walk(side.course.explicit(at.periods), at.start, at.periods, inflow[..., 0]).undefined
+                out[n] = gone[1:] @ weights
+        return out
+
+    def _judged(self, estimate: Gains) -> dict[str, Pair]:
+        """The cost that breaks even, and when it has paid: the scenario's own figures, base 0."""
+        out = {}
         for name, wanted, measure in (
             ("break_even_cost", bool(self.at.under.course.changes), self._break_even),
             ("payback_periods", self.at.scenario.costs, self._payback),
         ):
-            if wanted and not lost.any():
-                drawn = None if scattered is None else measure(scattered)
-                out[name] = alone(float(measure(estimate)[0]), drawn, self.level)
+            if wanted:
+                drawn = None if self.scattered is None else partial(measure, self.scattered.gains)
+                out[name] = Pair(0.0, float(measure(estimate)[0]), drawn, self.level)
         return out
 
-    def settled(self, shift: Array | None) -> tuple[dict[str, Pair], str]:
-        """A period in the long run, and why there is none."""
-        estimate = self._settle(None)
-        reason = estimate[0].reason or estimate[1].reason
-        drawn = None if self.draws is None or reason else self._settle(self.draws, shift)
-        pairs = self._pairs(self._settled_figures(estimate), drawn and self._settled_figures(drawn), {})
-        return {name: pair.only() for name, pair in pairs.items()}, reason
-
-    # ---- inner ----
-    def _pairs(self, figures: Figures, many: Figures | None, lost: Mapping[str, Flags]) -> dict[str, Pair]:
-        """A Pair of each figure; lost : without and with the scenario, where nothing is known."""
-        nowhere = np.zeros(2, dtype=bool)
-        out = {}
-        for name, two in figures.items():
-            gone = lost.get(name, nowhere)
-            base, changed = np.where(gone[0], np.nan, two[0][0]), np.where(gone[1], np.nan, two[1][0])
-            out[name] = paired(base, changed, None if many is None else many[name], self.level)
-        return out
-
-    def _counts(self, paths: Both) -> Figures:
-        """(D, H) customers of every quantity."""
-        return {n: (paths[0].counts[:, 1:] @ w, paths[1].counts[:, 1:] @ w) for n, w in self.weights.items()}
-
-    def _undefined(self) -> NDArray[np.bool_]:
-        """(2, H+1, K) what can be reached from a state without data, without and with the scenario."""
-        at = self.at
-        out = np.zeros((2, at.periods + 1, len(at.schedule.states)), dtype=bool)
-        if at.schedule.unknown:
-            for n, (side, inflow) in enumerate(zip(at.sides, at.inflows(), strict=True)):
-                out[n] = walk(side.course.explicit(at.periods), at.start, at.periods, inflow[0]).undefined
-        return out
-
-    def _money(self, paths: Both) -> Figures:
-        """(D, H) discounted value, cost and net."""
-        factor = self.at.discount
-        base, changed = (factor * p.paid for p in paths)
-        return _with_costs(base, changed, factor * self.at.costs(paths[1].treated))
-
-    def _break_even(self, paths: Both) -> Array:
-        factor = self.at.discount
-        treated = paths[1].treated @ factor
-        gain = (paths[1].paid - paths[0].paid - self.at.fixed_costs) @ factor
+    def _break_even(self, gains: Gains) -> Array:
+        treated = self.at.discount @ gains.treated
+        gain = self.at.discount @ (gains.paid - self.at.fixed_costs[:, None])
         return np.divide(gain, treated, out=np.full_like(gain, np.nan), where=treated > 0)
 
-    def _payback(self, paths: Both) -> Array:
-        base, net = self._money(paths)["net"]
-        return payback(net - base, min(self.at.begins, self.at.periods - 1))
-
-    def _settle(self, draws: Draws | None, shift: Array | None = None) -> tuple[Settled, Settled]:
-        first, second = (
-            settle(side.course, self.at.start, inflow, side.later_prices, draws=draws, shift=shift)
-            for side, inflow in zip(self.at.sides, self.at.long_inflows(), strict=True)
-        )
-        return first, second
-
-    def _settled_figures(self, sides: tuple[Settled, Settled]) -> Figures:
-        """(D, 1) figures a period in the long run; money undiscounted."""
-        out: Figures = {
-            n: ((sides[0].counts @ w)[:, None], (sides[1].counts @ w)[:, None])
-            for n, w in self.weights.items()
-        }
-        if self.at.money.terms is None:
-            return out
-        plan = self.at.scenario
-        fixed = plan.fixed_cost if np.isinf(self.at.window.last) else 0.0
-        cost = plan.cost_per_customer * sides[1].treated[:, None] + fixed
-        return out | _with_costs(sides[0].paid[:, None], sides[1].paid[:, None], cost)
+    def _payback(self, gains: Gains) -> Array:
+        net = self.at.discount[:, None] * (gains.paid - self.at.costs(gains.treated))
+        return payback(net, min(self.at.begins, self.at.periods - 1))
 
 
-def _with_costs(base: Array, changed: Array, cost: Array) -> Figures:
-    return {"value": (base, changed), "cost": (np.zeros_like(cost), cost), "net": (base, changed - cost)}
-
-
-def _summed(figures: Figures) -> Figures:
-    """Figures of all periods together, (D, 1)."""
-    return {n: (a.sum(axis=1, keepdims=True), b.sum(axis=1, keepdims=True)) for n, (a, b) in figures.items()}
+def _gain(paths: Both) -> Gains:
+    """The difference of two paths."""
+    first, second = paths
+    return Gains(second.counts[1:] - first.counts[1:], second.paid - first.paid, second.treated)
