@@ -19,8 +19,8 @@ from scipy import special
 
 from cohortflow.chain import Chain
 from cohortflow.errors import CallError, NotIdentified, listed, nearest
+from cohortflow.estimator.design import Design, StateLogit, series_of, state_logit, values_of
 from cohortflow.estimator.interval import check_level
-from cohortflow.estimator.logit import Logit, fit_logit
 from cohortflow.estimator.window import choose_window, refuse_impossible
 from cohortflow.record import Record, frozen_mapping
 from cohortflow.states import States
@@ -29,38 +29,6 @@ from cohortflow.tally import Tally
 Array = NDArray[np.float64]
 
 FEWEST_MOVES = 30
-
-
-@dataclass(frozen=True, eq=False)
-class Design:
-    """How a row of x is made: columns (covariate, value), value None for a series; the constant comes first.
-
-    values : attribute -> its values, the baseline first;  series : (T,) values by name, first its first ordinal
-    """
-
-    values: Mapping[str, tuple[str, ...]]
-    series: Mapping[str, Mapping[int, float]]
-
-    @property
-    def columns(self) -> list[tuple[str, str | None]]:
-        levels = [(name, value) for name, values in self.values.items() for value in values[1:]]
-        return [("", None), *levels, *((name, None) for name in self.series)]
-
-    def row(self, attributes: Mapping[str, str], period: Mapping[str, float]) -> Array:
-        """x of one combination of attribute values and series values."""
-        levels = [float(attributes[name] == v) for name, values in self.values.items() for v in values[1:]]
-        return np.array([1.0, *levels, *(period[name] for name in self.series)])
-
-
-@dataclass(frozen=True, repr=False, eq=False)
-class StateLogit:
-    """One state's model: outcomes (J,) destinations; keys: combinations seen; X (G, p), weight (G,) moves."""
-
-    logit: Logit
-    outcomes: NDArray[np.int64]
-    keys: tuple[tuple[dict[str, str], dict[str, float]], ...]
-    X: Array
-    weight: Array
 
 
 @dataclass(frozen=True, repr=False, eq=False)
@@ -203,19 +171,28 @@ def drivers(
     Raises CallError for unknown attributes, a series that misses a period, or no covariate at all;
     NotIdentified when covariates repeat each other. States with fewer than 30 moves or one outcome have no
     model ("too_few:state").
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"])
+    >>> rows = [(1, "fresh", "steady", 30), (1, "fresh", "left", 10)]
+    >>> rows += [(2, "fresh", "steady", 20), (2, "fresh", "left", 20)]
+    >>> price = pd.DataFrame({"price": [1.0, 2.0]}, index=[2, 3])  # of the periods in which the moves are made
+    >>> found = drivers(cf.read_counts(rows, states), series=price)
+    >>> found.chain(series={"price": 2.0}).matrix[0].round(3).tolist()
+    [0.0, 0.5, 0.5]
     """
     check_level(level)
     names = list(attributes)
     chosen = choose_window(tally, window=window, exclude=exclude)
     moves = tally.one_step[chosen.keeps(tally.one_step["period"])]
     refuse_impossible(tally, moves)
-    over_time = _series(series, tally, moves)
+    over_time = series_of(series, tally, moves)
     if not names and not over_time:
         raise CallError("drivers needs at least one attribute or series.")
     known = [name for name, _ in tally.meta.segment_columns]
     columns = [known.index(name) for name in names if tally.segment_values(name)]
     labels = [tuple(values[c] for c in columns) for values in tally.meta.segments]
-    design = Design(_values(moves, names, labels), over_time)
+    design = Design(values_of(moves, names, labels), over_time)
     pooled = np.zeros((len(tally.states),) * 2)
     np.add.at(pooled, (moves["state"], moves["next_state"]), moves["n"])
     total = pooled.sum(axis=1, keepdims=True)
@@ -227,66 +204,8 @@ def drivers(
         if rows["n"].sum() < FEWEST_MOVES or rows["next_state"].nunique() < 2:
             notes.append(f"too_few:{name}")
             continue
-        models[name] = _state_logit(rows, design, names, labels)
+        models[name] = state_logit(rows, design, names, labels)
         notes += [] if models[name].logit.converged else [f"not_converged:{name}"]
     if not models:
         raise NotIdentified("No state has 30 moves with two outcomes, so nothing drives moves here.")
     return Drivers(tally.states, design, frozen_mapping(models), level, pooled, tally, tuple(notes))
-
-
-def _values(
-    moves: pd.DataFrame, names: list[str], labels: list[tuple[str, ...]]
-) -> dict[str, tuple[str, ...]]:
-    """Values of each attribute that moves have, the commonest first."""
-    n = moves.groupby("segment")["n"].sum()
-    out = {}
-    for k, name in enumerate(names):
-        total: dict[str, int] = {}
-        for segment, count in n.items():
-            value = labels[int(segment)][k]  # type: ignore[call-overload]
-            total[value] = total.get(value, 0) + int(count)
-        out[name] = tuple(sorted(total, key=lambda v: (-total[v], v)))
-    return out
-
-
-def _series(series: pd.DataFrame | None, tally: Tally, moves: pd.DataFrame) -> dict[str, dict[int, float]]:
-    """Values by the ordinal of the period in which a move is made."""
-    if series is None:
-        return {}
-    keys = [tally.calendar.parse(k) if isinstance(k, str) else int(k) for k in series.index]
-    needed = {int(p) + 1 for p in moves["period"].unique()}
-    out = {}
-    for name in series.columns:
-        values = dict(zip(keys, series[name].astype(float), strict=True))
-        missing = sorted(p for p in needed if not np.isfinite(values.get(p, np.nan)))
-        if missing:
-            raise CallError(
-                f'The series "{name}" has no value for {tally.calendar.label(missing[0])}'
-                f"{f' and {len(missing) - 1} more periods' if missing[1:] else ''}; give every period of the window."
-            )
-        out[str(name)] = values
-    return out
-
-
-def _state_logit(
-    rows: pd.DataFrame, design: Design, names: list[str], labels: list[tuple[str, ...]]
-) -> StateLogit:
-    """Counts of one state's moves by combination of covariates, outcome and bucket, fitted."""
-    group = np.array([sorted(set(labels)).index(label) for label in labels])[rows["segment"].to_numpy()]
-    period = rows["period"].to_numpy() + 1 if design.series else np.zeros(len(rows), dtype=int)
-    outcomes, where = np.unique(rows["next_state"], return_inverse=True)
-    key, index = np.unique(np.stack([group, period], axis=1), axis=0, return_inverse=True)
-    pairs, cell = np.unique(
-        np.stack([index.reshape(-1), rows["bucket"].to_numpy()], axis=1), axis=0, return_inverse=True
-    )
-    Y = np.zeros((len(pairs), len(outcomes)))
-    np.add.at(Y, (cell.reshape(-1), where.reshape(-1)), rows["n"].to_numpy())
-    kinds = sorted(set(labels))
-    keys = tuple(
-        (dict(zip(names, kinds[g], strict=True)), {s: v[int(t)] for s, v in design.series.items()})
-        for g, t in key
-    )
-    X = np.array([design.row(*k) for k in keys])
-    logit = fit_logit(X[pairs[:, 0]], Y, pairs[:, 1])
-    weight = np.bincount(pairs[:, 0], Y.sum(axis=1)).astype(float)
-    return StateLogit(logit, outcomes, keys, X, weight)

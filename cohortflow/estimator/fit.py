@@ -222,7 +222,8 @@ def fit(
 
     >>> import cohortflow as cf
     >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
-    >>> moves = [(1, "fresh", "steady", 8), (1, "fresh", "left", 2), (2, "steady", "steady", 9), (2, "steady", "left", 1)]
+    >>> moves = [(1, "fresh", "steady", 8), (1, "fresh", "left", 2)]
+    >>> moves += [(2, "steady", "steady", 9), (2, "steady", "left", 1)]
     >>> fit(cf.read_counts(moves, states), model="plain").matrix.loc["fresh"].tolist()
     [0.0, 0.8, 0.2]
     """

@@ -112,6 +112,13 @@ def generator_from_panel(
     `settings` of the result: converged, iterations, log_likelihood, gradient (largest entry, relative). Notes:
     "not_converged", "at_zero:a>b" (the likelihood wants no such move), "flat" (the information is singular).
     CallError for unusable sightings; NotIdentified for a state without any.
+
+    >>> seen = pd.DataFrame({"from": ["on"] * 2 + ["paused"] * 2, "to": ["on", "off", "on", "paused"],
+    ...                      "gap": [1.0, 1.0, 2.0, 2.0], "n": [90, 10, 30, 70]})
+    >>> states = States(["on", "paused", "off"], exits=["off"])
+    >>> moves = [[0, 0, 1], [1, 0, 0], [0, 0, 0]]
+    >>> generator_from_panel(seen, states, moves=moves).Q.round(3)[0].tolist()
+    [-0.079, 0.0, 0.079]
     """
     check_level(level)
     panel, size = Panel.of_frame(sightings, states), len(states)

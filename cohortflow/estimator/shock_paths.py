@@ -73,6 +73,15 @@ def future_rates(
     shocks : their law, when it was estimated before: `shocks_of` a fit of the same tally and seasons
     Step 0 is the one after the last period of the tally. NotIdentified when the history cannot tell
     (see estimate_shocks); CallError when `periods` or `n` is below 1.
+
+    >>> import cohortflow as cf
+    >>> states = cf.States(["fresh", "steady", "left"], exits=["left"], entries=["fresh"])
+    >>> rows = [(t, "fresh", "steady", 80) for t in range(12)] + [(t, "fresh", "left", 20) for t in range(12)]
+    >>> rows += [(t, "steady", "steady", 900 - 8 * (t % 3)) for t in range(12)]
+    >>> rows += [(t, "steady", "left", 100 + 8 * (t % 3)) for t in range(12)]
+    >>> ahead = future_rates(cf.read_counts(rows, states), 3, 400, rng=1)
+    >>> ahead.matrix(0, 2).shape, ahead.matrix(0, 2).mean(axis=0)[1].round(2).tolist()
+    ((400, 3, 3), [0.0, 0.89, 0.11])
     """
     if periods < 1:
         raise CallError(f"The number of periods ahead is at least 1; got {periods}.")

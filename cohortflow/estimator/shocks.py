@@ -103,6 +103,15 @@ def estimate_shocks(counts: RowCounts, states: States, *, cycle_position: Any = 
         are taken out where the history holds two full cycles (else they stay in, noted "seasons_kept")
 
     NotIdentified when fewer than 6 periods are there, or no row has two destinations that are often enough.
+
+    >>> states = States(["fresh", "steady", "left"], exits=["left"])
+    >>> leaving = np.array([60, 140] * 12)  # of a thousand, in turn: log-odds .3 up and .6 down around .1
+    >>> t = np.arange(24)
+    >>> one = np.ones(48)
+    >>> counts = RowCounts(states.allowed, one, np.repeat([1, 2], 24), 0 * one, np.tile(t, 2),
+    ...                    np.append(1000 - leaving, leaving), one, one)
+    >>> estimate_shocks(counts, states).summary["exit_sd"][0] > 0.2
+    True
     """
     periods, cube = counts.by_period()
     first, times = int(periods[0]), int(periods[-1] - periods[0] + 1)

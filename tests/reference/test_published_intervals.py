@@ -5,6 +5,8 @@ import pytest
 from scipy import stats
 from statsmodels.stats.proportion import multinomial_proportions_confint, proportion_confint
 
+from cohortflow.estimator.covariance import covariance
+from cohortflow.estimator.draws import draw_rows
 from cohortflow.estimator.interval import (
     agresti_coull,
     clopper_pearson,
@@ -15,6 +17,7 @@ from cohortflow.estimator.interval import (
     wilson,
     wilson_cc,
 )
+from cohortflow.estimator.rows import RowCounts
 
 # Newcombe (1998), Statistics in Medicine 17, 857-872, Table I, method 3 (score without continuity
 # correction):
@@ -143,6 +146,15 @@ def test_upper_limit_when_nothing_was_seen(n, upper):
     for method, expected in zip((clopper_pearson, wilson, jeffreys), upper, strict=True):
         low, high = method(0, n)
         assert low == 0 and high == pytest.approx(expected, abs=6e-9)
+
+
+def test_dirichlet_posterior_of_a_row():
+    # counts 50, 5, 30, 15 with 1/2 added to each: Dirichlet means and the interval of cell 2 (methods, scipy beta)
+    rows = RowCounts.of_matrix([[50.5, 5.5, 30.5, 15.5]])
+    drawn = draw_rows(rows, covariance(rows, "multinomial"), 40_000, rng=1)[:, 0]
+    assert drawn.mean(axis=0) == pytest.approx([0.49509804, 0.053921569, 0.29901961, 0.15196078], abs=8e-4)
+    assert drawn.std(axis=0) == pytest.approx([0.049264096, 0.022254929, 0.045111177, 0.035371634], rel=0.02)
+    assert np.quantile(drawn[:, 1], [0.025, 0.975]) == pytest.approx([0.019137869, 0.10508351], rel=0.03)
 
 
 def _coverage(method, n, p):
