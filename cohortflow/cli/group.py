@@ -12,11 +12,13 @@ from cohortflow.errors import listed, nearest
 
 SUMMARY = {
     "demo": "Write the demo scenario: data, study file, plans.",
+    "draft": "A starter study file from an extract.",
     "check": "Read, label and account for every row; no figures yet.",
     "fit": "Rates of every move, with intervals.",
     "project": "The mix period by period, where it settles, time to exit.",
     "backtest": "Past forecasts against what happened, model against model.",
     "run": "All of it into one folder, with the report.",
+    "compare": "Two runs: why the forecast changed; actual against forecast.",
     "sql": "The counting statement for a warehouse.",
 }
 EXAMPLES = """\

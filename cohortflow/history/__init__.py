@@ -6,6 +6,7 @@ load.py      one typed table of rows;  columns.py, times.py   duplicates.py
 cells.py     a cell a customer and period     customers.py hash buckets, segments
 rules.py     the rules on arrays              follow.py    events into states, stays, exits, returns
 tabulate.py  states into tables;  adder.py, paths.py        sweep.py  block by block
+look.py      an extract before there is a study: profile.py, guess.py, places.py
 check.py     accounting and findings          store.py     the Tally on disk
 """
 
