@@ -87,12 +87,12 @@ def panel_rows(panel):
     return RowCounts.of_table(table, STATES.allowed, np.ones(len(table)))
 
 
-def pooled_limit(seed=99, customers=400_000):
+def pooled_limit(seed=99, customers=2_000_000, parts=20):
     """The rates that the pooled estimator tends to when customers have rows of their own."""
     rng = np.random.default_rng(seed)
     total = np.zeros((5, 5))
-    for _ in range(4):
-        part = customers // 4
+    part = customers // parts
+    for _ in range(parts):
         total += panel_rows(simulate(own_rows(part, rng), np.zeros(part, int), 13, rng)).N
     P = CHAIN.copy()
     P[:4] = total[:4] / total[:4].sum(axis=1, keepdims=True)
@@ -118,7 +118,7 @@ def cells_table(replications, cores=None, sizes=(50, 200, 1000)):
             rows.append(("Markov", customers, method, inside.min(), inside.mean()))
     limit = pooled_limit()
     for customers in (200, 1000):
-        tasks = [(customers, seed, limit) for seed in range(replications)]
+        tasks = [(customers, seed, limit) for seed in range(max(replications, 2000))]
         found = spread_over_cores(cells_own_rows, tasks, cores)
         usual = np.mean([counts for _, counts in found], axis=0) >= 5
         inside = np.mean([hit for hit, _ in found], axis=0)[usual]
