@@ -8,7 +8,7 @@ from hypothesis import strategies as st
 from cohortflow.chain import Chain, Draws
 from cohortflow.errors import CallError
 from cohortflow.states import States
-from cohortflow.whatif import Change, Scenario, required_change, what_if
+from cohortflow.whatif import Change, Scenario, changed, required_change, sensitivity, what_if
 from tests.projector_cases import CHAIN, P, chains, dirichlet_draws, seasonal
 from tests.whatif_cases import JOINERS, MONEY, OTHER, START, draws_of_chain
 
@@ -78,7 +78,7 @@ def test_dated_changes():
     found = required_change(season, lever, target="base", horizon=6, start=START, base_period="2026-09",
                             reach=mark.at_horizon("all_live").changed)  # fmt: skip
     assert found.add == pytest.approx(-0.03) and np.isnan(found.probability)
-    with pytest.raises(CallError, match='A dated change and "life:steady" for ever do not go together'):
+    with pytest.raises(CallError, match='A dated change and "life:steady" do not go together'):
         required_change(CHAIN, lever, target="life:steady", reach=20, **given)
 
 
@@ -125,3 +125,16 @@ def test_arguments():
         required_change(HERE, ("here", "gone"), target="net", horizon=3)
     found = required_change(HERE, ("here", "gone"), target="life:here", reach=20)
     assert 'needs "here" to "gone" -5 points' in repr(found) and found.about()["reached"] is True
+
+
+def test_value_targets_are_walked_or_solved_the_same():
+    given = {"start": START, "joiners": JOINERS, "value": MONEY}
+    for name, horizon in (("value:total", 6), ("value:base", 6), ("value:joiners", 6), ("value", None)):
+        now = sensitivity(CHAIN, target=name, horizon=horizon, **given).value
+        found = required_change(
+            CHAIN, ("steady", "left"), target=name, horizon=horizon, reach=1.02 * now, **given
+        )
+        assert found.now == pytest.approx(now) and found.add < 0
+        better = changed(CHAIN.schedule, Change("steady", "left", add=found.add))
+        again = sensitivity(better, target=name, horizon=horizon, **given).value
+        assert again == pytest.approx(1.02 * now)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -14,6 +14,8 @@ from cohortflow.errors import CallError, nearest
 from cohortflow.study import Study, default_study, read_study
 from cohortflow.study.data_file import is_data_file
 
+KEPT = ("by", "force", "form", "keep_values", "strict", "quiet", "dry_run")
+TAKEN = ("study", "settings", "exits", "out")
 Source = Callable[[str], ParameterSource | None]
 
 
@@ -21,7 +23,8 @@ Source = Callable[[str], ParameterSource | None]
 class Call:
     """One command line, checked as far as it can be without opening the study.
 
-    `overrides` and `set_by` are those of `read_study`; `form` is table, csv or json.
+    `overrides` and `set_by` are those of `read_study`; `form` is table, csv or json; `extra` holds a
+    command's own.
     """
 
     command: str
@@ -37,6 +40,7 @@ class Call:
     strict: bool = False
     quiet: bool = False
     dry_run: bool = False
+    extra: Mapping[str, Any] = field(default_factory=dict)
 
     def study(self) -> Study:
         """The study with its overrides; a bare data file gets a study of its own."""
@@ -75,11 +79,12 @@ def call_of(command: str, given: Mapping[str, Any], source: Source) -> Call:
     for option, key in SETTINGS.items():
         if given[option] is not None:
             overrides[key], set_by[key] = given[option], _origin(source(option))
-    kept = {
-        name: given[name] for name in ("by", "force", "form", "keep_values", "strict", "quiet", "dry_run")
-    }
+    kept = {name: given[name] for name in KEPT}
+    extra = {name: value for name, value in given.items() if name not in {*KEPT, *SETTINGS, *TAKEN}}
     out = Path(given["out"]) if given["out"] is not None else None
-    return Call(command, Path(given["study"]), overrides, set_by, tuple(given["exits"]), out=out, **kept)
+    return Call(
+        command, Path(given["study"]), overrides, set_by, tuple(given["exits"]), out=out, extra=extra, **kept
+    )
 
 
 def _origin(source: ParameterSource | None) -> str:

@@ -16,6 +16,7 @@ SUMMARY = {
     "check": "Read, label and account for every row; no figures yet.",
     "fit": "Rates of every move, with intervals.",
     "project": "The mix period by period, where it settles, time to exit.",
+    "whatif": "The scenarios, the levers, the change that a target needs.",
     "backtest": "Past forecasts against what happened, model against model.",
     "run": "All of it into one folder, with the report.",
     "compare": "Two runs: why the forecast changed; actual against forecast.",

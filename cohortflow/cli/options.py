@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import Any
 
 import click
@@ -31,8 +31,10 @@ class Command(click.Command):
         super().format_help(ctx, formatter)
 
 
-def study_command(name: str, examples: str) -> Callable[[Callable[..., int]], Command]:
-    """Decorator: a command on STUDY with the common options; the function gets a `Call`."""
+def study_command(
+    name: str, examples: str, *, extra: Sequence[click.Parameter] = ()
+) -> Callable[[Callable[..., int]], Command]:
+    """Decorator: a command on STUDY with the common options and `extra` ones; the function gets a `Call`."""
 
     def decorate(function: Callable[..., int]) -> Command:
         @click.pass_context
@@ -42,7 +44,7 @@ def study_command(name: str, examples: str) -> Callable[[Callable[..., int]], Co
             return function(call_of(name, given, ctx.get_parameter_source))
 
         callback.__doc__ = function.__doc__
-        params: list[click.Parameter] = [click.Argument(["study"], metavar="STUDY"), *common()]
+        params: list[click.Parameter] = [click.Argument(["study"], metavar="STUDY"), *extra, *common()]
         return Command(name, callback=callback, params=params, help=function.__doc__, examples=examples)
 
     return decorate

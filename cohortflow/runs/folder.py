@@ -9,7 +9,7 @@ give the same bytes: rows are sorted, floats written in full, no time is written
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, ClassVar, TypeVar
 
@@ -23,9 +23,10 @@ from cohortflow.record import Record, frozen_mapping
 from cohortflow.runs import write
 from cohortflow.runs.findings import fit_findings, not_yet
 from cohortflow.runs.place import whole_folder
+from cohortflow.runs.plans import Plans, plan_tables, plans_study
 from cohortflow.runs.steps import Forecast, fit_study, forecast_study
 from cohortflow.runs.tables import fit_tables, forecast_tables, in_order
-from cohortflow.runs.trust import BEST, adequacy_study, backtest_study, chosen
+from cohortflow.runs.trust import BEST, adequacy_study, backtest_study, chosen, windows_study
 from cohortflow.study import Study, read_study
 from cohortflow.tally import Tally
 
@@ -33,8 +34,9 @@ STAGES: dict[str, frozenset[str]] = {
     "check": frozenset(),
     "fit": frozenset({"fit", "adequacy"}),
     "project": frozenset({"fit", "forecast"}),
+    "whatif": frozenset({"fit", "forecast", "plans"}),
     "backtest": frozenset({"fit", "backtest"}),
-    "run": frozenset({"fit", "adequacy", "forecast", "backtest"}),
+    "run": frozenset({"fit", "adequacy", "forecast", "plans", "backtest"}),
 }
 Progress = Callable[[str], None]
 T = TypeVar("T")
@@ -45,6 +47,7 @@ class Run(Record):
     """A forecast as far as it was made.
 
     stage : check | fit | project | backtest | run, what was made
+    plans : segment -> its scenarios and levers
     adequacy, backtest, choice : the tests of the assumptions; past forecasts; the model chosen by them
     tables : the contract's tables by name;  absent : those that could not be made -> the reason
     findings : what a reader must know before believing the numbers; the serious ones stand with --strict
@@ -68,6 +71,7 @@ class Run(Record):
     adequacy: Adequacy | None = None
     backtest: Backtest | None = None
     choice: Choice | None = None
+    plans: Mapping[str, Plans] = field(default_factory=dict)
     path: Path | None = None
     kind: ClassVar[str] = "run"
 
@@ -106,7 +110,8 @@ def run(
     ----------
     study : a Study, or the path of a study file
     upto : "check" (read, label, account), "fit" (rates, and whether a chain is good enough), "project"
-        (futures), "backtest" (past forecasts against what happened) or "run" (all, charts and report too)
+        (futures), "whatif" (scenarios and levers), "backtest" (past forecasts against what happened) or "run"
+        (all, charts and report too)
     by : a segment column: also separately for each of its values
     out : the new folder; None writes nothing. `force` replaces an earlier run there
     keep_values : write the offending values into rejected.csv too (they may be personal data)
@@ -160,7 +165,7 @@ def _forecast(
         tell("forecasting the past")
         tested, absent["backtest"] = _or_reason(lambda: backtest_study(study, tally))
         if tested is None and study.model.name == BEST:
-            raise NotIdentified(f'No model can be chosen by backtest: {absent["backtest"]} Name a model.')
+            raise NotIdentified(f"No model can be chosen by backtest: {absent['backtest']} Name a model.")
         study, choice = chosen(study, tested) if tested is not None else (study, None)
     tell("fitting")
     fitted = fit_study(study, tally, by=by)
@@ -169,11 +174,19 @@ def _forecast(
     if "adequacy" in parts:
         tell("testing assumptions")
         trusted, absent["adequacy"] = _or_reason(lambda: adequacy_study(study, tally, by=by))
+        waits, absent["windows"] = _or_reason(lambda: windows_study(study, tally))
+        tables |= {"windows": waits.to_frame()} if waits is not None else {}
     forecasts: dict[str, Forecast] = {}
     if "forecast" in parts:
         tell("projecting")
         forecasts = {forecast.segment: forecast for forecast in forecast_study(study, fitted)}
         tables |= forecast_tables(forecasts.values())
+    plans: dict[str, Plans] = {}
+    if "plans" in parts:
+        tell("comparing scenarios")
+        plans = {segment: plans_study(study, forecast) for segment, forecast in forecasts.items()}
+        tables |= plan_tables(list(plans.values()))
+        absent |= {what: why for part in plans.values() for what, why in part.absent.items()}
     tables |= {n: r.to_frame() for n, r in (("adequacy", trusted), ("backtest", tested)) if r is not None}
     return Run(
         study,
@@ -188,10 +201,11 @@ def _forecast(
         frozen_mapping(_absent(absent, forecasts, tables)),
         (*history.check.findings, *fit_findings(fitted)),
         history.inputs,
-        tuple(not_yet(study)) if forecasts else (),
+        tuple(not_yet(study, used={"scenarios"} if plans else ())) if forecasts else (),
         trusted,
         tested,
         choice,
+        frozen_mapping(plans),
     )
 
 

@@ -9,7 +9,7 @@ Source: Brent (1973), Algorithms for Minimization without Derivatives, ch. 4.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
@@ -24,7 +24,7 @@ from cohortflow.projector.delta import quantiles
 from cohortflow.projector.project import as_joiners
 from cohortflow.projector.unroll import drawn_schedule
 from cohortflow.record import Record
-from cohortflow.whatif.change import PROPORTIONAL, Change, changed, feasible
+from cohortflow.whatif.change import PROPORTIONAL, Change, feasible
 from cohortflow.whatif.course import Course
 from cohortflow.whatif.money import as_money
 from cohortflow.whatif.paths import walk_paths
@@ -179,27 +179,35 @@ def _of_target(
         model, opened["start"], opened["base_period"], accept.as_schedule(model).calendar
     )
     dated = change.starts is not None or change.ends is not None
-    ahead = aim.measure in AT_HORIZON and aim.horizon is not None
+    ahead = aim.measure in AT_HORIZON and aim.horizon is not None and aim.of != "joiners"
     if dated and not ahead and aim.measure in ("life", "value"):
         raise CallError(
-            f'A dated change and "{aim.code}" for ever do not go together: leave starts and ends away, or '
-            "give a horizon."
+            f'A dated change and "{aim.code}" do not go together: leave starts and ends away, or ask for a '
+            f"figure "
+            "of the base at a horizon."
         )
 
     def figure(schedule: Schedule, size: float) -> float:
-        if not dated:
-            return slopes(aim, changed(schedule, change.resized(size))).value
         course = Course.of(schedule, (change.resized(size),), base, aim.first_step)
-        if not ahead:
-            return slopes(aim, course.later()).value
-        return slopes(_at_once(aim), course.explicit(aim.horizon or 1)).value
+        return _walked(aim, course) if ahead else slopes(aim, course.later()).value
 
     return figure
 
 
-def _at_once(aim: Target) -> Target:
-    """The target on a schedule whose first matrix leads out of the base period."""
-    return replace(aim, first_step=0)
+def _walked(aim: Target, course: Course) -> float:
+    """The base or the value at the horizon, walked there."""
+    size = len(course.schedule.states)
+    inflow = (
+        aim.inflow[: aim.horizon]
+        if aim.measure == "base" or aim.of == "total"
+        else np.zeros((aim.horizon or 1, size))
+    )
+    found = walk_paths(course, aim.start, inflow[..., None], lambda step: aim.money.terms)
+    if aim.measure == "base":
+        return float(aim.weight @ found.counts[-1, :, 0])
+    terms = aim.money.terms
+    assert terms is not None
+    return float(np.power(terms.factor, np.arange(len(inflow)) + terms.lag) @ found.paid[:, 0])
 
 
 def _net(model: Any, change: Change, costs: Mapping[str, Any], opened: Mapping[str, Any]) -> Figure:
