@@ -49,29 +49,46 @@ class Accounts:
         """`starts`: record number of the first row of each file."""
         return cls(np.asarray(starts, dtype=np.int64))
 
-    def add(self, outcome: np.ndarray, record: np.ndarray, customer: np.ndarray) -> None:
-        """Account for the rows of a block."""
-        if len(outcome) == 0:
-            return
-        files = len(self.starts)
-        file = np.zeros(len(record), dtype=np.int64)
-        if files > 1:
-            file = np.searchsorted(self.starts, record, side="right") - 1
-        size = int(customer.max()) + 1
-        both = (outcome.astype(np.int64) * files + file) * size + customer
-        self._count(both // size, self.rows, files)
-        self._count(np.unique(both) // size, self.customers, files)
-        self._count(np.unique(outcome.astype(np.int64) * size + customer) // size, self.customers, 0)
-        self._count(np.unique(file * size + customer) // size + ANY * files, self.customers, files)
-        self.customers[ANY, -1] += len(np.unique(customer))
-        chosen = np.isin(outcome, LISTED)
-        if chosen.any():
+    def add(
+        self, outcome: np.ndarray, record: np.ndarray, customer: np.ndarray, used: np.ndarray, size: int
+    ) -> None:
+        """Account for the rows of a block of `size` customers, each with a row; `used`: used rows by customer."""
+        used = used[outcome[used] == USED]
+        other = np.flatnonzero(outcome != USED)
+        self.customers[ANY, -1] += size
+        self.customers[USED, -1] += _runs(customer[used])
+        self._count_all(outcome[other], customer[other], size, self.customers, -1)
+        if len(self.starts) == 1:
+            self.rows[USED, 0] += len(used)
+            self.customers[USED, 0] += _runs(customer[used])
+            self.customers[ANY, 0] += size
+            self._count_all(outcome[other], customer[other], size, self.customers, 0)
+            self._add_up(outcome[other].astype(np.int64), 1, self.rows)
+        else:
+            self._by_file(outcome, record, customer, size)
+        chosen = other[np.isin(outcome[other], LISTED)]
+        if len(chosen):
             self.listed.append((record[chosen], outcome[chosen]))
 
-    def _count(self, values: np.ndarray, into: Counter[tuple[int, int]], files: int) -> None:
-        found, n = np.unique(values, return_counts=True)
-        for value, count in zip(found.tolist(), n.tolist(), strict=True):
-            into[divmod(value, files) if files else (value, -1)] += count
+    def _by_file(self, outcome: np.ndarray, record: np.ndarray, customer: np.ndarray, size: int) -> None:
+        files = len(self.starts)
+        file = np.searchsorted(self.starts, record, side="right") - 1
+        key = outcome.astype(np.int64) * files + file
+        self._add_up(key, files, self.rows)
+        self._add_up(np.unique(key * size + customer) // size, files, self.customers)
+        self._add_up(np.unique(file * size + customer) // size + ANY * files, files, self.customers)
+
+    def _count_all(
+        self, outcome: np.ndarray, customer: np.ndarray, size: int, into: Counter[tuple[int, int]], file: int
+    ) -> None:
+        """Customers by outcome."""
+        pairs = np.unique(outcome.astype(np.int64) * size + customer) // size
+        for code, n in zip(*np.unique(pairs, return_counts=True), strict=True):
+            into[int(code), file] += int(n)
+
+    def _add_up(self, keys: np.ndarray, files: int, into: Counter[tuple[int, int]]) -> None:
+        for key, n in zip(*np.unique(keys, return_counts=True), strict=True):
+            into[divmod(int(key), files)] += int(n)
 
     def merge(self, other: Accounts) -> None:
         """Take over the counts of another worker."""
@@ -87,3 +104,8 @@ class Accounts:
         outcome = np.concatenate([o for _, o in self.listed]).astype(np.int64)
         order = np.argsort(record)
         return record[order], outcome[order]
+
+
+def _runs(values: np.ndarray) -> int:
+    """Number of runs of equal values."""
+    return int((values[1:] != values[:-1]).sum()) + 1 if len(values) else 0

@@ -15,20 +15,20 @@ from cohortflow.history.columns import FAULT_OF
 from cohortflow.history.engine import Engine
 
 
-def repeated(rows: Columns) -> np.ndarray:
-    """(rows,) whether a row equals an earlier one; rows sorted by c, t, code, record number."""
-    out = np.zeros(len(rows["c"]), dtype=bool)
-    same = np.ones(max(len(out) - 1, 0), dtype=bool)
-    for name in ("c", "t", "code"):
-        same &= rows[name][1:] == rows[name][:-1]
-    if not same.any():
-        return out
-    run = np.cumsum(np.append(True, ~same))
-    tied = np.flatnonzero(np.append(same, False) | np.append(False, same))
-    order = tied[np.lexsort([rows["r"][tied], rows["h"][tied], run[tied]])]
-    again = (run[order][1:] == run[order][:-1]) & (rows["h"][order][1:] == rows["h"][order][:-1])
-    out[order[1:][again]] = True
-    return out
+def repeated(order: np.ndarray, tied: np.ndarray, rows: Columns) -> np.ndarray:
+    """Rows that equal an earlier one in every column.
+
+    order : good rows by customer, instant, event, record number;  tied : places in it that agree with the next one
+    in the first three
+    """
+    if len(tied) == 0:
+        return tied
+    crowd = np.union1d(tied, tied + 1)
+    run = np.cumsum(np.append(True, ~np.isin(crowd[:-1], tied)))
+    row = order[crowd]
+    by = np.lexsort([rows["r"][row], rows["h"][row], run])
+    row, run, h = row[by], run[by], rows["h"][row[by]]
+    return row[1:][(run[1:] == run[:-1]) & (h[1:] == h[:-1])]
 
 
 def mark_superseded(engine: Engine, *, has_loaded: bool) -> int:

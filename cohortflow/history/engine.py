@@ -18,7 +18,7 @@ import duckdb
 import numpy as np
 
 MEMORY_MB = 1000  # for the engine; the sweep adds some hundred MB of its own
-ON_DISK_FROM = 250_000_000  # bytes of input from which the tables live in a work file
+ON_DISK_FROM = 700_000_000  # bytes of input from which the tables live in a work file
 
 
 class Engine:

@@ -16,7 +16,7 @@ from cohortflow.history.accounts import ASIDE, USED
 from cohortflow.history.cells import NO_DATE, Cells, Columns, plan_cells
 from cohortflow.history.columns import FAULT_OF, IGNORED, UNKNOWN
 from cohortflow.history.duplicates import mark_superseded, repeated
-from cohortflow.history.fetch import ordered as in_order_of
+from cohortflow.history.fetch import ordered
 from cohortflow.history.follow import EventFollower, Span
 from cohortflow.history.reading import Reading
 from cohortflow.history.rules import Rules
@@ -90,7 +90,11 @@ class EventLayout:
 
     def label(self, rows: Columns, size: int) -> Labelled:
         """Outcomes and states of a block of `size` customers."""
-        order, outcome, kept = self._outcomes(rows)
+        outcome = self._outcomes(rows)
+        good = np.flatnonzero(rows["fault"] == 0)
+        order, tied = ordered([rows[name][good] for name in ("c", "t", "code")], rows["r"][good])
+        order = good[order]
+        kept = self._drop_repeated(order, tied, rows, outcome)
         used = order[outcome[order] == USED]
         mine = {name: rows[name][used] for name in ("c", "t", "code")}
         mine["p"] = (np.searchsorted(self.window.bounds, mine["t"], side="right") - 1).astype(np.int32)
@@ -114,6 +118,7 @@ class EventLayout:
             first=first_rows(used, mine["c"], size),
             used=used,
             any_exit=followed.any_exit,
+            silences=followed.silences,
             notes={
                 "identical_rows_kept": kept,
                 "ties_decided_by_order": cells.decided_by_ties(self.asked),
@@ -134,34 +139,36 @@ class EventLayout:
             if c.kind == "last_event"
         ]
 
-    def _outcomes(self, rows: Columns) -> tuple[np.ndarray, np.ndarray, int]:
-        """(order of the rows, outcome of each, identical rows kept)."""
-        order = in_order_of([rows["c"], rows["t"], rows["code"]], rows["r"])
-        t, code, window = rows["t"], rows["code"], self.window
-        outcome = rows["fault"].astype(np.int16)
-        for reason, where in (
-            ("incomplete_period", t >= window.end),
-            ("after_as_of", t >= window.as_of_end),
-            ("before_log_start", t < window.start),
-            (
-                "outside_calendar",
-                t < window.bounds[0] if window.start == LONG_AGO else np.zeros(1, dtype=bool),
-            ),
-            ("unknown_event", code == UNKNOWN),
-            ("ignored_event", code == IGNORED),
-        ):
-            outcome[where & (rows["fault"] == 0)] = ASIDE[reason]
-        ordered = {name: rows[name][order] for name in ("c", "t", "code", "r", "h")}
-        ordered["code"] = np.where(rows["fault"][order] == 0, ordered["code"], np.int16(-3))
-        again = repeated(ordered) & (rows["fault"][order] == 0)
-        if not again.any():
-            return order, outcome, 0
-        again = order[again]
+    def _outcomes(self, rows: Columns) -> np.ndarray:
+        """Outcome of each row before duplicates; later lines of the table below go first."""
+        t, code, window, fault = rows["t"], rows["code"], self.window, rows["fault"]
+        outcome = fault.astype(np.int16)
+        if fault.any() or t.min() < window.start or t.max() >= window.end or code.min() < 0:
+            good = fault == 0
+            early = window.bounds[0] if window.start == LONG_AGO else window.start
+            for reason, where in (
+                ("incomplete_period", t >= window.end),
+                ("after_as_of", t >= window.as_of_end),
+                ("outside_calendar", t < early),
+                ("before_log_start", t < window.start),
+                ("unknown_event", code == UNKNOWN),
+                ("ignored_event", code == IGNORED),
+            ):
+                outcome[where & good] = ASIDE[reason]
+        return outcome
+
+    def _drop_repeated(
+        self, order: np.ndarray, tied: np.ndarray, rows: Columns, outcome: np.ndarray
+    ) -> int:
+        """Mark identical rows as duplicates where that is certain; how many others are kept."""
+        again = repeated(order, tied, rows)
+        if len(again) == 0:
+            return 0
         certain = rows["form"][again] > 0 if self.clocked else np.zeros(len(again), dtype=bool)
         if "own" in rows:
             certain = certain | rows["own"][again].astype(bool)
         outcome[again[certain]] = FAULT_OF["identical"]
-        return order, outcome, int((~certain).sum())
+        return int((~certain).sum())
 
 
 # ---- the window ----

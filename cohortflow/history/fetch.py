@@ -109,29 +109,38 @@ def number_segments(engine: Engine) -> list[str]:
     return names
 
 
-def ordered(keys: Sequence[np.ndarray], record: np.ndarray) -> np.ndarray:
-    """The order of rows by keys (first key first), then by record number.
+def ordered(keys: Sequence[np.ndarray], record: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """(order of rows by keys, first key first, then by record number; places in it whose keys equal the next one's).
 
     The keys are packed into one number where 63 bits hold their ranges; only rows that tie are looked at again.
     """
     if len(record) == 0:
-        return np.empty(0, dtype=np.int64)
+        return np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64)
     lows = [int(k.min()) for k in keys]
     sizes = [int(k.max()) - low + 1 for k, low in zip(keys, lows, strict=True)]
     room = 1
     for size in sizes:
         room *= size
     if room >= 2**63:
-        return np.lexsort([record, *reversed(keys)])
-    packed = np.zeros(len(record), dtype=np.int64)
-    for key, low, size in zip(keys, lows, sizes, strict=True):
+        return _by_lexsort(keys, record)
+    packed = keys[0].astype(np.int64)
+    packed -= lows[0]
+    for key, low, size in zip(keys[1:], lows[1:], sizes[1:], strict=True):
         packed *= size
         packed += key
         packed -= low
     order = np.argsort(packed)
     packed = packed[order]
-    same = packed[1:] == packed[:-1]
-    if same.any():
-        tied = np.flatnonzero(np.append(same, False) | np.append(False, same))
-        order[tied] = order[tied][np.lexsort([record[order[tied]], packed[tied]])]
-    return order
+    tied = np.flatnonzero(packed[1:] == packed[:-1])
+    if len(tied):
+        crowd = np.union1d(tied, tied + 1)
+        order[crowd] = order[crowd][np.lexsort([record[order[crowd]], packed[crowd]])]
+    return order, tied
+
+
+def _by_lexsort(keys: Sequence[np.ndarray], record: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    order = np.lexsort([record, *reversed(keys)])
+    same = np.ones(len(order) - 1, dtype=bool)
+    for key in keys:
+        same &= key[order[1:]] == key[order[:-1]]
+    return order, np.flatnonzero(same)

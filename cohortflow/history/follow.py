@@ -25,6 +25,7 @@ import numpy as np
 
 from cohortflow.history.cells import Cells, Columns
 from cohortflow.history.rules import Memory, Rules, word
+from cohortflow.history.silences import Watch, watched
 from cohortflow.tally import KINDS
 
 JOINED, RETURNED, UNKNOWN_HISTORY = (KINDS.index(k) for k in ("joined", "returned", "unknown"))
@@ -39,6 +40,7 @@ class Followed:
     origin : exit from which a return comes, -1;  tenure : periods since the stay began, -1 = unknown
     memo : 0 joined_and_left, 1 returned_and_left in the period, -1 = none;  memo_state : the exit
     aside : places of the used rows that are set aside after an exit
+    silences : one row a silence, see silences.py
     without_join : (B,) first seen after the warm-up without a join event, where joins are named
     """
 
@@ -52,6 +54,7 @@ class Followed:
     aside: list[np.ndarray]
     any_exit: bool = False
     amount: np.ndarray | None = None
+    silences: Columns | None = None
 
 
 @dataclass(frozen=True)
@@ -72,6 +75,7 @@ class EventFollower:
     def __init__(self, rules: Rules, span: Span) -> None:
         self.rules, self.span, self.plan = rules, span, rules.plan
         study = rules.study
+        self.watched = watched(study, rules.place)
         self.joins = frozenset(rules.place[n] for n in study.input.joins)
         self.returns_of_state = np.full(len(study.states) + 1, -1, dtype=np.int64)
         for name in study.states.exits:
@@ -87,6 +91,7 @@ class EventFollower:
         dense = cells.dense()
         out = blank(periods, size)
         memory = Memory(self.rules, periods, size)
+        watch = Watch(self.rules, dense, self.watched)
         where = np.full(size, UNSEEN, dtype=np.int8)
         count_from = np.zeros(size, dtype=np.int32)
         for t in range(periods):
@@ -102,6 +107,8 @@ class EventFollower:
             memory.take_in(t, row)
             here = new | back | (where == LIVE)
             self._label(t, here, new, back, memory, where, out)
+            watch.take_in(t, memory, where)
+        out.silences = watch.table()
         self._cut(out, count_from)
         if self.plan.amount:
             out.amount = dense["amount"]

@@ -71,7 +71,7 @@ class HistoryLayout:
         """Outcomes and states of a block of `size` customers."""
         outcome = self._outcomes(rows)
         places = np.flatnonzero(outcome == USED)
-        order = places[ordered([rows["c"][places], rows["p"][places]], rows["r"][places])]
+        order = places[ordered([rows["c"][places], rows["p"][places]], rows["r"][places])[0]]
         last = self._settle(rows, order, outcome)
         periods = self.follower.periods
         at = (rows["p"][last] - self.first, rows["c"][last])

@@ -20,6 +20,7 @@ from cohortflow.history.findings import note_findings
 from cohortflow.history.fetch import Part, block_size, number_segments, parts
 from cohortflow.history.paths import PathSample
 from cohortflow.history.reading import Reading
+from cohortflow.history.silences import by_silence
 from cohortflow.history.tabulate import Block, Tabulator
 from cohortflow.tally import COARSE_BITS, CUSTOMERS_FINEST, FINEST_BITS, KEYS, Meta, Tally
 
@@ -47,6 +48,7 @@ class Labelled:
     used: np.ndarray
     any_exit: bool
     amount: np.ndarray | None = None
+    silences: Columns | None = None
     notes: dict[str, int] = field(default_factory=dict)
 
 
@@ -158,7 +160,7 @@ class Sweep:
         done = layout.label(rows, size)
         worker.any_exit |= done.any_exit
         worker.notes.update(done.notes)
-        worker.accounts.add(done.outcome, rows["r"], rows["c"])
+        worker.accounts.add(done.outcome, rows["r"], rows["c"], done.used, size)
         worker.notes["busiest"] = max(worker.notes["busiest"], int(np.bincount(rows["c"]).max(initial=0)))
         segment, weight = self._first_values(rows, done, worker)
         block = Block(
@@ -176,6 +178,8 @@ class Sweep:
             amount=done.amount,
         )
         worker.tabulator.add(block)
+        if silences := dict(done.silences or {}):
+            worker.tabulator.adders["silences"].add({"segment": segment[silences.pop("c")], **silences})
 
     def _first_values(
         self, rows: Columns, done: Labelled, worker: _Worker
@@ -217,6 +221,7 @@ class Sweep:
         buckets = buckets >> (self.bits - bits)
         weighted = "weight" in reading.loaded.has
         missing = {"spells"} | (set() if "amount" in reading.loaded.has else {"amounts"})
+        missing |= set() if by_silence(study) else {"silences"}
         meta = Meta(
             states=study.states,
             calendar=study.calendar,

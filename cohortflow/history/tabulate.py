@@ -69,7 +69,7 @@ class Tabulator:
         self._starts(block)
         self._contexts(block, rows)
         self._ages(block, rows)
-        self._steps(block, rows, after)
+        self._steps(block, after)
         self._memos(block)
         if block.amount is not None:
             money = block.amount[t, b]
@@ -156,28 +156,32 @@ class Tabulator:
         }
         self.adders["ages"].add(keys)
 
-    def _steps(self, block: Block, rows: _Rows, after: np.ndarray) -> None:
+    def _steps(self, block: Block, after: np.ndarray) -> None:
         """Pairs k periods apart within a stay; an exit, once reached, is kept."""
-        began, _ = stays_so_far(block)
-        final = final_exits(block, after, self.is_exit)
-        periods = len(block.state)
+        periods, size = block.state.shape
+        states = len(self.states)
+        exited, ended = stay_ends(block, after, self.is_exit)
+        segments, place = np.unique(block.segment, return_inverse=True)
+        origin = (block.state >= 0) & ~self.is_exit[block.state]
+        base = (place * periods + np.arange(periods)[:, None]) * states + block.state
+        room = len(segments) * periods * states
+        base = np.where(origin, base, room) * (states + 1)
         for k in range(1, min(STEPS_AHEAD, periods - 1) + 1):
-            origin = block.state[:-k]
-            same = (block.state[k:] >= 0) & (began[k:] == began[:-k])
-            exited, ended = final
-            later = np.where(same, block.state[k:], -1)
-            gone = (ended[:-k] >= 0) & (ended[:-k] <= np.arange(k, periods)[:, None])
-            later = np.where(gone, exited[:-k], later)
-            ok = (origin >= 0) & ~self.is_exit[origin] & (later >= 0)
-            t, b = np.nonzero(ok)
+            within = ended[:-k] >= np.arange(k, periods, dtype=np.int16)[:, None]
+            later = np.where(within, block.state[k:], exited[:-k])
+            code = base[:-k] + np.where(later >= 0, later, states)
+            counts = np.bincount(code.ravel(), minlength=(room + 1) * (states + 1))
+            found = np.flatnonzero(counts[: room * (states + 1)])
+            where, later = np.divmod(found, states + 1)
+            found, where = found[later < states], where[later < states]
             keys = {
-                "segment": block.segment[b],
-                "period": t + block.first,
+                "segment": segments[where // states // periods],
+                "period": where // states % periods + block.first,
                 "k": k,
-                "state": origin[t, b],
-                "later": later[t, b],
+                "state": where % states,
+                "later": later[later < states],
             }
-            self.adders["steps"].add(keys)
+            self.adders["steps"].add(keys, {"n": counts[found]})
 
     def _memos(self, block: Block) -> None:
         t, b = np.nonzero(block.memo >= 0)
@@ -264,18 +268,16 @@ def spells_so_far(block: Block) -> tuple[np.ndarray, np.ndarray]:
     return spell, previous
 
 
-def final_exits(block: Block, after: np.ndarray, is_exit: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """(T, B) exit that ends the stay of a row, and its period; -1 = none."""
+def stay_ends(block: Block, after: np.ndarray, is_exit: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """(T, B) exit that ends the stay of a row, -1 = none, and the period of the stay's last row."""
     exited = np.full(block.state.shape, -1, dtype=np.int8)
-    ended = np.full(block.state.shape, -1, dtype=np.int32)
+    ended = np.full(block.state.shape, -1, dtype=np.int16)
     which = np.full(block.state.shape[1], -1, dtype=np.int8)
-    when = np.full(block.state.shape[1], -1, dtype=np.int32)
+    when = np.full(block.state.shape[1], -1, dtype=np.int16)
     for t in range(len(block.state) - 1, -1, -1):
         state = block.state[t]
-        here = state >= 0
-        leaves = here & is_exit[state]
-        stops = here & (after[t] < 0) & ~leaves
-        which = np.where(leaves, state, np.where(stops, -1, which)).astype(np.int8)
-        when = np.where(leaves, t, np.where(stops, -1, when)).astype(np.int32)
+        stops = (state >= 0) & (after[t] < 0)
+        np.copyto(when, np.int16(t), where=stops)
+        np.copyto(which, np.where(is_exit[state], state, -1), where=stops, casting="same_kind")
         exited[t], ended[t] = which, when
     return exited, ended
