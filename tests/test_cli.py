@@ -117,7 +117,7 @@ def test_the_version_is_printed():
 @pytest.mark.parametrize(
     ("arguments", "text"),
     [
-        (["chekc", "x"], 'There is no command "chekc" (did you mean "check"?). Commands: "demo", "check"'),
+        (["chekc", "x"], 'There is no command "chekc" (did you mean "check"?). Commands: "demo", "draft", "check"'),
         (["check"], "Missing argument 'STUDY'. See `cohortflow check --help`."),
         (["check", "none.toml"], "study: none.toml: cannot read the study file: No such file"),
         (["check", "none.csv"], "input: none.csv: cannot read the data file"),

@@ -84,6 +84,8 @@ def test_the_folder_holds_record_tables_counts_charts_and_page(made):
         "accounting",
         "rates",
         "transitions",
+        "adequacy",
+        "backtest",
         "projection",
         "rollforward",
         "band_parts",
@@ -91,6 +93,7 @@ def test_the_folder_holds_record_tables_counts_charts_and_page(made):
         "exits",
         "cohorts",
         "retention",
+        "levers",
     }
     assert set(made.tables) == expected
 
@@ -158,7 +161,8 @@ def test_segments_have_rows_of_their_own(made):
 def test_stages_do_less(tmp_path):
     study = written(tmp_path)
     assert list(run(study, upto="check").tables) == ["accounting"]
-    assert list(run(study, upto="fit").tables) == ["accounting", "transitions"]
+    assert list(run(study, upto="fit").tables) == ["accounting", "transitions", "adequacy"]
+    assert list(run(study, upto="backtest").tables) == ["accounting", "transitions", "backtest"]
     done = run(study, upto="project", out=tmp_path / "ahead")
     assert not (done.path / "report.html").exists() and (done.path / "tables" / "projection.csv").exists()
     with pytest.raises(CallError, match=r'Unknown stage "fitt" \(did you mean "fit"\?\)'):
@@ -207,9 +211,7 @@ def test_nothing_is_overwritten_and_nothing_is_left_after_a_refusal(made, tmp_pa
     text = STUDY.replace(
         'name = "left"\nrole = "exit"', 'name = "left"\nrole = "exit"\n[model]\nname = "best"'
     )
-    with pytest.raises(
-        CallError, match='The model "best" is chosen by back-tests, which this version does not make'
-    ):
+    with pytest.raises(NotIdentified, match="There is no past origin from which every model could be fitted"):
         run(written(tmp_path / "in", text), out=tmp_path / "out")
     assert [p.name for p in tmp_path.iterdir()] == ["in"]
 
@@ -228,7 +230,7 @@ def test_parts_that_are_not_used_yet_say_so(tmp_path):
     assert done.warnings == ("[[scenario]] was read and checked, but this version does not use it yet.",)
 
 
-def test_observed_value_is_refused_as_a_table_not_as_a_run(tmp_path):
+def test_observed_contributions_are_the_mean_amounts_times_the_margin(tmp_path):
     money = '[value]\ncurrency = "GBP"\nper_period = "observed"\nmargin = 0.3\n'
     study = written(tmp_path, STUDY.replace('state = "state"', 'state = "state"\namount = "paid"') + money)
     rows = panel(PATHS).splitlines()
@@ -236,7 +238,11 @@ def test_observed_value_is_refused_as_a_table_not_as_a_run(tmp_path):
         "\n".join([rows[0] + ",paid", *(r + ",3" for r in rows[1:-1])]) + "\n"
     )
     done = run(study, upto="project")
-    assert "value" not in done.tables and '"observed" is read and checked' in done.absent["value"]
+    again = cf.value(
+        done.fit, per_period="observed", margin=0.3, currency="GBP", start=done.tally.mix(),
+        joiners=done.forecasts["all"].joiners.a_period(), level=study.level, rng=study.seed,
+    )  # fmt: skip
+    pd.testing.assert_frame_equal(done.tables["value"], again.to_frame())
 
 
 # ---- layouts ----
