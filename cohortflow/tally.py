@@ -18,6 +18,10 @@ paths     run-length state paths of a sample of customers: "24285 2*3 1*4 -*2 0*
           state*periods, "-" for a gap; level = leading zero bits of the sampling hash
 amounts   money by period and state: n rows, total and total of squares of the customer's sum in the period
 spells    time spent in a state, in days, by what ended it (next_state; -1 = still there)
+silences  of customers with an exit by silence in the study: periods without its `of` events after one of them;
+          state = the exit, entered = length from which the rule's other conditions held, length = silent periods
+          seen, ended = as_of (still silent on the last day) | event (an `of` event came) | otherwise (another exit,
+          or the other conditions ceased to hold)
 memos     stays that began and ended within one period: kind = joined_and_left | returned_and_left
 """
 
@@ -39,6 +43,7 @@ from cohortflow.states import States
 FORMAT_VERSION = 1
 ENDS = ("moved", "as_of", "exit", "unseen")
 KINDS = ("joined", "returned", "unknown")
+SILENCE_ENDS = ("as_of", "event", "otherwise")
 MEMOS = ("joined_and_left", "returned_and_left")
 FINEST_BITS, COARSE_BITS = 62, 7
 CUSTOMERS_FINEST = 20_000
@@ -53,6 +58,7 @@ KEYS: dict[str, tuple[str, ...]] = {
     "paths": ("segment", "level", "path"),
     "amounts": ("bucket", "segment", "period", "state"),
     "spells": ("bucket", "segment", "state", "next_state"),
+    "silences": ("segment", "state", "entered", "length", "ended"),
     "memos": ("segment", "period", "kind", "state"),
 }
 VALUES: dict[str, tuple[str, ...]] = {
@@ -64,6 +70,7 @@ VALUES: dict[str, tuple[str, ...]] = {
     "paths": ("n",),
     "amounts": ("n", "total", "squares"),
     "spells": ("n", "days"),
+    "silences": ("n",),
     "memos": ("n",),
 }
 
@@ -227,7 +234,7 @@ class Tally(Record):
     def at_origin(self, period: str | int) -> Tally:
         """What this tally was when `period` was the last complete one: everything later is forgotten.
 
-        `spells` cannot be cut back (it has no dates) and is not offered.
+        `spells` and `silences` cannot be cut back (they have no dates) and are not offered.
         """
         from cohortflow.tally_cuts import cut_back
 

@@ -29,7 +29,7 @@ def cut_back(tally: Tally, origin: int) -> Tally:
         tally.meta,
         last=origin,
         customers=int(first_starts["n"].sum()),
-        tables=tuple(n for n in tally.meta.tables if n != "spells"),
+        tables=tuple(n for n in tally.meta.tables if n not in ("spells", "silences")),
     )
     return Tally.build(meta, cut)
 

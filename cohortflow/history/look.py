@@ -46,7 +46,7 @@ def profile(
     ...     _ = log.write_text("\\n".join(lines))
     ...     found = profile([log])
     >>> found, dict(found.roles)
-    (<profile of 40 rows, 40 customers, layout events>, {'customer': 'member', 'time': 'at', 'event': 'what'})
+    (<profile of 40 rows, 40 customers, layout events>, {'time': 'at', 'customer': 'member', 'event': 'what'})
     """
     known = _known(columns)
     paths = given_files(files)

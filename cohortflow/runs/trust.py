@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import replace
 
 from cohortflow.assessment import Adequacy, Backtest, Choice, adequacy, backtest, choose
+from cohortflow.assessment.windows import Windows, silence_windows
 from cohortflow.errors import NotIdentified
 from cohortflow.estimator.variants import MODELS
 from cohortflow.runs.steps import model_options
@@ -62,3 +63,15 @@ def _horizon(study: Study, tally: Tally) -> int:
 
 def _can_segment(study: Study, tally: Tally) -> bool:
     return any(role == "segment" for _, role in tally.meta.segment_columns) and study.model.name == BEST
+
+
+def windows_study(study: Study, tally: Tally) -> Windows:
+    """`cf.silence_windows(tally, {exit: 2k})`: windows of 1 to 2k periods for each exit by silence of k."""
+    longest: dict[str, int] = {}
+    for rule in study.rules if study.input.layout == "events" else ():
+        asked = [condition.k for condition in rule.conditions if condition.kind == "silent_for"]
+        if rule.role == "exit" and asked:
+            longest[rule.name] = 2 * max(asked)
+    if not longest:
+        raise NotIdentified("No exit of the study asks for silence (silent_for), so there is no window to judge.")
+    return silence_windows(tally, longest, level=study.level)
