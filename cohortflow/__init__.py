@@ -41,6 +41,7 @@ _HOME = {
     "compare_arms": "whatif.arms",
     "trial_size": "whatif.trial_size",
     "run": "runs.folder",
+    "compare": "runs.comparison",
     "write_report": "report.of_run",
 }
 __all__ = ["__version__", *_HOME]

@@ -26,7 +26,8 @@ TITLES = {
     "moves": "Rates of moves", "diagram": "States and moves", "base": "The base over time",
     "rollforward": "From opening to closing", "settling": "Approach to the settled mix",
     "groups": "Groups that nobody leaves", "retention": "Retention", "exit_time": "Time until leaving",
-    "exit_reason": "Ways of leaving",
+    "exit_reason": "Ways of leaving", "bridge_all_live": "From the last forecast to this one",
+    "actual": "Forecast and counts", "levers_0": "What one point of each move is worth",
 }  # fmt: skip
 _COLOURS = {light: f"var(--{name})" for name, (light, _) in THEME.items()}
 
@@ -59,7 +60,7 @@ def page_html(content: Content, drawn: Mapping[str, Drawn] | None = None) -> str
     """
     drawn = wide_charts(content) if drawn is None else drawn
     pictures = {e.key: picture(e, drawn[e.key]) for e in content.exhibits() if e.draw is not None}
-    return _templates().get_template("page.html").render(
+    return templates().get_template("page.html").render(
         content=content, facts=content.facts, sections=sections_of(content), pictures=pictures, theme=THEME,
         titles={s.key: s.title for s in content.sections},
     )  # fmt: skip
@@ -73,9 +74,9 @@ def fragment_html(content: Content, section: str) -> str:
             f'There is no section "{section}"{nearest(section, known)}; there are {listed(known)}.'
         )
     chosen = [s for s in content.sections if s.key == section]
-    pictures = {e.key: picture(e, _drawn(e, WIDE)) for s in chosen for e in s.exhibits if e.draw is not None}
+    pictures = {e.key: picture(e, drawn_exhibit(e, WIDE)) for s in chosen for e in s.exhibits if e.draw is not None}
     return (
-        _templates()
+        templates()
         .get_template("fragment.html")
         .render(content=content, facts=content.facts, sections=chosen, pictures=pictures, theme=THEME)
     )
@@ -83,10 +84,10 @@ def fragment_html(content: Content, section: str) -> str:
 
 def wide_charts(content: Content) -> dict[str, Drawn]:
     """Every chart of the report at its full width, by key."""
-    return {e.key: _drawn(e, WIDE) for e in content.exhibits() if e.draw is not None}
+    return {e.key: drawn_exhibit(e, WIDE) for e in content.exhibits() if e.draw is not None}
 
 
-def _drawn(exhibit: Exhibit, width: float) -> Drawn:
+def drawn_exhibit(exhibit: Exhibit, width: float) -> Drawn:
     assert exhibit.draw is not None
     figure = exhibit.draw(width)
     return Drawn(svg(figure), figure.alt, round(96 * float(figure.get_size_inches()[0])))
@@ -96,7 +97,7 @@ def picture(exhibit: Exhibit, wide: Drawn) -> Picture:
     """An exhibit's chart for the page."""
     title = TITLES.get(exhibit.key, exhibit.key)
     if exhibit.narrow:
-        return Picture(title, inline(wide, exhibit.key), inline(_drawn(exhibit, NARROW), f"{exhibit.key}-n"))
+        return Picture(title, inline(wide, exhibit.key), inline(drawn_exhibit(exhibit, NARROW), f"{exhibit.key}-n"))
     return Picture(title, inline(wide, exhibit.key, least=max(640, round(0.8 * wide.pixels))), None)
 
 
@@ -122,7 +123,7 @@ def inline(drawn: Drawn, key: str, *, least: int = 0) -> Markup:
 
 
 @cache
-def _templates() -> Environment:
+def templates() -> Environment:
     env = Environment(
         loader=PackageLoader("cohortflow.report", "template"),
         autoescape=True,

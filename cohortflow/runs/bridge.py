@@ -27,7 +27,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from cohortflow.errors import InputError
+from cohortflow.errors import InputError, NotIdentified
 from cohortflow.runs.drivers import (
     ADJUSTED,
     CONTRIBUTION,
@@ -100,11 +100,11 @@ class Bridge:
 def bridge(earlier: OpenRun, later: OpenRun) -> Bridge:
     """The bridge for every period that both forecasts cover, the later base included.
 
-    InputError when no period is common, or when a run does not come again from its own counts.
+    InputError when no period is common, or when a run does not come again from its own counts; NotIdentified
+    when there is nothing that both know.
     """
     drivers = Drivers.of(earlier, later)
-    first = _as_published(earlier)
-    periods = np.arange(later.base, later.base + max(drivers.steps, 0) + 1)
+    periods = range(later.base, later.base + drivers.steps + 1)
     if drivers.steps < 0:
         end = earlier.tally.calendar.label(earlier.base + earlier.study.horizon)
         raise InputError(
@@ -112,7 +112,7 @@ def bridge(earlier: OpenRun, later: OpenRun) -> Bridge:
             f"{later.label}. Compare runs that overlap."
         )
     _as_published(later)
-    last = _lined_up(first, earlier, drivers, periods)
+    last = _lined_up(_as_published(earlier), earlier, drivers, periods)
     memory: dict[frozenset[str], Array] = {}
 
     def value(choice: frozenset[str]) -> Array:
@@ -128,8 +128,13 @@ def bridge(earlier: OpenRun, later: OpenRun) -> Bridge:
     if not drivers.separates_segments:
         del parts["segment_mix"]
     known = _known(earlier, later, drivers, periods)
+    if not known.any():
+        raise NotIdentified(
+            "No period of the forecasts has a figure that both know: a state in the base has no rates yet. "
+            "Compare later runs, or runs over a longer history."
+        )
     tables = {LAST: last, **{name: parts[name] for name in PARTS if name in parts}, THIS: value(everything)}
-    labels = later.tally.calendar.labels(periods)
+    labels = [later.tally.calendar.label(p) for p in periods]
     frame = _long(tables, drivers, labels, known)
     return Bridge(frame, _details(drivers, parts, labels, known), _notes(earlier, later, drivers))
 
@@ -149,7 +154,7 @@ def _as_published(run: OpenRun) -> Array:
     return made
 
 
-def _lined_up(first: Array, earlier: OpenRun, drivers: Drivers, periods: Array) -> Array:
+def _lined_up(first: Array, earlier: OpenRun, drivers: Drivers, periods: Sequence[int]) -> Array:
     """(n+1, Q) what the earlier run said of the periods b .. b+n, in the drivers' quantities."""
     own = Drivers.of(earlier, earlier)
     rows = first[drivers.gap : drivers.gap + len(periods)]
@@ -159,13 +164,13 @@ def _lined_up(first: Array, earlier: OpenRun, drivers: Drivers, periods: Array) 
     return out
 
 
-def _known(earlier: OpenRun, later: OpenRun, drivers: Drivers, periods: Array) -> Array:
+def _known(earlier: OpenRun, later: OpenRun, drivers: Drivers, periods: Sequence[int]) -> Array:
     """(n+1, Q) flags: both runs know the figure; the contribution of the period of the count is no forecast."""
     flags = np.ones((len(periods), len(drivers.quantities)), dtype=bool)
     for run in (earlier, later):
         table = run.projection.pivot(index="periods_ahead", columns="state", values="customers")
         for t, period in enumerate(periods):
-            row = table.loc[int(period) - run.base, list(drivers.weights)].to_numpy(dtype=float)
+            row = table.loc[period - run.base, list(drivers.weights)].to_numpy(dtype=float)
             flags[t, : len(row)] &= ~np.isnan(row)
             flags[t, len(row) :] &= not np.isnan(row).any()
     if drivers.has_money:

@@ -19,7 +19,7 @@ from cohortflow.record import Record, frozen_mapping, plain
 from cohortflow.report.table import csv_text
 from cohortflow.runs.bridge import bridge
 from cohortflow.runs.folder import Run
-from cohortflow.runs.opened import OpenRun, open_run, read_table
+from cohortflow.runs.opened import OpenRun, open_run
 from cohortflow.runs.outcome import against_budget, calibration, outcome, outcome_lines
 from cohortflow.runs.place import whole_folder, write_text
 from cohortflow.states import ALL_LIVE
@@ -104,9 +104,10 @@ def compare(
 
     >>> import pathlib, tempfile
     >>> import cohortflow as cf
-    >>> rows = [f"{c},{t},{s}" for c in "abcdef" for t, s in enumerate("ffs" + "sl"[c < "c"] * 2) if t < 4]
+    >>> paths = {"ann": "ffss", "ben": "fsss", "cat": "fl", "dan": "fssl"}
     >>> names = {"f": "fresh", "s": "steady", "l": "left"}
-    >>> text = "customer,period,state\\n" + "\\n".join(r[:-1] + names[r[-1]] for r in rows)
+    >>> rows = [f"{who},{t},{names[s]}" for who, path in paths.items() for t, s in enumerate(path)]
+    >>> text = "\\n".join(["customer,period,state", *rows])
     >>> study = '''[study]\\nperiod = "step"\\nhorizon = 3\\n[input]\\nlayout = "history"
     ... files = ["panel.csv"]\\ncustomer = "customer"\\ntime = "period"\\nstate = "state"
     ... [[state]]\\nname = "fresh"\\nrole = "entry"\\n[[state]]\\nname = "steady"
@@ -117,7 +118,7 @@ def compare(
     ...     ahead = cf.run(folder / "panel.toml", upto="project", out=folder / "one")
     ...     same = cf.compare(folder / "one", folder / "one")
     >>> same
-    <all_live of 6: 2 as forecast from 3, 2 from 3>
+    <all_live of 6: 1 as forecast from 3, 1 from 3>
     """
     earlier, later = open_run(run_a), open_run(run_b)
     older = [open_run(run) for run in past]
@@ -129,7 +130,7 @@ def compare(
         "bridge": made.frame,
         "bridge_details": made.details,
         "outcome": pd.concat(outcomes, ignore_index=True),
-        "outcome_lines": outcome_lines(earlier, later.tally, _rollforward(run_a)),
+        "outcome_lines": outcome_lines(earlier, later.tally),
         "budget": against_budget(later),
         "calibration": calibration(outcomes),
         "settings": settings(earlier, later),
@@ -182,12 +183,6 @@ def _period(wanted: str | None, common: list[str]) -> str:
             f'Period "{wanted}" is not in both forecasts{nearest(wanted, common)}; they share {listed(common)}.'
         )
     return wanted
-
-
-def _rollforward(run: Source) -> pd.DataFrame:
-    if isinstance(run, (str, Path)):
-        return read_table(Path(run), "rollforward")
-    return run.tables["rollforward"] if isinstance(run, Run) else run.projection.iloc[:0]
 
 
 def settings(earlier: OpenRun, later: OpenRun) -> pd.DataFrame:

@@ -174,7 +174,7 @@ class Drivers:
             ),
             RATES: self.gap > 0,
             MODEL: self.old.study.model != self.new.study.model,
-            VALUE: self.has_money and not np.array_equal(self.old.money, self.new.money),
+            VALUE: not np.array_equal(self.money(frozenset()), self.money(frozenset({VALUE}))),
             ADJUSTED: bool(self.old.added.any() or self.new.added.any()),
         }
         return tuple(group for group in GROUPS if differs[group])

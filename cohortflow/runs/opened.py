@@ -33,7 +33,7 @@ from cohortflow.study.parts import (
 from cohortflow.tally import Tally
 
 TEXT = frozenset({"segment", "period", "kind", "state", "line", "exit", "measure", "from", "to", "quantity"})
-NEEDED = "projection"
+NEEDED = ("projection", "rollforward")
 
 
 @dataclass(frozen=True, eq=False)
@@ -42,6 +42,7 @@ class OpenRun:
 
     name : of its folder;  record : run.json;  by : the segment column it was also made for
     study : the forecast's settings only: rules and layout of the extract are not read back
+    projection, rollforward : those tables, of all customers
     """
 
     name: str
@@ -50,6 +51,7 @@ class OpenRun:
     tally: Tally
     by: str | None
     projection: pd.DataFrame
+    rollforward: pd.DataFrame
 
     @property
     def base(self) -> int:
@@ -72,20 +74,20 @@ def open_run(run: Run | OpenRun | str | Path) -> OpenRun:
     if isinstance(run, OpenRun):
         return run
     if isinstance(run, Run):
-        if run.tally is None or NEEDED not in run.tables:
+        if run.tally is None or NEEDED[0] not in run.tables:
             raise InputError(
                 f'The run of "{run.study.title}" holds no projection; make it with `cohortflow run`.'
             )
         name = run.path.name if run.path else run.study.title
-        return OpenRun(name, plain(record(run)), run.study, run.tally, run.by, _of_all(run.tables[NEEDED]))
+        tables = [_of_all(run.tables[table]) for table in NEEDED]
+        return OpenRun(name, plain(record(run)), run.study, run.tally, run.by, *tables)
     folder = Path(run)
     data = _read_record(folder)
     tally = load_tally(folder / "tally")
     study = study_of(data, tally)
-    projection = read_table(folder, NEEDED, (*tally.states.names, *study.totals))
-    return OpenRun(
-        folder.resolve().name, frozen_mapping(data), study, tally, data.get("by"), _of_all(projection)
-    )
+    names = (*tally.states.names, *study.totals)
+    tables = [_of_all(read_table(folder, table, names)) for table in NEEDED]
+    return OpenRun(folder.resolve().name, frozen_mapping(data), study, tally, data.get("by"), *tables)
 
 
 def _read_record(folder: Path) -> dict[str, Any]:
@@ -125,8 +127,18 @@ def read_table(folder: Path, name: str, names: Iterable[str] = ()) -> pd.DataFra
         if column in TEXT:
             frame[column] = frame[column].map(lambda text: written.get(text, text))
         else:
-            frame[column] = pd.to_numeric(frame[column].replace("", "nan"))
+            frame[column] = _numbers(frame[column], path)
     return frame
+
+
+def _numbers(cells: pd.Series, path: Path) -> list[float]:
+    try:
+        return [float(cell or "nan") for cell in cells]
+    except ValueError as error:
+        raise InputError(
+            f"{path}: the column {cells.name} holds something else than numbers ({error}); the file was changed. "
+            "Make the run again."
+        ) from None
 
 
 def _of_all(frame: pd.DataFrame) -> pd.DataFrame:

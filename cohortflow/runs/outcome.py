@@ -67,11 +67,11 @@ def outcome(earlier: OpenRun, tally: Tally) -> pd.DataFrame:
     return pd.DataFrame(rows, columns=OUTCOME).astype({"inside": "boolean"})
 
 
-def outcome_lines(earlier: OpenRun, tally: Tally, forecast: pd.DataFrame) -> pd.DataFrame:
+def outcome_lines(earlier: OpenRun, tally: Tally) -> pd.DataFrame:
     """The roll-forward's lines of the live base, forecast against counted, summed over the periods since.
 
-    forecast : the earlier run's table `rollforward`. Columns: run, first, last, line, exit, forecast, actual,
-    difference, relative. Empty where the counts do not tell who joined.
+    Columns: run, first, last, line, exit, forecast, actual, difference, relative. Empty where the counts do
+    not tell who joined.
     """
     try:
         seen = rollforward_actual(tally)
@@ -82,7 +82,9 @@ def outcome_lines(earlier: OpenRun, tally: Tally, forecast: pd.DataFrame) -> pd.
     periods = [label(p) for p in range(earlier.base + 1, last + 1)]
     if not periods:
         return pd.DataFrame(columns=OUTCOME_LINES)
-    said, was = (_summed(frame, kind, periods) for frame, kind in ((forecast, "forecast"), (seen, "actual")))
+    said, was = (
+        _summed(frame, kind, periods) for frame, kind in ((earlier.rollforward, "forecast"), (seen, "actual"))
+    )
     keys = sorted({*said, *was}, key=lambda key: (LINES.index(key[0]), key))
     rows = []
     for key in keys:
@@ -99,14 +101,17 @@ def _summed(frame: pd.DataFrame, kind: str, periods: Sequence[str]) -> dict[tupl
     own = own[own["period"].isin(periods)]
     own = own[(own["line"] != "opening") | (own["period"] == periods[0])]
     own = own[(own["line"] != "closing") | (own["period"] == periods[-1])]
-    return {key: float(n) for key, n in own.groupby(["line", "exit"])["customers"].sum().items()}
+    out: dict[tuple[str, str], float] = {}
+    for line, leaving, n in zip(own["line"], own["exit"], own["customers"], strict=True):
+        out[line, leaving] = out.get((line, leaving), 0.0) + float(n)
+    return out
 
 
 def against_budget(run: OpenRun) -> pd.DataFrame:
     """The run's budget beside what was counted or is forecast: period, quantity, budget, kind, value, low,
     high, difference (value - budget), relative, inside (the budget lies within the band)."""
     tally = run.tally
-    forecast = run.projection.set_index(["periods_ahead", "state"])
+    forecast = {(int(r["periods_ahead"]), r["state"]): r for r in run.projection.to_dict(orient="records")}
     rows = []
     for row in run.study.budget:
         ahead, period = row.period - run.base, tally.calendar.label(row.period)
@@ -114,7 +119,7 @@ def against_budget(run: OpenRun) -> pd.DataFrame:
         if tally.meta.first <= row.period <= run.base:
             kind, value = "actual", counted(tally, run.study.totals, tally.meta.first, row.period)[row.total]
         elif 1 <= ahead <= run.study.horizon:
-            found = forecast.loc[(ahead, row.total)]
+            found = forecast[ahead, row.total]
             kind, value, low, high = "forecast", *(float(found[c]) for c in ("customers", "low", "high"))
         else:
             continue
