@@ -147,6 +147,12 @@ def test_rows_without_data_are_nan_and_floors_hold():
     assert design_effects(even, covariance(even, "customer")).tolist()[0] == [0.25, 0.25]
 
 
+def test_a_level_stays_below_one_with_a_single_degree_of_freedom():
+    # Student's quantile for 99 % with 1 df is 63.7: as a normal quantile its level is 1 in double precision
+    cov = covariance(rows_of([("A", 0, 0, 0), ("B", 0, 0, 1)]), "customer")
+    assert cov.df == 1 and 0.999 < cov.level_for(0.99) < 1
+
+
 def test_frame_and_clipping():
     cov = covariance(
         rows_of([("A", 0, 0, 0), ("B", 0, 0, 1)]),

@@ -63,6 +63,13 @@ def test_rows_are_probability_rows_and_zeros_keep_their_meaning():
     assert (1 - drawn[:, 1, 1]).mean() == pytest.approx(0.5 / 3.5, rel=0.1)
 
 
+def test_a_row_whose_weights_all_vanish_keeps_its_estimate():
+    # a millionth of a move: gamma weights of shape 1e-6 are 0 in double precision nearly always
+    rows = RowCounts.of_matrix([[1e-6, 1e-6]], [[True, True]])
+    drawn = draw_rows(rows, covariance(rows, "multinomial"), 200, rng=1)
+    assert np.allclose(drawn.sum(axis=2), 1)
+
+
 def test_the_seed_decides_and_inputs_stay():
     rows = heterogeneous(50)
     cov = covariance(rows, "customer")

@@ -116,6 +116,13 @@ def test_segments_add_up():
     assert frame.groupby("segment")["count"].sum()["all"] == frame["count"].sum() / 2
 
 
+def test_a_segment_of_one_customer_has_plain_limits():
+    f = fit(tally(segment=np.append(1, np.zeros(299, int))), by="group")
+    frame = f.interval(clustered=True).to_frame().set_index("segment")
+    assert "no_buckets" in f.segments["b"].notes and frame.loc["b", "design_effect"].isna().all()
+    assert frame.loc["a", "design_effect"].notna().any()
+
+
 def test_draws_scatter_around_the_fit_and_keep_zeros():
     f = fit(tally())
     draws = f.draws(4000, rng=2)

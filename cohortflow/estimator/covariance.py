@@ -38,6 +38,7 @@ Array = NDArray[np.float64]
 KINDS = ("multinomial", "customer", "two_way")
 LEAST_DESIGN_EFFECT = 0.25
 LEAST_PERIODS = 1.5
+NEARLY_ONE = 1 - 1e-15
 
 
 @dataclass(frozen=True, repr=False, eq=False)
@@ -82,7 +83,7 @@ class Covariance(Record):
         if np.isinf(self.df):
             return level
         quantile = special.stdtrit(self.df, (1 + level) / 2)
-        return float(2 * special.ndtr(quantile) - 1)
+        return min(float(2 * special.ndtr(quantile) - 1), NEARLY_ONE)
 
     def to_frame(self) -> pd.DataFrame:
         """from, to, from_2, to_2, covariance: one row a pair of cells."""

@@ -69,7 +69,8 @@ def draw_rows(counts: RowCounts, cov: Covariance, n: int, *, rng: int | np.rando
         weights[:, unseen.ravel()] = random.gamma(each, size=(n, len(each))) / size
     drawn = weights.reshape(n, rows, -1)
     drawn[:, counts.at_risk <= 0] = np.nan
-    return drawn / drawn.sum(axis=2, keepdims=True)
+    total = drawn.sum(axis=2, keepdims=True)  # 0 where weights of a next to empty row all vanish
+    return np.where(total == 0, counts.P, drawn / np.where(total == 0, 1.0, total))
 
 
 def _shapes(counts: RowCounts, cov: Covariance, cells: NDArray[np.int64]) -> tuple[Array, Array]:

@@ -152,11 +152,15 @@ class Fit(Record):
         """Rates with limits (the table `transitions`), also of the segments if there are any.
 
         clustered : True uses the effective numbers of the customer-robust covariance, "two_way" those of the
-            two-way one; with few groups the normal quantile is replaced by Student's.
+            two-way one; with few groups the normal quantile is replaced by Student's. A segment with a single
+            bucket of customers has plain limits.
         """
         kind = clustered if isinstance(clustered, str) else ("customer" if clustered else "none")
         fits = {"all": self} if not self.segments else {"all": self, **self.segments}
-        tables = [f._intervals(level, method, kind, name) for name, f in fits.items()]
+        kinds = [kind if f is self or "no_buckets" not in f.notes else "none" for f in fits.values()]
+        tables = [
+            f._intervals(level, method, k, name) for k, (name, f) in zip(kinds, fits.items(), strict=True)
+        ]
         return Intervals(pd.concat(tables, ignore_index=True), level, tables[0]["method"].iloc[0], kind)
 
     def _intervals(self, level: float, method: str, kind: str, segment: str) -> pd.DataFrame:
