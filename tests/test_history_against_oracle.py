@@ -246,3 +246,17 @@ def test_instants_with_offsets_fall_into_local_months():
     assert [label(t) for t in starts["period"].sort_values()] == ["2025-04", "2025-06", "2025-10"]
     exits = moves[moves["end"] == ENDS.index("exit")]
     assert [label(t) for t in exits["period"].sort_values()] == ["2025-07", "2025-08"]
+
+
+def test_parts_without_customers_are_passed_over():
+    """One customer with more rows than a part holds: the other parts are empty."""
+    rules = (
+        StateRule("gone", "exit", ((Condition("silent_for", ("buy",), k=1),),)),
+        StateRule("here"),
+    )
+    spec = InputSpec(files=("log.csv",), customer="who", time="at", event="what", joins=("buy",))
+    study = Study(States(["gone", "here"], exits=["gone"]), as_of=date(2025, 3, 31), rules=rules, input=spec)
+    rows = [{"who": "a", "at": f"2025-01-{day:02d}", "what": "buy"} for day in range(1, 29)]
+    with patch("cohortflow.history.fetch.ROWS_AT_ONCE", 4):
+        tally = read(study, rows)[1]
+    assert tally.counts().tolist() == [[0, 0], [1, 0]]  # January here, February gone
