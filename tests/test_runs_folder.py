@@ -94,6 +94,7 @@ def test_the_folder_holds_record_tables_counts_charts_and_page(made):
         "cohorts",
         "retention",
         "levers",
+        "definitions",
     }
     assert set(made.tables) == expected
 

@@ -11,7 +11,6 @@ from cohortflow.study import Study
 HINTS = ("few_at_risk", "no_buckets")
 UNUSED = {
     "scenarios": "[[scenario]]",
-    "adjustments": "[[adjustment]]",
     "budget": "[budget]",
 }
 

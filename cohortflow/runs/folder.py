@@ -24,6 +24,7 @@ from cohortflow.runs import write
 from cohortflow.runs.findings import fit_findings, not_yet
 from cohortflow.runs.place import whole_folder
 from cohortflow.runs.plans import Plans, plan_tables, plans_study
+from cohortflow.runs.sign_off import sign_off_tables
 from cohortflow.runs.steps import Forecast, fit_study, forecast_study
 from cohortflow.runs.tables import fit_tables, forecast_tables, in_order
 from cohortflow.runs.trust import BEST, adequacy_study, backtest_study, chosen, windows_study
@@ -188,6 +189,8 @@ def _forecast(
         tables |= plan_tables(list(plans.values()))
         absent |= {what: why for part in plans.values() for what, why in part.absent.items()}
     tables |= {n: r.to_frame() for n, r in (("adequacy", trusted), ("backtest", tested)) if r is not None}
+    if forecasts:
+        tables |= sign_off_tables(study, tables)
     return Run(
         study,
         upto,

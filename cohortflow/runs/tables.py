@@ -17,6 +17,7 @@ ORDER = (
     "adequacy",
     "projection",
     "rollforward",
+    "rollforward_subtotals",
     "band_parts",
     "long_run",
     "exits",

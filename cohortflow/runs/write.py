@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 from cohortflow import __version__
 from cohortflow.history import save_tally
 from cohortflow.record import plain
+from cohortflow.report.definitions import assumption_log
 from cohortflow.report.table import csv_text
 from cohortflow.runs.place import MARK, write_text
 from cohortflow.runs.versions import made_at, versions
@@ -60,6 +61,7 @@ def record(done: Run) -> dict[str, Any]:
         "study": study.to_dict(),
         "set_by": dict(study.origin_of),
         "definitions": study.digest(),
+        "assumptions": assumption_log(study, model_chosen=done.choice is not None),
         "inputs": [asdict(file) for file in done.inputs],
         "accounting": done.tables["accounting"].to_dict(orient="records"),
         "findings": [finding.to_dict() for finding in done.findings],
