@@ -57,6 +57,7 @@ class Facts:
     people: Mapping[str, str] = field(default_factory=_empty)
     absent: Mapping[str, str] = field(default_factory=_empty)
     version: str = ""
+    currency: str = ""
     segment: str = "all"
 
     @property
@@ -110,6 +111,7 @@ class Section:
     exhibits: tuple[Exhibit, ...] = ()
     points: tuple[str, ...] = ()
     cautions: tuple[str, ...] = ()
+    panel: str = ""
     terms: tuple[tuple[str, str, str], ...] = ()
 
 

@@ -7,15 +7,17 @@ from pathlib import Path
 from typing import Any
 
 from cohortflow import __version__
-from cohortflow.errors import CallError, OutputError
+from cohortflow.errors import CallError, CohortflowError, OutputError
 from cohortflow.report.ahead import approach
 from cohortflow.report.content import Content, Facts
 from cohortflow.report.page import page_html, wide_charts
+from cohortflow.report.panel import panel
 from cohortflow.report.rules import rule_words
 from cohortflow.report.sections import gather
 from cohortflow.study import Study
 
 ALL = "all"
+SLIDERS = 6
 
 
 def content_of(run: Any, *, segment: str = ALL) -> Content:
@@ -34,7 +36,26 @@ def content_of(run: Any, *, segment: str = ALL) -> Content:
         ahead = approach(
             schedule, start.to_numpy(dtype=float), run.study.states, joining=joining, first_step=first
         )
-    return gather(facts_of(run, segment=segment), run.tables, approach=ahead)
+    return gather(
+        facts_of(run, segment=segment), run.tables, approach=ahead, panel=_panel(run, segment)
+    )
+
+
+def _panel(run: Any, segment: str) -> str:
+    """The what-if panel of a run with levers: the moves of its scenarios, then those that matter most."""
+    plans = (getattr(run, "plans", None) or {}).get(segment)
+    if plans is None or not plans.levers:
+        return ""
+    forecast, study = run.forecasts[segment], run.study
+    rows = plans.levers[0].to_frame()
+    named = [(c.from_, c.to) for s in study.scenarios for c in s.change if c.from_ in study.states.names]
+    best = [(a, b) for a, b in zip(rows["from"], rows["to"], strict=True) if a != b]
+    moves = list(dict.fromkeys([*named, *best]))[:SLIDERS]
+    try:
+        made = panel(forecast.fit, moves=moves, periods=study.horizon, joiners=forecast.joiners, value=forecast.value)
+    except CohortflowError:
+        return ""
+    return made.html
 
 
 def _joining(forecast: Any) -> Any:
@@ -77,6 +98,7 @@ def facts_of(run: Any, *, segment: str = ALL) -> Facts:
         absent=run.absent,
         version=__version__,
         segment=segment,
+        currency=study.value.currency if study.value else "",
     )
 
 

@@ -13,6 +13,7 @@ from cohortflow.report.chart.base import base_chart
 from cohortflow.report.chart.diagram import state_diagram
 from cohortflow.report.chart.exits import exit_reason_chart, exit_time_chart
 from cohortflow.report.chart.groups import groups_chart, groups_of
+from cohortflow.report.chart.levers import levers_chart
 from cohortflow.report.chart.moves import moves_chart
 from cohortflow.report.chart.retention import retention_chart
 from cohortflow.report.chart.rollforward import rollforward_chart
@@ -22,6 +23,7 @@ from cohortflow.report.content import Content, Draw, Exhibit, Facts, Section
 from cohortflow.report.findings import findings
 from cohortflow.report.headlines import headlines, summary
 from cohortflow.report.methods import assumptions, methods_section, states_table
+from cohortflow.report.plans import LEVER_NOTE, levers_table, scenario_table
 from cohortflow.report.rounding import count, missing, percent, span, unit
 from cohortflow.report.table import Table
 from cohortflow.report.text import listing
@@ -31,10 +33,13 @@ from cohortflow.states import ALL_LIVE
 Tables = Mapping[str, pd.DataFrame]
 
 
-def gather(facts: Facts, tables: Tables, *, approach: pd.DataFrame | None = None) -> Content:
+def gather(
+    facts: Facts, tables: Tables, *, approach: pd.DataFrame | None = None, panel: str = ""
+) -> Content:
     """The report of one run.
 
     tables : the contract's frames by name; what is absent is left out of the report, and said
+    panel : the what-if panel as a fragment of the page
     approach : shares by periods_ahead and state, farther than the horizon (default: the projection's own)
     """
     whole = dict(tables)
@@ -44,7 +49,7 @@ def gather(facts: Facts, tables: Tables, *, approach: pd.DataFrame | None = None
         approach = rows[rows["state"].isin(list(facts.states.remaining))]
     sections = (
         _counted(facts, own), _moves(facts, own), _heading(facts, own, whole), _settles(facts, own, approach),
-        _stay(facts, own), _rests(facts, own), _definitions(facts), methods_section(facts),
+        _stay(facts, own), *_plans(facts, own, panel), _rests(facts, own), _definitions(facts), methods_section(facts),
     )  # fmt: skip
     return Content(facts, summary(facts), headlines(facts, own), findings(facts, own, approach), sections)
 
@@ -210,6 +215,24 @@ def _stay(facts: Facts, tables: Tables) -> Section:
     return Section("stay", title, lead, tuple(exhibits))
 
 
+def _plans(facts: Facts, tables: Tables, panel: str) -> tuple[Section, ...]:
+    """Scenarios, levers and the panel; no section where nothing was asked for."""
+    exhibits = []
+    if "scenarios" in tables:
+        table = scenario_table(tables["scenarios"], currency=facts.currency, kind=facts.kind, segment=facts.segment)
+        exhibits.append(Exhibit("scenarios", table=table, open=True))
+    if "levers" in tables:
+        rows = tables["levers"]
+        for n, target in enumerate(pd.unique(rows["target"])):
+            options = {"target": str(target), "currency": facts.currency, "kind": facts.kind}
+            chart = _drawn(levers_chart, rows, **options) if n == 0 else None
+            table = levers_table(rows, **options)
+            exhibits.append(Exhibit(f"levers_{n}", chart, table, (LEVER_NOTE,) if n == 0 else ()))
+    if not exhibits and not panel:
+        return ()
+    return (Section("plans", "What could be done about it", (), tuple(exhibits), panel=panel),)
+
+
 def _rests(facts: Facts, tables: Tables) -> Section:
     exhibits = []
     if "adequacy" in tables:
@@ -243,4 +266,4 @@ def _lacking(facts: Facts, table: str) -> str:
 
 def sections_of(content: Content) -> Sequence[Section]:
     """The sections that have something to show."""
-    return [s for s in content.sections if s.lead or s.exhibits or s.points or s.terms]
+    return [s for s in content.sections if s.lead or s.exhibits or s.points or s.terms or s.panel]

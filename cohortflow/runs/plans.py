@@ -6,7 +6,7 @@ Every call gets the study's level and seed, and all scenarios of a segment share
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import pandas as pd
@@ -60,11 +60,13 @@ def plans_study(study: Study, forecast: Forecast) -> Plans:
 def _scenario(study: Study, forecast: Forecast, spec: Any, drawn: Any) -> WhatIf:
     """`cf.what_if(fit, scenario, periods=..., joiners=..., value=..., totals=..., level=..., rng=...)`."""
     fitted, joiners, segment, money = forecast.fit, forecast.joiners, forecast.segment, forecast.value
-    if spec.segment is not None:
+    parts = [part.name for part in fitted.schedule.components]
+    if spec.segment is not None and spec.segment not in parts:
         tally = segment_tally(study, fitted.tally, spec.segment)
         fitted = fit_study(study, tally)
         joiners, segment, drawn = joiners_study(study, tally, spec.segment), spec.segment, DRAWS
         money = value_study(study, fitted, joiners, level=study.level, rng=study.seed)
+        spec = replace(spec, segment=None)  # the fit is that segment's own
     return what_if(
         fitted,
         spec,

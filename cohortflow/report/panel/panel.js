@@ -218,7 +218,8 @@
     }
     const every = Math.max(1, Math.ceil(now.live.length / 7));
     data.labels.forEach((label, h) => {
-      if (h % every === 0) parts.push(node("text", { x: x(h), y: H - 10, "text-anchor": "middle" }, label));
+      const anchor = x(h) > W - 50 ? "end" : "middle";
+      if (h % every === 0) parts.push(node("text", { x: x(h), y: H - 10, "text-anchor": anchor }, label));
     });
     parts.push(node("path", { d: path(now.live), class: "cf-now" }));
     parts.push(node("path", { d: path(then.live), class: "cf-then" }));
