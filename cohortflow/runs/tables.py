@@ -8,6 +8,7 @@ import pandas as pd
 
 from cohortflow.estimator import Fit
 from cohortflow.projector import cohort_table, rates_actual, rates_forecast, rollforward_actual
+from cohortflow.projector.contribution import contribution_row
 from cohortflow.runs.steps import Forecast
 
 ORDER = (
@@ -67,6 +68,9 @@ def _frames(forecast: Forecast) -> dict[str, pd.DataFrame]:
         result = getattr(forecast, name)
         if result is not None:
             frames[name] = result.to_frame()
+    if forecast.value is not None:
+        whole = contribution_row(projection, forecast.value.terms, forecast.value.currency)
+        frames["value"] = pd.concat([frames["value"], whole], ignore_index=True)
     return frames
 
 
