@@ -286,18 +286,10 @@ def test_bare_counts_make_a_run_without_what_only_customers_can_tell(tmp_path):
     ("old", "new", "text"),
     [
         ('n = "customers"', 'n = "customers"\nsegments = ["town"]', "Bare counts are read without segments"),
-        (
-            '"counts"',
-            '"spells"',
-            'The layout "spells" is checked in the study file, but this version does not read',
-        ),
     ],
 )
-def test_layouts_that_are_not_read_yet_are_refused(tmp_path, old, new, text):
-    keys = 'time = "month"\nfrom = "was"\nto = "is"\nn = "customers"'
+def test_what_bare_counts_cannot_hold_is_refused(tmp_path, old, new, text):
     changed = COUNTS.replace(old, new)
-    if "spells" in new:
-        changed = changed.replace(keys, 'customer = "c"\ntime = "a"\nend = "b"\nstate = "s"')
     (tmp_path / "counts.csv").write_text("month,was,is,customers\n2026-01,in,in,90\n")
     (tmp_path / "bare.toml").write_text(changed)
     with pytest.raises(InputError, match=text):

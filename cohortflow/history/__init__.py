@@ -11,7 +11,15 @@ check.py     accounting and findings          store.py     the Tally on disk
 """
 
 from cohortflow.history.check import Check, Finding
-from cohortflow.history.door import count, read, read_counts, read_events, read_history
+from cohortflow.history.door import (
+    count,
+    read,
+    read_counts,
+    read_events,
+    read_history,
+    read_spells,
+    read_wide,
+)
 from cohortflow.history.reading import History, InputFile
 from cohortflow.history.store import load_tally, save_tally
 
@@ -26,5 +34,7 @@ __all__ = [
     "read_counts",
     "read_events",
     "read_history",
+    "read_spells",
+    "read_wide",
     "save_tally",
 ]

@@ -19,6 +19,7 @@ SET_ASIDE = {
     44: "incomplete_period",
     45: "after_exit",
     46: "outside_calendar",
+    47: "blank_cell",
 }
 ASIDE = {reason: code for code, reason in SET_ASIDE.items()}
 LISTED = (20, 21, 22, 45)  # outcomes whose rows are listed one by one

@@ -156,7 +156,7 @@ class Cells:
 
     def before_return(self, r: int, cells: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """(first row from the first return event on of each cell, flat places of the rows before it)."""
-        rows, owner = _ranges(self.start[cells], self.end[cells])
+        rows, owner = ranges(self.start[cells], self.end[cells])
         is_return = flags(self.plan.returns[r], self.plan.events)[self.rows["code"][rows]]
         begins = np.flatnonzero(np.concatenate([[True], owner[1:] != owner[:-1]]))
         first = np.minimum.reduceat(np.where(is_return, rows, np.iinfo(np.int64).max), begins)
@@ -164,13 +164,13 @@ class Cells:
 
     def from_row(self, cells: np.ndarray, first: np.ndarray) -> Columns:
         """The columns of cells made again from row `first` of each on."""
-        rows, owner = _ranges(first, self.end[cells])
+        rows, owner = ranges(first, self.end[cells])
         begins = np.flatnonzero(np.concatenate([[True], owner[1:] != owner[:-1]]))
         return self.columns({name: values[rows] for name, values in self.rows.items()}, begins)
 
     def rows_of(self, cells: np.ndarray) -> np.ndarray:
         """Places of all rows of some cells."""
-        return _ranges(self.start[cells], self.end[cells])[0]
+        return ranges(self.start[cells], self.end[cells])[0]
 
     def decided_by_ties(self, asked: Sequence[tuple[int, frozenset[int]]]) -> int:
         """Cells in which the order of events at one instant decided a rule.
@@ -200,10 +200,10 @@ def _cells_tied(cell: np.ndarray, t: np.ndarray, verdict: np.ndarray) -> np.ndar
     return of[both & last]
 
 
-def _ranges(start: np.ndarray, end: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def ranges(start: np.ndarray, end: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """All numbers start[i] .. end[i]-1, and the i that each belongs to.
 
-    >>> _ranges(np.array([3, 8]), np.array([5, 9]))
+    >>> ranges(np.array([3, 8]), np.array([5, 9]))
     (array([3, 4, 8]), array([0, 0, 1]))
     """
     many = end - start

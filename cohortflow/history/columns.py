@@ -13,7 +13,7 @@ from cohortflow.history.sources import Source
 
 PLACEHOLDERS = ("", "0", "-1", "unknown", "test")
 AMOUNT_SCALE, WEIGHT_SCALE = 100, 1_000_000
-IGNORED, UNKNOWN = -1, -2  # codes of rows that are set aside, never counted
+IGNORED, UNKNOWN, BLANK = -1, -2, -3  # codes of rows that are set aside, never counted
 SEPARATOR = "\x1f"  # between the values of several segment columns
 
 # Fault codes in the order in which the columns of a row are looked at.

@@ -18,13 +18,19 @@ from cohortflow.history.events import read_event_rows
 from cohortflow.history.histories import read_state_rows
 from cohortflow.history.load import load, refuse_unknown_names
 from cohortflow.history.reading import History, InputFile, Reading
-from cohortflow.history.sources import Source, file_source, found_files, frame_source, is_frame
+from cohortflow.history.sources import Source, file_source, found_files, frame_source, held, is_frame
+from cohortflow.history.spells import read_spell_rows
 from cohortflow.periods import Calendar
 from cohortflow.states import States
 from cohortflow.study import EventSpec, InputSpec, StateRule, Study
 from cohortflow.tally import Tally
 
-READ = ("events", "history", "counts")
+LABELLERS = {
+    "events": read_event_rows,
+    "history": read_state_rows,
+    "wide": read_state_rows,
+    "spells": read_spell_rows,
+}
 UNPACKED = 6  # a gzip extract is taken to be this many times larger
 Progress = Callable[[str, float], None]
 
@@ -73,7 +79,6 @@ def read(
     >>> cf.count(history).counts().tolist()
     [[0, 0], [1, 2]]
     """
-    _refuse_unread(study.input.layout)
     files = found_files(study.input.files, study.folder)
     size = sum(path.stat().st_size * (UNPACKED if path.name.endswith(".gz") else 1) for _, path in files)
     with opened(input_bytes=size, memory_mb=memory_mb, threads=threads) as engine:
@@ -162,12 +167,86 @@ def read_history(
         raise CallError(
             f'on_absent must be an exit, got "{on_absent}". The exits are {listed(states.exits)}.'
         )
+    data = held(data)
     known = calendar if calendar is not None else _calendar_of(data, period)
     spec = _input_spec(
         {"layout": "history", "customer": customer, "time": period, "state": state, "segments": tuple(segments),
          "on_absent": on_absent, "on_gap": on_gap, **columns}
     )  # fmt: skip
     study = Study(states, calendar=_calendar(known), as_of=_day(as_of, "as_of"), input=spec)
+    return _read_data(data, study, progress, keep_values)
+
+
+def read_wide(
+    data: Any,
+    states: States,
+    *,
+    customer: str = "customer",
+    calendar: str | Calendar = "month",
+    on_absent: str | None = None,
+    on_gap: str = "break",
+    as_of: date | str | None = None,
+    progress: Progress | None = None,
+    keep_values: bool = False,
+    **columns: Any,
+) -> History:
+    """A history with one row a customer and one column a period (named 2026-09, 202609, Sep-26, ...).
+
+    A row of the accounting is a cell: customers times periods; blank cells are set aside (`blank_cell`).
+
+    >>> import pandas as pd, cohortflow as cf
+    >>> states = cf.States(["steady", "left"], exits=["left"])
+    >>> rows = pd.DataFrame({"customer": ["a", "b"], "2026-01": ["steady"] * 2, "2026-02": ["steady", "left"]})
+    >>> cf.count(cf.history.read_wide(rows, states)).counts().tolist()
+    [[1, 1], [0, 0]]
+    """
+    spec = _input_spec(
+        {
+            "layout": "wide",
+            "customer": customer,
+            "time": None,
+            "on_absent": on_absent,
+            "on_gap": on_gap,
+            **columns,
+        }
+    )
+    study = Study(states, calendar=_calendar(calendar), as_of=_day(as_of, "as_of"), input=spec)
+    return _read_data(data, study, progress, keep_values)
+
+
+def read_spells(
+    data: Any,
+    states: States,
+    *,
+    as_of: date | str | None = None,
+    customer: str = "customer",
+    start: str = "start",
+    end: str = "end",
+    state: str = "state",
+    end_reason: str | None = None,
+    end_is: str = "last_day",
+    calendar: str | Calendar = "month",
+    on_absent: str | None = None,
+    log_start: date | str | None = None,
+    progress: Progress | None = None,
+    keep_values: bool = False,
+    **columns: Any,
+) -> History:
+    """Spells: one row for each time a customer spent in a state, with its first and last day (blank = goes on).
+
+    >>> import pandas as pd, cohortflow as cf
+    >>> states = cf.States(["steady", "left"], exits=["left"])
+    >>> rows = pd.DataFrame({"customer": ["a", "b"], "start": ["2026-01-05", "2026-01-20"],
+    ...                      "end": ["2026-02-10", ""], "state": ["steady"] * 2, "why": ["left", ""]})
+    >>> history = cf.history.read_spells(rows, states, as_of="2026-03-31", end_reason="why")
+    >>> cf.count(history).counts().tolist()
+    [[2, 1], [0, 0]]
+    """
+    spec = _input_spec(
+        {"layout": "spells", "customer": customer, "time": start, "end": end, "state": state, "end_reason": end_reason,
+         "end_is": end_is, "on_absent": on_absent, "log_start": _day(log_start, "log_start"), **columns}
+    )  # fmt: skip
+    study = Study(states, calendar=_calendar(calendar), as_of=_day(as_of, "as_of"), input=spec)
     return _read_data(data, study, progress, keep_values)
 
 
@@ -244,7 +323,7 @@ def _history(
         )
     refuse_unknown_names(engine, study, loaded)
     reading = Reading(engine, study, loaded, told)
-    sweep = read_event_rows(reading) if study.input.layout == "events" else read_state_rows(reading)
+    sweep = LABELLERS[study.input.layout](reading)
     told("counting", 0.0)
     tally = sweep.tally()
     check = reading.accounting(sweep.accounts)
@@ -374,15 +453,6 @@ def _as_table(rule: StateRule | Mapping[str, Any]) -> dict[str, Any]:
     if isinstance(rule, StateRule):
         raise CallError("Give all rules as StateRule or all as tables like those of a study file, not both.")
     return dict(rule)
-
-
-def _refuse_unread(layout: str) -> None:
-    """InputError for layouts that a study file may name but that are not read yet."""
-    if layout not in READ:
-        raise InputError(
-            f'The layout "{layout}" is checked in the study file, but this version does not read it yet. '
-            f"Layouts read: {listed(READ)}."
-        )
 
 
 def _counts_history(engine: Engine, study: Study, sources: list[Source]) -> History:

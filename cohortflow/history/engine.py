@@ -10,7 +10,7 @@ import os
 import shutil
 import tempfile
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
 
@@ -68,10 +68,11 @@ def opened(
             "TimeZone": "'UTC'",
             "preserve_insertion_order": "true",
             "autoinstall_known_extensions": "false",
-            "enable_progress_bar": "false",
         }
         for name, value in settings.items():
             connection.execute(f"SET {name} = {value}")
+        with suppress(duckdb.InvalidInputException):  # a notebook without widgets has no bar to switch off
+            connection.execute("SET enable_progress_bar = false")
         if threads:
             connection.execute(f"SET threads = {int(threads)}")
         yield Engine(folder, connection)

@@ -157,9 +157,7 @@ class EventLayout:
                 outcome[where & good] = ASIDE[reason]
         return outcome
 
-    def _drop_repeated(
-        self, order: np.ndarray, tied: np.ndarray, rows: Columns, outcome: np.ndarray
-    ) -> int:
+    def _drop_repeated(self, order: np.ndarray, tied: np.ndarray, rows: Columns, outcome: np.ndarray) -> int:
         """Mark identical rows as duplicates where that is certain; how many others are kept."""
         again = repeated(order, tied, rows)
         if len(again) == 0:

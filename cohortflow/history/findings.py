@@ -16,6 +16,8 @@ def note_findings(reading: Reading, notes: Counter[str], tabulator: Tabulator) -
         reading.found("identical_rows_kept", rows=notes["identical_rows_kept"])
     if notes["two_states_in_a_period"]:
         reading.found("two_states_in_a_period", rows=notes["two_states_in_a_period"])
+    if notes["overlapping_spells"]:
+        reading.found("overlapping_spells", rows=notes["overlapping_spells"])
     if notes["ties_decided_by_order"]:
         reading.found("ties_decided_by_order", rows=notes["ties_decided_by_order"], serious=False)
     if notes["joined_without_join_event"]:

@@ -18,7 +18,7 @@ import pandas as pd
 from cohortflow.errors import InputError, listed
 from cohortflow.history.accounts import ASIDE, USED
 from cohortflow.history.cells import Columns
-from cohortflow.history.columns import FAULT_OF, IGNORED, UNKNOWN
+from cohortflow.history.columns import BLANK, FAULT_OF, IGNORED, UNKNOWN
 from cohortflow.history.duplicates import mark_superseded
 from cohortflow.history.fetch import ordered
 from cohortflow.history.follow import JOINED, LIVE, RETURNED, UNKNOWN_HISTORY, UNSEEN, Followed, blank
@@ -97,6 +97,7 @@ class HistoryLayout:
             ("before_log_start", p < self.first),
             ("unknown_event", code == UNKNOWN),
             ("ignored_event", code == IGNORED),
+            ("blank_cell", code == BLANK),
         ):
             outcome[where & (rows["fault"] == 0)] = ASIDE[reason]
         return outcome
@@ -187,8 +188,8 @@ class HistoryFollower:
         after = np.searchsorted(present, np.arange(periods), side="right")
         self.next_present = np.append(present, periods)[after]
 
-    def follow(self, given: np.ndarray) -> Followed:
-        """Label a block; given (T, B), -1 = no row."""
+    def follow(self, given: np.ndarray, joined_first: np.ndarray | None = None) -> Followed:
+        """Label a block; given (T, B), -1 = no row; joined_first: (B,) known to have joined in the first period."""
         size = given.shape[1]
         out = blank(self.periods, size)
         seen = given >= 0
@@ -198,6 +199,7 @@ class HistoryFollower:
         began = np.zeros(size, dtype=np.int32)
         known = np.zeros(size, dtype=bool)
         before = np.full(size, -1, dtype=np.int8)
+        joins = np.zeros(size, dtype=bool) if joined_first is None else joined_first
         for t in range(self.periods):
             state = self._filled(given[t], before, where, t < last)
             here = state >= 0
@@ -206,13 +208,14 @@ class HistoryFollower:
             back = gone & here & ~exits
             at_once = new & exits
             out.state[t] = np.where(here & ~at_once & ~(gone & exits), state, -1)
-            first_kind = UNKNOWN_HISTORY if t == 0 else JOINED
-            out.start[t] = np.select([at_once, back, new], [-1, RETURNED, first_kind], default=-1)
+            known_new = np.full(size, True) if t else joins
+            kinds = np.where(known_new, JOINED, UNKNOWN_HISTORY)
+            out.start[t] = np.select([at_once, back, new], [-1, RETURNED, kinds], default=-1)
             out.origin[t] = np.where(back, where, -1)
-            out.memo[t] = np.where(at_once & (t > 0), 0, -1)
+            out.memo[t] = np.where(at_once & known_new, 0, -1)
             out.memo_state[t] = state
             began = np.where(new | back, t, began)
-            known = np.where(new, t > 0, known | back)
+            known = np.where(new, known_new, known | back)
             out.tenure[t] = np.where(known, t - began, -1)
             out.any_exit |= bool(exits.any())
             where = np.where(exits & ~gone, state, np.where(here & ~exits, LIVE, where)).astype(np.int8)

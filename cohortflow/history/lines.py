@@ -29,7 +29,7 @@ class LineFinder:
 
     def lines(self, kept: Sequence[int] | np.ndarray) -> np.ndarray:
         """Line of each kept record (0 = the first that the engine kept of this source)."""
-        kept = np.asarray(kept, dtype=np.int64)
+        kept = np.asarray(kept, dtype=np.int64) // self.source.cells
         if self.source.dialect is None:
             return kept + 1
         bad = self.bad_lines()
@@ -38,7 +38,9 @@ class LineFinder:
             index = kept + np.searchsorted(bad - 2 - np.arange(len(bad)), kept, side="right")
             return index + 2
         good = starts[~np.isin(starts, bad)]
-        if len(good) != self.source.rows:  # not resolvable; better no line than a wrong one
+        if (
+            len(good) != self.source.rows // self.source.cells
+        ):  # not resolvable; better no line than a wrong one
             return np.full(len(kept), -1, dtype=np.int64)
         return good[kept]
 
@@ -62,7 +64,7 @@ class LineFinder:
     def _record_starts(self) -> np.ndarray | None:
         """Lines at which records begin; None when they simply follow each other."""
         if self._starts is None:
-            records = self.source.rows + len(self.source.bad)
+            records = self.source.rows // self.source.cells + len(self.source.bad)
             if _count_lines(self._path(), self._packed()) == records + 1:
                 return None
             starts = _starts_by_quotes(self._path(), self._packed())

@@ -14,8 +14,10 @@ from dataclasses import dataclass, field
 
 from cohortflow.errors import InputError, listed, nearest
 from cohortflow.history.columns import (
+    BLANK,
     IGNORED,
     UNKNOWN,
+    Field,
     Money,
     amount_sql,
     code_sql,
@@ -28,11 +30,13 @@ from cohortflow.history.columns import (
     weight_sql,
 )
 from cohortflow.history.engine import Engine, quoted
+from cohortflow.history.labels import period_of_label
 from cohortflow.history.sources import Source
-from cohortflow.history.times import LATEST, TimeFormat, detect_format, in_order, instant_sql, period_sql
+from cohortflow.history.times import DAY, LATEST, TimeFormat, detect_format, in_order, instant_sql, period_sql
 from cohortflow.study import InputSpec, Study
 
 FOREVER = 1_000_000_000  # ordinal of a valid-until day that never comes
+FOREVER_INSTANT = 2**62
 Progress = Callable[[str, float], None]
 Check = tuple[str, str, str]  # reason, SQL condition, SQL of the offending text
 
@@ -135,10 +139,17 @@ class _Maker:
         who = field_of(source, self.spec.customer or "", "customer").text
         columns["customer"] = who
         checks.append(("id_missing", id_missing_sql(who), who))
+        relation = source.relation
         if self.spec.layout == "events":
             self._event(source, columns, checks)
+        elif self.spec.layout == "spells":
+            self._spell(source, columns, checks)
+        elif self.spec.layout == "wide":
+            relation = self._wide(source, columns, checks)
         else:
-            self._state(source, columns, checks)
+            period = field_of(source, self.spec.time or "", "time").text
+            state = field_of(source, self.spec.state or "", "state").text
+            self._state(period, state, relation, columns, checks)
         self._extras(source, columns, checks)
         self.loaded.has |= set(columns) | ({"bad"} if self.keep_values else set())
         named = ", ".join(f"{sql} AS {name}" for name, sql in columns.items())
@@ -147,7 +158,7 @@ class _Maker:
         inner = ", ".join([named, f"{row_hash(source)} AS h", tests, *texts])
         fault = fault_sql([(reason, f"k{i}") for i, (reason, _, _) in enumerate(checks)])
         bad = f", {_first_text(len(checks))} AS bad" if self.keep_values else ""
-        return f"SELECT {', '.join(columns)}, h, {fault} AS fault{bad} FROM (SELECT {inner} FROM {source.relation})"
+        return f"SELECT {', '.join(columns)}, h, {fault} AS fault{bad} FROM (SELECT {inner} FROM {relation})"
 
     # ---- what happened ----
     def _event(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
@@ -162,15 +173,101 @@ class _Maker:
         if self.study.events.others != "ignore":
             checks.append(("unknown_event", f"({columns['code']}) = {UNKNOWN}", event))
 
-    def _state(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
-        period = field_of(source, self.spec.time or "", "time")
-        state = field_of(source, self.spec.state or "", "state").text
-        columns["label"] = f"coalesce(trim({period.text}), '')"
+    def _state(
+        self, period: str, state: str, relation: str, columns: dict[str, str], checks: list[Check]
+    ) -> None:
+        columns["label"] = f"coalesce(trim({period}), '')"
         columns["code"] = code_sql(f"trim({state})", state_codes(self.study), str(UNKNOWN))
-        self.loaded.names.append((state, columns["code"], source.relation))
-        checks.append(("time_unreadable", f"({columns['label']}) = ''", period.text))
+        self.loaded.names.append((state, columns["code"], relation))
+        checks.append(("time_unreadable", f"({columns['label']}) = ''", period))
         if self.study.events.others != "ignore":
             checks.append(("unknown_state", f"({columns['code']}) = {UNKNOWN}", state))
+
+    def _wide(self, source: Source, columns: dict[str, str], checks: list[Check]) -> str:
+        """One column a period: every cell becomes a row, the blank ones too, so that records keep their numbers."""
+        cells = self._period_columns(source)
+        labels = ", ".join(quoted(source.columns[i]) for i in cells)
+        states = ", ".join(Field(f"c{i}", source.types[i], source.columns[i]).text for i in cells)
+        relation = f"(SELECT *, unnest([{labels}]) AS wide_label, unnest([{states}]) AS wide_state FROM {source.relation})"
+        source.cells = len(cells)
+        self._state("wide_label", "wide_state", relation, columns, checks)
+        blank = "coalesce(trim(wide_state), '') = ''"
+        columns["code"] = f"(CASE WHEN {blank} THEN {BLANK} ELSE {columns['code']} END)::SMALLINT"
+        self.loaded.names[-1] = ("wide_state", columns["code"], relation)
+        if checks[-1][0] == "unknown_state":
+            checks[-1] = ("unknown_state", f"({columns['code']}) = {UNKNOWN}", "wide_state")
+        return relation
+
+    def _period_columns(self, source: Source) -> list[int]:
+        """The columns whose names are periods; InputError when there are none."""
+        spec, calendar = self.spec, self.study.calendar
+        others = {spec.customer, spec.weight, *(name for name, _ in self.loaded.segment_columns)}
+        found = [
+            i
+            for i, name in enumerate(source.columns)
+            if name not in others and period_of_label(name, calendar, spec.date_format) is not None
+        ]
+        if not found:
+            raise InputError(
+                f"{source.name}: no column is named for a {calendar.kind}. The columns are {listed(source.columns)}; "
+                "in the layout wide each period has a column named like 2026-09. See `period` in [study]."
+            )
+        return found
+
+    def _spell(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
+        start = field_of(source, self.spec.time or "", "time")
+        end = field_of(source, self.spec.end or "", "end")
+        state = field_of(source, self.spec.state or "", "state").text
+        first = instant_sql(
+            start.sql, self._time_format(source, start.name, start.sql, start.type), start.type
+        ).instant
+        there = f"({end.sql} IS NOT NULL AND trim({end.text}) <> '')"
+        columns["t"], columns["code"] = (
+            first,
+            code_sql(f"trim({state})", state_codes(self.study), str(UNKNOWN)),
+        )
+        columns["until"] = self._last_day(source, end, there)
+        self.loaded.names.append((state, columns["code"], source.relation))
+        checks.append(("time_unreadable", f"({first}) IS NULL", start.text))
+        checks.append(("end_unreadable", f"{there} AND ({columns['until']}) IS NULL", end.text))
+        if self.study.events.others != "ignore":
+            checks.append(("unknown_state", f"({columns['code']}) = {UNKNOWN}", state))
+        checks.append(("end_before_start", f"coalesce(({columns['until']}) < ({first}), false)", end.text))
+        if self.spec.end_reason:
+            self._reason(source, columns, checks)
+
+    def _last_day(self, source: Source, end: Field, there: str) -> str:
+        """SQL: the instant of the last day of a spell; FOREVER for blank and far-off ends."""
+        step = self.study.calendar.kind == "step"
+        if not end.is_text or step:
+            form = TimeFormat("step" if step else "typed")
+        else:
+            samples = source.samples.get(end.name, ())
+            where = f'{source.name}, column "{end.name}"'
+            blank = not any(v.strip() for v in samples)
+            form = (
+                TimeFormat("iso")
+                if blank
+                else detect_format(samples, where=where, given=self.spec.date_format)
+            )
+            if form.order_unknown:
+                form = self._ordered(source, end.sql, form, where)
+        far = f"substr(trim({end.text}), 1, 4) BETWEEN '{LATEST.year}' AND '9999' AND NOT {str(step).lower()}"
+        day = instant_sql(end.sql, form, end.type).instant
+        less = (1 if step else DAY) if self.spec.end_is == "day_after" else 0
+        return f"CASE WHEN NOT {there} OR {far} THEN {FOREVER_INSTANT} ELSE ({day}) - {less} END"
+
+    def _reason(self, source: Source, columns: dict[str, str], checks: list[Check]) -> None:
+        """The exit that ended a spell; blank = none."""
+        reason = field_of(source, self.spec.end_reason or "", "end_reason").text
+        exits = {n: c for n, c in state_codes(self.study).items() if c < 0 or self.study.states.exit_mask[c]}
+        code = code_sql(f"trim({reason})", exits, str(UNKNOWN))
+        columns["reason"] = (
+            f"(CASE WHEN coalesce(trim({reason}), '') = '' THEN {BLANK} ELSE {code} END)::SMALLINT"
+        )
+        self.loaded.names.append((reason, columns["reason"], source.relation))
+        if self.study.events.others != "ignore":
+            checks.append(("unknown_state", f"({columns['reason']}) = {UNKNOWN}", reason))
 
     def _time_format(self, source: Source, name: str, sql: str, sql_type: str) -> TimeFormat:
         known = self.loaded.time_format

@@ -24,7 +24,7 @@ SAMPLED = 2000
 
 @dataclass
 class Source:
-    """One file or frame. `columns`: its header; `types`: the engine's type of each; `relation`: SQL giving c0.. ."""
+    """One file or frame, `cells` rows a record (more than one in the layout wide). `columns`: its header; `types`: the engine's type of each; `relation`: SQL giving c0.. ."""
 
     name: str
     columns: tuple[str, ...]
@@ -38,6 +38,7 @@ class Source:
     sha256: str = ""
     first: int = 0
     rows: int = 0
+    cells: int = 1
     bad: list[tuple[int, str]] = field(default_factory=list)
 
     @property
@@ -64,6 +65,11 @@ class Source:
 def is_frame(data: Any) -> bool:
     """Whether `data` is a table in memory rather than a path."""
     return hasattr(data, "__arrow_c_stream__") or isinstance(data, pd.DataFrame)
+
+
+def held(data: Any) -> Any:
+    """A stream that can be read only once, as a table; anything else as it is."""
+    return data.read_all() if hasattr(data, "read_all") and hasattr(data, "__arrow_c_stream__") else data
 
 
 def found_files(files: Iterable[str | Path], folder: Path) -> list[tuple[str, Path]]:
@@ -141,7 +147,7 @@ def frame_source(engine: Engine, data: Any, name: str = "frame") -> Source:
         raise CallError(
             f"Data must be a path, a DataFrame or an object with __arrow_c_stream__; got {type(data).__name__}."
         )
-    engine.register("given_frame", data)
+    engine.register("given_frame", held(data))
     return _relation_source(engine, name, "given_frame")
 
 

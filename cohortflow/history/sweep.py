@@ -16,8 +16,8 @@ from cohortflow.errors import NotIdentified, listed
 from cohortflow.history.accounts import USED, Accounts
 from cohortflow.history.cells import Columns
 from cohortflow.history.columns import AMOUNT_SCALE, SEPARATOR, WEIGHT_SCALE
-from cohortflow.history.findings import note_findings
 from cohortflow.history.fetch import Part, block_size, number_segments, parts
+from cohortflow.history.findings import note_findings
 from cohortflow.history.paths import PathSample
 from cohortflow.history.reading import Reading
 from cohortflow.history.silences import by_silence
