@@ -40,6 +40,7 @@ _HOME = {
     "required_change": "whatif.required",
     "compare_arms": "whatif.arms",
     "trial_size": "whatif.trial_size",
+    "panel": "report.panel.render",
     "run": "runs.folder",
     "compare": "runs.comparison",
     "write_report": "report.of_run",

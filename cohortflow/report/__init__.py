@@ -19,6 +19,7 @@ _HOME = {
     "retention_chart": "chart.retention",
     "exit_time_chart": "chart.exits",
     "exit_reason_chart": "chart.exits",
+    "levers_chart": "chart.levers",
     "svg": "chart.style",
     "approach": "ahead",
     "Facts": "content",
