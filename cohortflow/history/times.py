@@ -60,6 +60,8 @@ def detect_format(samples: Sequence[str], *, where: str, given: str | None = Non
     """The format that most values have; InputError shows some values when none is recognised."""
     if given:
         return TimeFormat("pattern", (given,))
+    if len(samples) == 0:
+        return TimeFormat("iso")  # no rows; that is refused where rows are counted
     values = [v.strip() for v in samples if v and v.strip()]
     votes = Counter(shape for shape in map(_shape, values) if shape)
     if not votes:
