@@ -11,8 +11,8 @@ import pandas as pd
 
 from cohortflow.report.chart.frames import ALL, frame_of
 from cohortflow.report.rounding import count, decimal, missing, money, percent, span, unit
-from cohortflow.report.table import WIDTH, Table
-from cohortflow.report.tabulate import name
+from cohortflow.report.table import WIDTH, Table, plain_text
+from cohortflow.report.tabulate import by_key, name
 from cohortflow.report.text import label, wrap
 
 Form = Callable[[float], str]
@@ -95,7 +95,7 @@ def scenario_table(scenarios: Any, *, currency: str = "", kind: str = "month", s
     ]
     out = []
     for scenario, own in rows.groupby("scenario", sort=False):
-        cells = {(r["period"], r["quantity"]): r for r in own.to_dict("records")}
+        cells = by_key(own, "period", "quantity")
         last = [p for p in own["period"] if p not in ("total", "settled")][-1]
         line = [name(str(scenario)), _ranged(cells.get((last, "all_live")), count)]
         if has_money:
@@ -180,7 +180,7 @@ def whatif_text(
     """What `cohortflow whatif` prints: the change needed if asked for, else scenarios and levers by
     segment.
     """
-    from cohortflow.report.terminal import plain_text, printout, segments
+    from cohortflow.report.terminal import printout, segments
 
     if required:
         return printout(plain_text(required_table(required, currency=currency, kind=kind)))

@@ -27,6 +27,7 @@ from cohortflow.report.chart.style import (
 )  # fmt: skip
 from cohortflow.report.plans import gain, target_form, target_words
 from cohortflow.report.rounding import missing, percent, span
+from cohortflow.report.tabulate import by_key
 from cohortflow.report.text import label, upper_first
 
 COLUMNS = ["from", "to", "target", "per_point", "low", "high", "rank"]
@@ -87,7 +88,7 @@ def _drawn(rows: pd.DataFrame, target: str, currency: str, kind: str, width: flo
         axes.xaxis.set_major_formatter(lambda v, _: form(v))
         axes.locator_params(axis="x", nbins=3 if width < WIDE / 2 else 5)
         quiet_axis(axes, grid="x")
-        for y, row in enumerate(rows.to_dict("records")):
+        for y, row in enumerate(by_key(rows, "rank").values()):
             _row(axes, y, row, form, names)
     return figure
 
@@ -101,7 +102,7 @@ def _row(axes: Axes, y: int, row: dict[str, Any], form: Any, names: float) -> No
     axes.annotate("\n".join(lines), (0, y), xytext=(-7, 0), textcoords="offset points", ha="right", va="center",
                   size=BODY, color=INK)  # fmt: skip
     limits = "" if missing(row["low"]) else f"({span(row['low'], row['high'], form)})"
-    spot = {
+    spot: dict[str, Any] = {
         "xycoords": ("axes fraction", "data"),
         "textcoords": "offset points",
         "va": "center",
