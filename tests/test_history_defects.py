@@ -142,13 +142,17 @@ def test_offsets_and_the_edges_of_summer_time(tmp_path):
 
 
 def test_unknown_events_are_refused_with_the_nearest_name(tmp_path):
-    refused(tmp_path, HEADER + GOOD + "x,2026-01-05 10:00,jion\n", r'"jion" 1 times \(did you mean "join"\?\)')
+    refused(
+        tmp_path, HEADER + GOOD + "x,2026-01-05 10:00,jion\n", r'"jion" 1 times \(did you mean "join"\?\)'
+    )
 
 
 def test_unknown_events_can_be_rejected_or_set_aside(tmp_path):
     for others, outcome in (("reject", "rejected/unknown_event"), ("ignore", "set_aside/unknown_event")):
         _, found = outcomes(
-            tmp_path, HEADER + GOOD + "x,2026-01-05 10:00,jion\n", events={"others": others, "ignore": ["news"]}
+            tmp_path,
+            HEADER + GOOD + "x,2026-01-05 10:00,jion\n",
+            events={"others": others, "ignore": ["news"]},
         )
         assert found == {"read": 27, "used": 26, outcome: 1}
 
@@ -166,7 +170,10 @@ REFUSED = {
     "not text": (b"\x7fELF\x00\x01\x02\x03" + bytes(range(1, 200)) * 3, "this is not a text file"),
     "offsets without a zone": (HEADER + GOOD.replace(" 09:00", "T09:00:00Z"), "Set timezone"),
     "too many blank ids": (HEADER + GOOD + ",2026-01-05 10:00,join\n" * 3, "at most 5 % are tolerated"),
-    "an open quotation mark": (HEADER + GOOD + '"x,2026-01-05 10:00,join\n' + GOOD, "quotation mark is opened"),
+    "an open quotation mark": (
+        HEADER + GOOD + '"x,2026-01-05 10:00,join\n' + GOOD,
+        "quotation mark is opened",
+    ),
 }
 
 

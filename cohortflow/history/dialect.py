@@ -28,6 +28,7 @@ _MARKS = (
 )
 _READ_AS_IS = ("utf-8", "utf-8-sig", "utf_8", "utf8", "ascii")
 SAMPLED_ROWS = 2000
+MOST_COLUMNS = 10_000  # more are a sign of a wrong delimiter, and take minutes to look at
 
 
 @dataclass(frozen=True)
@@ -179,6 +180,11 @@ def _parsed(text: str, delimiter: str, complete: bool) -> list[list[str]]:
 
 def _header(path: Path, names: list[str]) -> tuple[str, ...]:
     header = tuple(name.strip() for name in names)
+    if len(header) > MOST_COLUMNS:
+        raise InputError(
+            f"{path.name}: the header line has {len(header):,} columns; at most {MOST_COLUMNS:,} are read. See that "
+            "it ends in a line break, and that `delimiter` in [input] is right."
+        )
     repeated = sorted({n for n in header if n and header.count(n) > 1})
     if repeated:
         raise InputError(

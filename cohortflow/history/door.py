@@ -385,7 +385,7 @@ def _day(day: date | str | None, key: str) -> date | None:
 
 def _input_spec(given: Mapping[str, Any]) -> InputSpec:
     lists = ("segments", "attributes", "joins", "returns", "tie_order", "files")
-    values = {k: tuple(v) if k in lists and v is not None else v for k, v in given.items()}
+    values: dict[str, Any] = {k: tuple(v) if k in lists and v is not None else v for k, v in given.items()}
     try:
         return InputSpec(**values)
     except TypeError:

@@ -108,10 +108,13 @@ class EventLayout:
         for places in followed.aside:
             outcome[used[places]] = ASIDE["after_exit"]
         skip = self.window.complete - self.window.first
-        arrays = (followed.state, followed.start, followed.origin, followed.tenure, followed.memo)
         amount = None if followed.amount is None else followed.amount[skip:]
         return Labelled(
-            *(a[skip:] for a in arrays),
+            state=followed.state[skip:],
+            start=followed.start[skip:],
+            origin=followed.origin[skip:],
+            tenure=followed.tenure[skip:],
+            memo=followed.memo[skip:],
             memo_state=followed.memo_state[skip:],
             amount=amount,
             outcome=outcome,

@@ -39,5 +39,7 @@ def _impossible_moves(reading: Reading, tabulator: Tabulator) -> None:
         reading.found(
             "impossible_move",
             customers=n,
-            **{"from": names[origin], "to": names[target], "first_period": label(periods[0])},
+            origin=names[origin],
+            target=names[target],
+            first_period=label(periods[0]),
         )

@@ -182,9 +182,8 @@ class HistoryFollower:
         self.periods = periods
         self.is_exit = states.exit_mask
         self.on_absent = states.index(spec.on_absent) if spec.on_absent else -1
-        self.fill = {"break": -2, "carry": -1}.get(spec.on_gap)
-        if self.fill is None:
-            self.fill = states.index(spec.on_gap)
+        kinds = {"break": -2, "carry": -1}
+        self.fill: int = kinds[spec.on_gap] if spec.on_gap in kinds else states.index(spec.on_gap)
         after = np.searchsorted(present, np.arange(periods), side="right")
         self.next_present = np.append(present, periods)[after]
 

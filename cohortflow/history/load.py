@@ -188,7 +188,8 @@ class _Maker:
         cells = self._period_columns(source)
         labels = ", ".join(quoted(source.columns[i]) for i in cells)
         states = ", ".join(Field(f"c{i}", source.types[i], source.columns[i]).text for i in cells)
-        relation = f"(SELECT *, unnest([{labels}]) AS wide_label, unnest([{states}]) AS wide_state FROM {source.relation})"
+        cell = f"unnest([{labels}]) AS wide_label, unnest([{states}]) AS wide_state"
+        relation = f"(SELECT *, {cell} FROM {source.relation})"
         source.cells = len(cells)
         self._state("wide_label", "wide_state", relation, columns, checks)
         blank = "coalesce(trim(wide_state), '') = ''"

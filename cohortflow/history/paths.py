@@ -69,8 +69,14 @@ class _Coded:
     def from_level(self, least: int) -> _Coded:
         keep = self.level >= least
         runs = np.repeat(keep, self.many)
-        kept = [a[keep] for a in (self.segment, self.level, self.first, self.many)]
-        return _Coded(*kept, self.state[runs], self.length[runs])
+        return _Coded(
+            self.segment[keep],
+            self.level[keep],
+            self.first[keep],
+            self.many[keep],
+            self.state[runs],
+            self.length[runs],
+        )
 
     def frame(self) -> pd.DataFrame:
         base = int(self.length.max()) + 1

@@ -67,7 +67,7 @@ class Rules:
                 if condition not in known:
                     known[condition] = self.holds(condition, t, memory)
                 every = known[condition] if every is None else every & known[condition]
-            out = every if out is None else out | every  # type: ignore[operator]
+            out = every if out is None else out | every
         return out
 
     def holds(self, condition: Condition, t: int, memory: Memory) -> np.ndarray:

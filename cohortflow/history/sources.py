@@ -24,7 +24,11 @@ SAMPLED = 2000
 
 @dataclass
 class Source:
-    """One file or frame, `cells` rows a record (more than one in the layout wide). `columns`: its header; `types`: the engine's type of each; `relation`: SQL giving c0.. ."""
+    """One file or frame.
+
+    columns : its header;  types : the engine's type of each;  relation : SQL giving c0, c1, ...
+    first, rows : its rows in the table `rows`;  cells : rows a record (more than one in the layout wide)
+    """
 
     name: str
     columns: tuple[str, ...]

@@ -55,7 +55,7 @@ class Labelled:
 class Layout(Protocol):
     """What a layout must tell: which columns it needs, and what a block of rows means."""
 
-    columns: Sequence[str]
+    columns: list[str]
     joins: str
 
     def label(self, rows: Columns, size: int) -> Labelled:

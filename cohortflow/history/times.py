@@ -100,7 +100,7 @@ def in_order(form: TimeFormat, first_over_12: bool, second_over_12: bool, *, whe
 
 @dataclass(frozen=True)
 class TimeSql:
-    """Expressions over one column: the instant (NULL when unreadable), and how it is written (0 day, 1 clock, 2 zoned)."""
+    """SQL over a column: the instant, NULL when unreadable; how it is written (0 day, 1 clock, 2 zoned)."""
 
     instant: str
     form: str
