@@ -19,6 +19,8 @@ _HOME = {
     "read": "history.door",
     "read_events": "history.door",
     "read_history": "history.door",
+    "read_wide": "history.door",
+    "read_spells": "history.door",
     "read_counts": "history.door",
     "count": "history.door",
     "Tally": "tally",
