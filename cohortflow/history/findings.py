@@ -39,7 +39,7 @@ def _impossible_moves(reading: Reading, tabulator: Tabulator) -> None:
         reading.found(
             "impossible_move",
             customers=n,
-            origin=names[origin],
-            target=names[target],
+            state=names[origin],
+            to=names[target],
             first_period=label(periods[0]),
         )

@@ -188,15 +188,16 @@ class EventFollower:
         out.any_exit |= bool(left.any())
         at_once = left & (new | back)
         known_new = new & memory.known
-        out.state[t] = np.where(here & ~at_once, state, -1)
-        out.start[t] = np.select(
-            [at_once, back, known_new, new], [-1, RETURNED, JOINED, UNKNOWN_HISTORY], default=-1
-        )
-        out.memo[t] = np.select([at_once & back, at_once & known_new], [1, 0], default=-1)
+        np.copyto(out.state[t], state, where=here & ~at_once)
+        for who, kind in ((new, UNKNOWN_HISTORY), (known_new, JOINED), (back, RETURNED), (at_once, -1)):
+            np.copyto(out.start[t], np.int8(kind), where=who)
+        if at_once.any():
+            np.copyto(out.memo[t], np.int8(0), where=at_once & known_new)
+            np.copyto(out.memo[t], np.int8(1), where=at_once & back)
         out.memo_state[t] = state
         out.tenure[t] = np.where(memory.known, t - memory.began, -1)
-        where[left] = state[left]
-        where[here & ~left] = LIVE
+        np.copyto(where, np.int8(LIVE), where=here)
+        np.copyto(where, state, where=left)
 
     def _cut(self, out: Followed, count_from: np.ndarray) -> None:
         """Forget what lies before each customer counts; whoever is under way then starts as unknown."""

@@ -46,7 +46,7 @@ class Rules:
         for number, rule in enumerate(self.study.rules):
             holds = self._alternatives(rule.when, t, memory, known)
             take = open_ if holds is None else open_ & holds
-            out[take] = number
+            np.copyto(out, np.int8(number), where=take)
             open_ = open_ & ~take
         return out
 

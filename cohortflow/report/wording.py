@@ -22,6 +22,7 @@ REASONS: Mapping[str, str] = MappingProxyType(
         "weight_unreadable": "weight not readable",
         "end_unreadable": "end date not readable",
         "end_before_start": "end before start",
+        "blank_cell": "a cell without a state",
         "outside_calendar": "outside the calendar file",
         "encoding_unreadable": "not readable as text",
         "ragged_row": "wrong number of columns",
@@ -54,6 +55,22 @@ PARTS: Mapping[str, str] = MappingProxyType(
         "chance": "chance from customer to customer",
         "common_shocks": "shocks that hit everybody in a period",
         "joiners": "the uncertainty of joiners",
+    }
+)
+PART_NAMES: Mapping[str, str] = MappingProxyType(
+    {
+        "rates": "rates not known exactly",
+        "chance": "individual chance",
+        "common_shocks": "luck shared by everybody",
+        "joiners": "joiners not known",
+    }
+)
+FORECASTERS: Mapping[str, str] = MappingProxyType(  # that need no chain, in the order they are printed
+    {
+        "last_mix": "last mix",
+        "constant_churn": "constant churn",
+        "last_year": "last year",
+        "cohort_curve": "cohort curve",
     }
 )
 VERDICTS: Mapping[str, tuple[str, str]] = MappingProxyType(
@@ -94,6 +111,8 @@ EXPLAIN: Mapping[str, str] = MappingProxyType(
                     "counts, not of mistakes in the data or of a world that changes.",
         "band": "A band is the range in which the number of customers should end, at the stated level, if the world "
                 "goes on as it did in the periods counted. It holds the parts that are listed beside it and no others.",
+        "band_parts": "Luck shared by everybody does not shrink as the base grows, individual chance does. What is not "
+                      "known about rates shrinks with a longer history.",
         "settled_base": "The settled base is the size at which, with the assumed number of joiners every period and "
                         "today's rates, as many customers leave as join. It is a direction, not a forecast.",
         "remaining_mix": "Follow today's customers only, and look at those still here after a long time: their mix of "
@@ -124,6 +143,12 @@ CAUTIONS = (
     "They are pseudonymous personal data: keep them as you keep the extract, and ask your data protection adviser "
     "before passing them on.",
 )
+MONEY_CAUTIONS = (
+    "These are contributions as the study counts them, not revenue, profit or cash; nothing here is an accounting value, "
+    "and fixed costs are in it only where a scenario names them.",
+    "Value goes as far as customers stay, far beyond what past forecasts can vouch for; the discount is the only brake. "
+    "Prefer the contribution up to the horizon for plans.",
+)
 DEFINITIONS: tuple[tuple[str, str, str], ...] = (
     ("Customer at the end of a period", "One customer has one state at the end of each period, given by the first rule "
      "of the study that holds. Only rows up to that moment are used.", "count of customers"),
@@ -139,6 +164,20 @@ DEFINITIONS: tuple[tuple[str, str, str], ...] = (
     ("All live customers", "Sum of the live states.", "customers in live and entry states, without away and exits"),
     ("Opening to closing", "Opening + joined + returned - lost + moved in - moved out, and what could not be observed, "
      "gives closing, in every period.", "counts of customers"),
+    ("Churn of a quarter", "Share of those who were there, live or away, as the quarter opened; who joins and leaves within "
+     "the quarter is in the numerator too.", "all lost by the exit in the quarter / opening customers, live and away"),
+    ("Contribution over the horizon", "What today's base and all who join bring up to the horizon, discounted.",
+     "sum over periods of b^(p - 1 + lag) x (customers x contribution a period + amounts on moves), b = (1 + rate)^(-1 / "
+     "periods a year)"),
+    ("Value of a customer", "Discounted contribution from now until leaving, expected for a customer in a state.",
+     "V = r + b P V, r = contribution of a period, b = discount a period, P = rates"),
+    ("Validated to", "The farthest distance up to which, at every distance, there are at least 8 past forecasts, the bands "
+     "held as often as meant (within the interval that their number allows) and did better than the last mix.",
+     "coverage = bands that held / past forecasts"),
+    ("Parts of a band", "Variance from each named part by itself: individual chance, luck shared by everybody, rates, "
+     "joiners.", "share = variance of the part / sum over the parts"),
+    ("Lever, one point more", "Change of a figure for one hundredth more of a move's rate, paid for by the rest of its row.",
+     "0.01 x d figure / d rate"),
     ("Settled base", "Base at which joining and leaving balance.",
      "joiners a period x expected periods spent in each state before leaving"),
     ("Mix of those remaining", "Long-run mix of the customers who have not left, without joiners.",
@@ -162,6 +201,16 @@ SOURCES: tuple[tuple[str, str], ...] = (
     ("Mix of those remaining", "Darroch, J. N. & Seneta, E. (1965), Journal of Applied Probability 2, 88-100."),
     ("Bases with joiners", "Bartholomew, D. J. (1982), Stochastic Models for Social Processes, 3rd edition; Pollard, "
      "J. H. (1966), Biometrika 53, 397-415."),
+    ("Value of a customer", "Howard, R. A. (1960), Dynamic Programming and Markov Processes; Pfeifer, P. E. & Carraway, "
+     "R. L. (2000), Journal of Interactive Marketing 14(2), 43-55; spread: Sobel, M. J. (1982), Journal of Applied "
+     "Probability 19, 794-802."),
+    ("Tests of the assumptions", "Anderson & Goodman (1957), above; Kullback, S., Kupperman, M. & Ku, H. H. (1962), "
+     "Technometrics 4, 573-608."),
+    ("Scores of past forecasts", "Gneiting, T. & Raftery, A. E. (2007), Journal of the American Statistical Association "
+     "102, 359-378; comparison of models: Diebold, F. X. & Mariano, R. S. (1995), Journal of Business & Economic "
+     "Statistics 13, 253-263."),
+    ("Errors by customer and period together", "Cameron, A. C., Gelbach, J. B. & Miller, D. L. (2011), Journal of "
+     "Business & Economic Statistics 29, 238-249."),
     ("Observed retention", "Kaplan, E. L. & Meier, P. (1958), Journal of the American Statistical Association 53, "
      "457-481."),
 )  # fmt: skip
@@ -210,6 +259,11 @@ NOTES: Mapping[str, str] = MappingProxyType(
         "ties_decided_by_order": "{rows} times several events of a customer share one instant; the order of the "
                                  "study's "
                                  "rules decided.",
+        "overlapping_spells": "{rows} times two spells of a customer cover the same period end; the one that began "
+                              "last counts.",
+        "segment_changes": "{customers} customers change their segment; the value on their first row is used.",
+        "busy_customer": "One customer has {rows} rows, more than a thousandth of the extract: perhaps a house "
+                         "account.",
         "extract_ends_early": "The extract's last rows are of {last_rows}, before the last day that counts "
                               "({as_of}): what "
                               "is missing looks like customers who left.",
@@ -230,6 +284,9 @@ NOTES: Mapping[str, str] = MappingProxyType(
         "seasons_thin": "Seasons rest on few moves; their rates are drawn towards the pooled ones.",
         "no_exit_no_discount": "The value of a customer in {state} has no bound: some never leave and nothing is "
                                "discounted.",
+        "settled": "Where a scenario leads in the long run is not known: {state}.",
+        "change_cut_short_in_draws": "In a share {state} of the draws a scenario asked for more than its row has and was "
+                                     "cut short.",
         "joined_without_join_event": "{customers} customers appear without an event that marks joining; their history "
                                      "before is not known.",
     }
