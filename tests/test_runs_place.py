@@ -10,8 +10,11 @@ from pathlib import Path
 
 import pytest
 
+import cohortflow as cf
 from cohortflow.errors import OutputError
+from cohortflow.runs import place
 from cohortflow.runs.place import MARK, check_free, whole_folder, write_text
+from tests.comparison_cases import STUDY, rows
 
 ROOT = Path(__file__).parents[1]
 SLOW = """
@@ -139,3 +142,82 @@ def test_of_many_at_once_exactly_one_wins(tmp_path):
         process.join()
     assert sorted(results.get(timeout=5) for _ in crowd) == ["refused"] * 7 + ["won"]
     assert everything(tmp_path) == ["run", "run/run.json"]
+
+
+@pytest.mark.parametrize("exchange", [True, False], ids=["one step", "two renames"])
+def test_the_new_folder_replaces_the_old_one_with_and_without_the_system_s_help(
+    tmp_path, monkeypatch, exchange
+):
+    target = filled(tmp_path / "run")
+    if not exchange:
+        monkeypatch.setattr(place, "_exchanged", lambda part, target: False)
+    with whole_folder(target, force=True) as part:
+        write_text(part / MARK, "2")
+    assert everything(tmp_path) == ["run", "run/run.json"] and (target / MARK).read_text() == "2"
+
+
+@pytest.mark.skipif(not sys.platform.startswith("linux"), reason="other systems need two renames")
+def test_folders_are_exchanged_in_one_step(tmp_path):
+    a, b = filled(tmp_path / "a", "1"), filled(tmp_path / "b", "2")
+    assert place._exchanged(a, b)
+    assert (a / MARK).read_text() == "2" and (b / MARK).read_text() == "1"
+    assert not place._exchanged(a, tmp_path / "none")
+
+
+BUSY = """
+import sys
+from pathlib import Path
+from cohortflow.runs.place import whole_folder, write_text
+print("ready", flush=True)
+for turn in range(10_000):
+    with whole_folder(Path(sys.argv[1]), force=True) as part:
+        for name in "abcdefgh":
+            write_text(part / f"{name}.csv", str(turn) * 2000)
+        write_text(part / "run.json", str(turn))
+"""
+
+
+@pytest.mark.parametrize("milliseconds", [3, 8, 21, 34, 55, 89, 144])
+def test_killed_at_any_moment_one_whole_run_is_there(tmp_path, milliseconds):
+    target = filled(tmp_path / "run", "0")
+    child = subprocess.Popen([sys.executable, "-c", BUSY, str(target)], stdout=subprocess.PIPE, cwd=ROOT)
+    assert child.stdout.readline() == b"ready\n"
+    time.sleep(milliseconds / 1000)
+    os.kill(child.pid, signal.SIGKILL)
+    child.wait()
+    turn = (target / MARK).read_text()  # there at once, before any later run has put things right
+    files = {p.name for p in target.glob("*.csv")}
+    if files:
+        assert files == {f"{name}.csv" for name in "abcdefgh"}
+        assert all((target / name).read_text() == turn * 2000 for name in files)
+    with whole_folder(target, force=True) as part:
+        write_text(part / MARK, "last")
+    assert everything(tmp_path) == ["run", "run/run.json"]
+
+
+RUN = """
+import sys
+import cohortflow as cf
+cf.run(sys.argv[1], out=sys.argv[2], force=True, progress=lambda what: print(what, flush=True))
+"""
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("stage", ["reading", "fitting", "projecting", "writing"])
+def test_a_whole_run_killed_at_a_stage_leaves_the_earlier_run_byte_for_byte(tmp_path, stage):
+    rows({"hhg": 6, "hhhhh": 9, "hahhh": 4, "1.hhgh": 3}, last=4).to_csv(tmp_path / "panel.csv", index=False)
+    (tmp_path / "small.toml").write_text(STUDY)
+    target = cf.run(tmp_path / "small.toml", upto="project", out=tmp_path / "run").path
+    before = {p: p.read_bytes() for p in target.rglob("*") if p.is_file()}
+    call = [sys.executable, "-c", RUN, str(tmp_path / "small.toml"), str(target)]
+    child = subprocess.Popen(call, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL, cwd=ROOT, text=True)
+    for line in child.stdout:
+        if line.strip() == stage:
+            os.kill(child.pid, signal.SIGKILL)
+            break
+    else:
+        pytest.fail(f"the run never said that it was {stage}")
+    child.wait()
+    assert {p: p.read_bytes() for p in target.rglob("*") if p.is_file()} == before
+    again = cf.run(tmp_path / "small.toml", upto="fit", out=target, force=True)
+    assert again.path == target and {p.name for p in tmp_path.iterdir()} == {"panel.csv", "small.toml", "run"}

@@ -5,6 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+import click
+
 from cohortflow.cli.call import Call
 from cohortflow.cli.options import study_command
 
@@ -16,10 +18,15 @@ EXAMPLES = """\
 cohortflow run veg/veg_box.toml
 cohortflow run veg/veg_box.toml --out forecasts/2026Q3
 cohortflow run veg/veg_box.toml --as-of 2026-06-30 --by channel --out midyear
+cohortflow run veg/veg_box.toml --workbook --parquet --force
 COHORTFLOW_HORIZON=6 cohortflow run veg/veg_box.toml --force"""
 
 
-@study_command("run", EXAMPLES)
+WORKBOOK = click.Option(["--workbook"], is_flag=True, help="Also workbook.xlsx: a summary, and a sheet a table.")
+PARQUET = click.Option(["--parquet"], is_flag=True, help="Also each table as a Parquet file beside its CSV file.")
+
+
+@study_command("run", EXAMPLES, extra=(WORKBOOK, PARQUET))
 def command(call: Call) -> int:
     """Make the whole forecast and write it into one folder: tables, charts, counts and report.html.
 

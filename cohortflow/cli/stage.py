@@ -13,7 +13,7 @@ from cohortflow.cli.plan import plan_text
 from cohortflow.record import plain
 from cohortflow.report.table import csv_text
 from cohortflow.report.wording import note
-from cohortflow.runs.folder import Run, run
+from cohortflow.runs.folder import ALSO, Run, run
 from cohortflow.runs.write import record
 from cohortflow.study import Study
 
@@ -37,6 +37,7 @@ def perform(call: Call, main: str, words: Words, *, folder: Callable[[Study], Pa
         out=out,
         force=call.force,
         keep_values=call.keep_values,
+        also=[name for name in ALSO if call.extra.get(name)],
         progress=console.progress(),
     )
     console.result(shown(done, call.form, main, words))

@@ -8,7 +8,7 @@ give the same bytes: rows are sorted, floats written in full, no time is written
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Collection, Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, ClassVar, TypeVar
@@ -39,6 +39,7 @@ STAGES: dict[str, frozenset[str]] = {
     "backtest": frozenset({"fit", "backtest"}),
     "run": frozenset({"fit", "adequacy", "forecast", "plans", "backtest"}),
 }
+ALSO = ("workbook", "parquet")
 Progress = Callable[[str], None]
 T = TypeVar("T")
 
@@ -103,6 +104,7 @@ def run(
     out: str | Path | None = None,
     force: bool = False,
     keep_values: bool = False,
+    also: Collection[str] = (),
     progress: Progress | None = None,
 ) -> Run:
     """Do everything that a study asks for, or only up to a stage, and write it into one folder.
@@ -116,6 +118,7 @@ def run(
     by : a segment column: also separately for each of its values
     out : the new folder; None writes nothing. `force` replaces an earlier run there
     keep_values : write the offending values into rejected.csv too (they may be personal data)
+    also : "workbook" (workbook.xlsx, the same tables as sheets), "parquet" (each table beside its CSV file)
     progress : told what is being done
 
     Raises OutputError when the folder may not be written, and whatever the steps refuse.
@@ -134,6 +137,7 @@ def run(
     """
     if upto not in STAGES:
         raise CallError(f'Unknown stage "{upto}"{nearest(upto, STAGES)}. Stages: {listed(STAGES)}.')
+    _check_also(also, out)
     study = study if isinstance(study, Study) else read_study(study)
     tell = progress or _silent
     if out is None:
@@ -141,8 +145,21 @@ def run(
     with whole_folder(Path(out), force=force) as part:
         done = _made(study, upto, by, tell, keep_values=keep_values)
         tell("writing")
-        write.run_folder(done, part)
+        write.run_folder(done, part, also=also)
     return replace(done, path=Path(out))
+
+
+def _check_also(also: Collection[str], out: str | Path | None) -> None:
+    """Refuse before hours of work what could not be written after them."""
+    for name in also:
+        if name not in ALSO:
+            raise CallError(f'Nothing is called "{name}"{nearest(name, ALSO)}. also takes {listed(ALSO)}.')
+    if also and out is None:
+        raise CallError(f"{listed(also)} needs a folder to be written into: give out= (--out).")
+    if "workbook" in also:
+        from cohortflow.report.workbook import check_available
+
+        check_available()
 
 
 def _made(study: Study, upto: str, by: str | None, tell: Progress, *, keep_values: bool) -> Run:

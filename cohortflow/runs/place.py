@@ -1,14 +1,17 @@
 """Writing a folder so that it is there whole or not at all, and by one run at a time.
 
-Everything is written into a hidden folder beside the target and renamed into place at the end. A lock file
-beside it, held by the operating system, goes when its process goes, however that ends; what a killed run left
-behind is cleared away, and an older folder it was about to replace put back, by the next run into that place.
+Everything is written into a hidden folder beside the target and moved into place at the end, in one step where
+the system can (Linux). A lock file beside it, held by the operating system, goes when its process goes, however
+that ends; what a killed run left behind is cleared away, and an older folder it was about to replace put back,
+by the next run into that place.
 """
 
 from __future__ import annotations
 
+import ctypes
 import os
 import shutil
+import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -16,6 +19,7 @@ from pathlib import Path
 from cohortflow.errors import OutputError
 
 MARK = "run.json"
+HERE, EXCHANGE = -100, 2  # AT_FDCWD and RENAME_EXCHANGE of Linux
 
 
 def check_free(target: Path, *, force: bool, mark: str = MARK) -> None:
@@ -94,11 +98,22 @@ def _recover(target: Path) -> None:
 
 
 def _into_place(part: Path, target: Path) -> None:
+    """One step where the system can exchange two folders; else two renames, which `_recover` can complete."""
+    if target.exists() and _exchanged(part, target):
+        return  # the earlier folder is now `part`, and is removed as such
     old = _hidden(target, "old")
     if target.exists():
         target.rename(old)
     part.rename(target)
     shutil.rmtree(old, ignore_errors=True)
+
+
+def _exchanged(part: Path, target: Path) -> bool:
+    """Whether the two folders have changed places at once; False where the system has no such call."""
+    call = getattr(ctypes.CDLL(None), "renameat2", None) if sys.platform.startswith("linux") else None
+    if call is None:
+        return False
+    return call(HERE, os.fsencode(part), HERE, os.fsencode(target), EXCHANGE) == 0
 
 
 @contextmanager

@@ -20,5 +20,11 @@ def versions() -> dict[str, str]:
 
 def made_at() -> str | None:
     """The time of SOURCE_DATE_EPOCH, if that is set; else None, so that a repeated run has the same bytes."""
-    epoch = os.environ.get("SOURCE_DATE_EPOCH", "")
-    return datetime.fromtimestamp(int(epoch), UTC).isoformat() if epoch.isdigit() else None
+    seconds = epoch()
+    return None if seconds is None else datetime.fromtimestamp(seconds, UTC).isoformat()
+
+
+def epoch() -> int | None:
+    """SOURCE_DATE_EPOCH in seconds, if that is set to a whole number."""
+    text = os.environ.get("SOURCE_DATE_EPOCH", "")
+    return int(text) if text.isdigit() else None

@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Collection
 from dataclasses import asdict
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from cohortflow import __version__
 from cohortflow.history import save_tally
+from cohortflow.history.export import write_parquet
 from cohortflow.record import plain
 from cohortflow.report.definitions import assumption_log
 from cohortflow.report.table import csv_text
 from cohortflow.runs.place import MARK, write_text
-from cohortflow.runs.versions import made_at, versions
+from cohortflow.runs.versions import epoch, made_at, versions
 
 if TYPE_CHECKING:
     from cohortflow.runs.folder import Run
@@ -21,8 +23,8 @@ if TYPE_CHECKING:
 FORMAT_VERSION = 1
 
 
-def run_folder(done: Run, folder: Path) -> None:
-    """Write everything that the run holds into an empty folder."""
+def run_folder(done: Run, folder: Path, *, also: Collection[str] = ()) -> None:
+    """Write everything that the run holds into an empty folder; `also`: workbook, parquet."""
     for name, frame in done.tables.items():
         write_text(folder / "tables" / f"{name}.csv", csv_text(frame))
     write_text(folder / "rejected.csv", csv_text(done.rejected))
@@ -30,6 +32,11 @@ def run_folder(done: Run, folder: Path) -> None:
         save_tally(done.tally, folder / "tally")
     if done.stage == "run":
         write_report(done, folder)
+    if "workbook" in also:
+        write_workbook(done, folder)
+    if "parquet" in also:
+        for name, frame in done.tables.items():
+            write_parquet(frame, folder / "tables" / f"{name}.parquet")
     write_text(folder / MARK, record_text(done))
 
 
@@ -39,6 +46,23 @@ def write_report(done: Run, folder: Path) -> None:
 
     for name, text in files_of(content_of(done)).items():
         write_text(folder / name, text)
+
+
+def write_workbook(done: Run, folder: Path) -> None:
+    """workbook.xlsx: a summary and one sheet a table."""
+    from cohortflow.report.workbook import workbook_bytes
+
+    study = done.study
+    facts = {
+        "as of": study.as_of.isoformat() if study.as_of else "",
+        "model": study.model.name,
+        "joiners": study.joiners.method,
+        "level of bands": study.level,
+        "seed": study.seed,
+        "made with": f"cohortflow {__version__}",
+        **{name.replace("_", " "): value for name, value in asdict(study.people).items()},
+    }
+    (folder / "workbook.xlsx").write_bytes(workbook_bytes(study.title, facts, done.tables, epoch=epoch()))
 
 
 def record_text(done: Run) -> str:
