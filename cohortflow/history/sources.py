@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import glob
 import hashlib
+import os
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -81,10 +82,9 @@ def found_files(files: Iterable[str | Path], folder: Path) -> list[tuple[str, Pa
     out: dict[Path, str] = {}
     for wanted in files:
         pattern = str(folder / wanted)
-        hits = sorted(glob.glob(pattern, recursive=True)) if glob.has_magic(pattern) else [pattern]
-        paths = [Path(hit) for hit in hits if Path(hit).is_file()]
+        paths = _matches(pattern)
         if not paths:
-            near = sorted(p.name for p in Path(pattern).parent.glob("*") if p.is_file())[:200]
+            near = _beside(pattern)
             raise InputError(
                 f'No file matches "{wanted}" in {folder.resolve()}{nearest(Path(wanted).name, near)}. '
                 "Names in [input] files start from the folder of the study file."
@@ -97,6 +97,23 @@ def found_files(files: Iterable[str | Path], folder: Path) -> list[tuple[str, Pa
                 )
             out.setdefault(path.resolve(), _shown_name(path, folder))
     return [(name, path) for path, name in out.items()]
+
+
+def _matches(pattern: str) -> list[Path]:
+    """Files of a name or glob; a name that no file can have (too long, a zero byte) matches none."""
+    try:
+        hits = sorted(glob.glob(pattern, recursive=True)) if glob.has_magic(pattern) else [pattern]
+        return [Path(hit) for hit in hits if os.path.isfile(hit)]
+    except (OSError, ValueError):
+        return []
+
+
+def _beside(pattern: str) -> list[str]:
+    """Names of files where the pattern looks, for the hint."""
+    try:
+        return sorted(p.name for p in Path(pattern).parent.glob("*") if p.is_file())[:200]
+    except (OSError, ValueError):
+        return []
 
 
 def _shown_name(path: Path, folder: Path) -> str:

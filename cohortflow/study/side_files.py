@@ -64,11 +64,16 @@ def read_rows(
     """Rows of a CSV file with the needed columns; StudyError names the key that asked for it, or the line."""
     try:
         text = (folder / file).read_text(encoding="utf-8-sig")
-    except (OSError, UnicodeDecodeError) as error:
+    except (OSError, ValueError) as error:  # ValueError: no UTF-8, or a zero byte in the name
         reason = error.strerror if isinstance(error, OSError) else "it is not UTF-8 text"
         raise table.refuse(
             key, f'cannot read "{file}": {reason}. Names start from the folder of the study file.'
         ) from None
+    longest = csv.field_size_limit()
+    if any(len(line) > longest for line in text.splitlines()):
+        raise table.refuse(
+            key, f'"{file}" has a line of more than {longest:,} characters; is it the right file?'
+        )
     reader = csv.DictReader(text.splitlines())
     names = [name.strip() for name in reader.fieldnames or []]
     reader.fieldnames = names
