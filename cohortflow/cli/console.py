@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import sys
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -34,3 +35,15 @@ class Console:
                 click.echo(f"{what} ...", err=True)
 
         return step
+
+
+def json_line(kind: str, **content: str) -> str:
+    """A small result as JSON, with kind and format version (report/schema.py).
+
+    >>> print(json_line("demo", folder="veg", study="veg/veg_box.toml").splitlines()[1])
+      "kind": "demo",
+    """
+    from cohortflow.report.schema import FORMAT_VERSION
+
+    whole = {"kind": kind, "format_version": FORMAT_VERSION, **content}
+    return json.dumps(whole, indent=2, ensure_ascii=False) + "\n"

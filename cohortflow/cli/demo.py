@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import click
 
-from cohortflow.cli.console import Console
+from cohortflow.cli.console import Console, json_line
 from cohortflow.cli.options import Command
 
 EXAMPLES = """\
@@ -16,7 +16,9 @@ cohortflow run veg/veg_box.toml"""
 @click.argument("directory", metavar="DIR")
 @click.option("--force", is_flag=True, help="Replace the folder if an earlier demo wrote it.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr but refusals.")
-def command(directory: str, force: bool, quiet: bool) -> int:
+@click.option("--format", "form", type=click.Choice(("table", "json")), default="table", show_default=True,
+              envvar="COHORTFLOW_FORMAT", help="The study file's path, or JSON.")  # fmt: skip
+def command(directory: str, force: bool, quiet: bool, form: str) -> int:
     """Write the demo scenario into DIR: an event log, its study file, a budget and a plan of joiners.
 
     The "Hollin Weir veg box" is invented; its generator, with the true rates, is there too.
@@ -25,6 +27,7 @@ def command(directory: str, force: bool, quiet: bool) -> int:
 
     folder = write_demo(directory, force=force)
     console = Console(quiet=quiet)
-    console.result(f"{folder / 'veg_box.toml'}\n")
+    study = folder / "veg_box.toml"
+    console.result(json_line("demo", folder=str(folder), study=str(study)) if form == "json" else f"{study}\n")
     console.say(f"Next: cohortflow run {folder / 'veg_box.toml'}")
     return 0

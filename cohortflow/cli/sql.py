@@ -6,7 +6,7 @@ from pathlib import Path
 
 import click
 
-from cohortflow.cli.console import Console
+from cohortflow.cli.console import Console, json_line
 from cohortflow.cli.options import Command
 
 EXAMPLES = """\
@@ -18,7 +18,9 @@ cohortflow sql panel.toml --dialect sqlite > count.sql"""
 @click.argument("study", metavar="STUDY")
 @click.option("--dialect", default="duckdb", show_default=True, help="duckdb, postgres, spark or sqlite.")
 @click.option("--table", default="history", show_default=True, help="The table with the rows.")
-def command(study: str, dialect: str, table: str) -> int:
+@click.option("--format", "form", type=click.Choice(("table", "json")), default="table", show_default=True,
+              envvar="COHORTFLOW_FORMAT", help="The bare statement, or JSON.")  # fmt: skip
+def command(study: str, dialect: str, table: str, form: str) -> int:
     """Print the statement that counts one-period moves where the rows live.
 
     The table has one row a customer and period, the period a whole number that grows by one; columns, states,
@@ -45,5 +47,7 @@ def command(study: str, dialect: str, table: str) -> int:
         on_absent=spec.on_absent,
         dialect=dialect,
     )
+    if form == "json":
+        sql = json_line("sql", dialect=dialect, table=table, statement=sql)
     Console().result(sql)
     return 0
