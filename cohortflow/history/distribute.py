@@ -94,7 +94,8 @@ def _answers(split: Any, work: Callable[[Any], Any]) -> list[Any]:
     rows = split.applyInArrow(_guarded(work), ANSWER).collect()
     refused = sorted((row for row in rows if row.kind == "refusal"), key=lambda r: r.payload)
     if refused:
-        kinds = {c.__name__: c for c in (CohortflowError, *CohortflowError.__subclasses__())}
+        known: tuple[type[CohortflowError], ...] = (CohortflowError, *CohortflowError.__subclasses__())
+        kinds = {kind.__name__: kind for kind in known}
         raise kinds.get(refused[0].name, InputError)(refused[0].payload.decode())
     return sorted(rows, key=lambda r: (r.kind, r.name, r.payload))
 

@@ -84,7 +84,8 @@ def history_study(folder) -> cf.study.Study:
     path.write_text(
         '[study]\nperiod = "step"\n[input]\nlayout = "history"\nfiles = ["none.csv"]\ncustomer = "customer"\n'
         'time = "period"\nstate = "state"\non_absent = "left"\n'
-        '[[state]]\nname = "fresh"\nrole = "entry"\n[[state]]\nname = "steady"\n[[state]]\nname = "left"\nrole = "exit"\n'
+        '[[state]]\nname = "fresh"\nrole = "entry"\n[[state]]\nname = "steady"\n'
+        '[[state]]\nname = "left"\nrole = "exit"\n'
     )
     return cf.read_study(path)
 
