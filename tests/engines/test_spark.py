@@ -40,8 +40,8 @@ def same(one: cf.Tally, two: cf.Tally) -> None:
 @pytest.fixture(scope="module")
 def demo_part(tmp_path_factory):
     """Some hundred members of the demo scenario, with its study file, as text files."""
-    from demo_data.generate import generate
     from cohortflow.runs.demo import write_demo
+    from demo_data.generate import generate
 
     folder = write_demo(tmp_path_factory.mktemp("demo") / "veg")
     for path in folder.glob("events-*"):
