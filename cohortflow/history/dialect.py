@@ -33,7 +33,8 @@ MOST_COLUMNS = 10_000  # more are a sign of a wrong delimiter, and take minutes 
 
 @dataclass(frozen=True)
 class Dialect:
-    """`sample`: the first records as lists of text; `guessed`: encoding or delimiter were not given."""
+    """`sample`: the first records as lists of text; `guessed`: encoding or delimiter were not given.
+    `blank_lines`: empty lines before the header, which the engine would take for the header."""
 
     encoding: str
     delimiter: str
@@ -42,6 +43,7 @@ class Dialect:
     newline_only_cr: bool = False
     packed: bool = False
     guessed: tuple[str, ...] = ()
+    blank_lines: int = 0
 
     @property
     def as_is(self) -> bool:
@@ -67,7 +69,8 @@ def detect(path: Path, *, encoding: str | None = None, delimiter: str | None = N
     header = _header(path, records[0])
     guessed = (*(() if encoding else ("encoding",)), *(() if delimiter else ("delimiter",)))
     sample = tuple(tuple(r) for r in records[1 : SAMPLED_ROWS + 1])
-    return Dialect(found, separator, header, sample, only_cr, packed, guessed)
+    blank = len(lines) - len(lines.lstrip("\n"))
+    return Dialect(found, separator, header, sample, only_cr, packed, guessed, blank)
 
 
 def is_packed(path: Path) -> bool:

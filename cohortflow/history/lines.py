@@ -8,11 +8,13 @@ from __future__ import annotations
 
 import csv
 import io
+import zlib
 from collections.abc import Sequence
 from pathlib import Path
 
 import numpy as np
 
+from cohortflow.errors import InputError
 from cohortflow.history.dialect import opened_bytes
 from cohortflow.history.sources import Source
 
@@ -28,7 +30,15 @@ class LineFinder:
         self._bad: np.ndarray | None = None
 
     def lines(self, kept: Sequence[int] | np.ndarray) -> np.ndarray:
-        """Line of each kept record (0 = the first that the engine kept of this source)."""
+        """Line of each kept record (0 = the first that the engine kept); InputError when the file is damaged."""
+        try:
+            return self._lines(kept)
+        except (OSError, EOFError, zlib.error) as error:
+            raise InputError(
+                f"{self.source.name}: the packed file is damaged ({error}); pack the extract again."
+            ) from None
+
+    def _lines(self, kept: Sequence[int] | np.ndarray) -> np.ndarray:
         kept = np.asarray(kept, dtype=np.int64) // self.source.cells
         if self.source.dialect is None:
             return kept + 1

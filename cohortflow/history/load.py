@@ -89,13 +89,16 @@ def _run(engine: Engine, source: Source, sql: str) -> None:
     try:
         engine.run(sql)
     except Exception as error:
-        reason = next(
-            (line.strip() for line in str(error).splitlines() if line.strip()), type(error).__name__
-        )
-        raise InputError(
-            f"{source.name}: the file could not be read as {source.shown}: {reason}. Check `delimiter` and "
-            "`encoding` in [input], or save the extract again as CSV in UTF-8."
-        ) from None
+        raise _unreadable(source, error) from None
+
+
+def _unreadable(source: Source, error: Exception) -> InputError:
+    """The engine's refusal as one of ours."""
+    reason = next((line.strip() for line in str(error).splitlines() if line.strip()), type(error).__name__)
+    return InputError(
+        f"{source.name}: the file could not be read as {source.shown}: {reason}. Check `delimiter` and "
+        "`encoding` in [input], or save the extract again as CSV in UTF-8."
+    )
 
 
 def _note_bad_records(engine: Engine, source: Source, number: int) -> None:
@@ -292,10 +295,14 @@ class _Maker:
     def _ordered(self, source: Source, sql: str, form: TimeFormat, where: str) -> TimeFormat:
         mark = quoted(form.order_unknown)
         first, second = (f"try_cast(split_part(trim({sql}), {mark}, {i}) AS INTEGER)" for i in (1, 2))
-        found = self.engine.rows(
+        sql = (
             f"SELECT coalesce(bool_or({first} BETWEEN 13 AND 31), false), "
             f"coalesce(bool_or({second} BETWEEN 13 AND 31), false) FROM {source.relation}"
-        )[0]
+        )
+        try:
+            found = self.engine.rows(sql)[0]
+        except Exception as error:
+            raise _unreadable(source, error) from None
         return in_order(form, bool(found[0]), bool(found[1]), where=where)
 
     # ---- the rest ----

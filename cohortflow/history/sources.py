@@ -207,6 +207,7 @@ def _relation_source(engine: Engine, name: str, relation: str) -> Source:
 def _csv_sql(path: Path, dialect: Dialect, number: int) -> str:
     columns = ", ".join(f"'c{i}': 'VARCHAR'" for i in range(len(dialect.header)))
     packed = ", compression='gzip'" if dialect.packed and dialect.as_is else ""
+    packed += f", skip={dialect.blank_lines}" if dialect.blank_lines else ""
     return (
         f"read_csv({quoted(str(path))}, auto_detect=false, header=true, delim={quoted(dialect.delimiter)}, "
         f"""quote='"', escape='"', columns={{{columns}}}, store_rejects=true, """
