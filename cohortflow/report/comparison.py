@@ -176,7 +176,9 @@ def comparison_text(comparison: Any) -> str:
     if len(tables["outcome_lines"]):
         parts.append(plain_text(lines_table(tables["outcome_lines"])))
     if len(tables["outcome"]):
-        parts.append(plain_text(outcome_table(tables["outcome"], quantities=customers[:1])))
+        last = tables["outcome"][tables["outcome"]["run"] == comparison.earlier]
+        if len(last):
+            parts.append(plain_text(outcome_table(last, quantities=customers[:1])))
         parts.append(plain_text(calibration_table(tables["calibration"])))
     if len(tables["settings"]):
         parts.append(plain_text(settings_table(tables["settings"])))
