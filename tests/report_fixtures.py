@@ -198,6 +198,52 @@ def approach(states: States, ahead: int = 40) -> pd.DataFrame:
     return rows[rows["state"].isin(states.remaining)].reset_index(drop=True)
 
 
+def band_parts(states: States, ahead: int = 8) -> pd.DataFrame:
+    rows = []
+    for k, quantity in enumerate(("all_live", *states.remaining)):
+        for h in range(ahead + 1):
+            parts = (3.0 * h, 40.0 * h, 60.0 * h**1.5, 25.0 * h**2 * (k == 0))
+            rows.append(("all", CAL.label(START + 24 + h), h, quantity, *parts, sum(parts)))
+    columns = ["segment", "period", "periods_ahead", "quantity", "rates", "chance", "common_shocks", "joiners", "total"]
+    return pd.DataFrame(rows, columns=columns)
+
+
+def value(states: States, currency: str = "GBP") -> pd.DataFrame:
+    rows = [("customer_value", n, *(x + 40 * k for x in (300.0, 280.0, 330.0))) for k, n in enumerate(states.remaining)]
+    rows += [("customer_sd", n, 250.0, np.nan, np.nan) for n in states.remaining]
+    rows += [("joining_cohort", "", 80_000.0, 76_000.0, 85_000.0), ("joining_cohort_sd", "", 6_000.0, np.nan, np.nan),
+             ("base", "", 1.2e6, 1.1e6, 1.3e6), ("base_sd", "", 3e4, np.nan, np.nan),
+             ("contribution_over_horizon", "", 510_000.0, 470_000.0, 560_000.0)]  # fmt: skip
+    frame = pd.DataFrame(rows, columns=["measure", "state", "value", "low", "high"])
+    frame.insert(0, "segment", "all")
+    return frame.assign(currency=currency)
+
+
+def scenarios(states: States) -> pd.DataFrame:
+    """One scenario for each of the first three states, named after it."""
+    rows = []
+    for k, name in enumerate(states.remaining[:3]):
+        for period, quantity, base, off in (("2026-12", "all_live", 4000.0, 10.0 - 30 * k),
+                                            ("2027-06", "all_live", 4100.0, 40.0 - 60 * k),
+                                            ("total", "value", 510_000.0, 9_000.0 * k), ("total", "cost", 0.0, 900.0),
+                                            ("total", "net", 510_000.0, 9_000.0 * k - 900)):  # fmt: skip
+            rows.append(("all", name, period, quantity, base, base + off, off, off - 5, off + 6, np.nan, np.nan))
+    columns = ["segment", "scenario", "period", "quantity", "base", "with_change", "difference", "low", "high", "cost",
+               "net"]  # fmt: skip
+    return pd.DataFrame(rows, columns=columns)
+
+
+def adequacy() -> pd.DataFrame:
+    rows = [
+        ("all", "order", "previous_state", 30.1, 12.0, 0.003, 12.0, "doubtful", "second_order"),
+        ("all", "drift", "eras", 51.0, 20.0, 0.0005, 310.0, "fails", "recent"),
+        ("all", "segments", "channel", 18.0, 22.0, 0.71, 3.0, "holds", ""),
+        ("all", "customers", "rates_differ", np.nan, np.nan, np.nan, np.nan, "not_testable", "customer_rows"),
+    ]
+    columns = ["segment", "check", "what", "statistic", "df", "p_value", "effect", "verdict", "advice"]
+    return pd.DataFrame(rows, columns=columns)
+
+
 def tables(states: States) -> dict[str, pd.DataFrame]:
     """Everything that a whole run has."""
     return {

@@ -7,6 +7,7 @@ import pytest
 from cohortflow import report
 from cohortflow.report.chart.style import NARROW, WIDE, svg
 from tests import report_fixtures as made
+from tests.backtest_cases import past_record
 from tests.report_layout import clipped, overlapping
 
 SETS = {"small": made.SMALL, "hostile": made.HOSTILE, "fifteen": made.FIFTEEN}
@@ -38,6 +39,9 @@ CHARTS = {
     "exit_reason": lambda s, w: report.exit_reason_chart(made.exits(s), width=w),
     "settling": lambda s, w: report.settling_chart(made.approach(s), made.long_run(s), width=w),
     "groups": _groups,
+    "band_parts": lambda s, w: report.band_parts_chart(made.band_parts(s), quantity=s.remaining[0], width=w),
+    "scenarios": lambda s, w: report.scenarios_chart(made.scenarios(s), currency="GBP", width=w),
+    "backtest": lambda s, w: report.backtest_chart(past_record(), "recent", width=w),
 }
 
 

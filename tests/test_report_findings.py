@@ -2,7 +2,6 @@
 
 from dataclasses import replace
 
-import pandas as pd
 import pytest
 
 from cohortflow.history import Finding as CheckFinding
@@ -64,11 +63,13 @@ def test_excluded_periods_are_printed():
     )
 
 
-def test_a_failed_assumption_comes_with_its_advice():
-    rows = pd.DataFrame({"segment": "all", "check": ["memory", "drift"], "what": ["the state before matters", ""],
-                         "verdict": ["fails", "holds"], "advice": ["use model second_order", ""]})  # fmt: skip
-    found = texts("rests", tables={"adequacy": rows})
-    assert found == ["Memory: the state before matters does not hold. use model second order."]
+def test_failed_assumptions_are_said_one_by_one_and_doubtful_ones_together():
+    found = texts("annex", tables={"adequacy": made.adequacy()})
+    assert found == [
+        'The assumption "no drift (early, late)" fails; model recent would move live customers at the horizon by +310.',
+        "Doubtful, but with little effect at the horizon; what repairs one of them moves live customers by 12 at most: "
+        "no memory.",
+    ]
 
 
 def test_a_model_that_leaves_the_observed_retention_is_said():

@@ -89,7 +89,7 @@ def test_every_chart_has_a_text_alternative_and_a_table(small):
 
 
 def test_tables_have_captions_and_scopes(small):
-    assert small.count("<caption>") == len(re.findall('<table(?: class="short")?>', small))
+    assert small.count("<caption>") == len(re.findall('<table(?: class="(?:short|signed)")?>', small))
     assert not re.search(r"<th(?! scope)[ >]", small)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from functools import partial
 from types import MappingProxyType
 from typing import Any
 
@@ -13,6 +14,16 @@ from cohortflow.report.table import Table
 from cohortflow.states import States
 
 Draw = Callable[[float], Drawing]
+
+
+def bound(chart: Callable[..., Drawing], *args: Any, **options: Any) -> Draw:
+    """A chart that waits for its width."""
+    waiting = partial(chart, *args, **options)
+
+    def draw(width: float) -> Drawing:
+        return waiting(width=width)
+
+    return draw
 
 
 def _empty() -> Mapping[str, str]:
@@ -27,6 +38,10 @@ class Facts:
     notes : codes of the records ("few_at_risk:quiet", ...) and findings of the check
     verdict, reasons : of the long run
     parts : what the bands hold;  validated : periods ahead that back-tests bear out (None: not tested)
+    borne : the same by quantity, as far as tested
+    joining : (expected, low, high) number who join up to the horizon
+    previous : headline's key -> its figure in the last run, for the change since
+    cases : scenario -> "low" or "high";  terms : sentences on how money is counted
     rules : state -> its rule in words;  inputs : (name, bytes, rows, sha256);  settings : name -> "value (origin)"
     absent : table -> why it could not be made
     """
@@ -51,6 +66,11 @@ class Facts:
     reasons: tuple[str, ...] = ()
     parts: tuple[str, ...] = ()
     validated: int | None = None
+    borne: Mapping[str, int] = field(default_factory=lambda: MappingProxyType({}))
+    joining: tuple[float, float, float] | None = None
+    previous: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    cases: Mapping[str, str] = field(default_factory=_empty)
+    terms: tuple[str, ...] = ()
     rules: Mapping[str, str] = field(default_factory=_empty)
     inputs: tuple[tuple[str, int, int | None, str], ...] = ()
     settings: Mapping[str, str] = field(default_factory=_empty)
@@ -64,6 +84,11 @@ class Facts:
     def kind(self) -> str:
         """The calendar's kind of period."""
         return self.calendar.kind
+
+    @property
+    def main(self) -> str:
+        """The sum that stands first: the total named paying where there is one, else all live customers."""
+        return "paying" if "paying" in self.totals else "all_live"
 
     @property
     def quantities(self) -> tuple[str, ...]:
@@ -81,12 +106,18 @@ class Finding:
 
 @dataclass(frozen=True)
 class Headline:
-    """One of the figures that come first: what, how much, its band, what it rests on."""
+    """One of the figures that come first: what, how much, its band, a sentence; change since the last run.
+
+    key, amount : for that change, and for the next run's
+    """
 
     label: str
     value: str
     band: str
     basis: str
+    key: str = ""
+    amount: float = float("nan")
+    change: str = ""
 
 
 @dataclass(frozen=True)
@@ -117,13 +148,19 @@ class Section:
 
 @dataclass(frozen=True)
 class Content:
-    """A whole report in its final order."""
+    """A whole report in its final order.
+
+    standing : sentences beside the first figures: how far validated, which model, what the annex says
+    cases : low, base and high side by side
+    """
 
     facts: Facts
     summary: str
     headlines: tuple[Headline, ...]
     findings: tuple[Finding, ...]
     sections: tuple[Section, ...]
+    standing: tuple[str, ...] = ()
+    cases: Table | None = None
 
     def findings_in(self, section: str) -> tuple[Finding, ...]:
         """The findings to be said in one section."""

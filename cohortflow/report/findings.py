@@ -3,23 +3,28 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
+from typing import Any
 
 import pandas as pd
 
 from cohortflow.report.chart.retention import departure
 from cohortflow.report.chart.settling import settled
 from cohortflow.report.content import Facts, Finding
-from cohortflow.report.rounding import count, duration, missing, percent, unit
+from cohortflow.report.rounding import count, duration, missing, percent, signed, unit
 from cohortflow.report.tabulate import whole_accounting
 from cohortflow.report.text import listing, upper_first
+from cohortflow.report.trust import ADVICE, assumption
 from cohortflow.report.wording import note, said
 
 Tables = Mapping[str, pd.DataFrame]
-SECTIONS = ("counted", "moves", "heading", "settles", "stay", "rests", "definitions", "methods")
+SECTIONS = (
+    "counted", "moves", "heading", "past", "settles", "stay", "money", "plans", "rests", "definitions", "methods",
+    "annex",
+)  # fmt: skip
 PLACES = {
     "no_data": "moves", "few_at_risk": "moves", "undeclared_absorbing": "moves", "no_buckets": "moves",
     "one_period_only": "moves", "impossible_move": "moves", "rows_without_data": "heading",
-    "never_exits": "stay", "may_not_exit": "stay",
+    "never_exits": "stay", "may_not_exit": "stay", "no_exit_no_discount": "money",
 }  # fmt: skip
 SHARE_REJECTED = 0.01
 
@@ -82,20 +87,23 @@ def _settings(facts: Facts) -> Iterator[Finding]:
 
 
 def _adequacy(tables: Tables) -> Iterator[Finding]:
+    """Each assumption that fails; those that are doubtful together."""
     if "adequacy" not in tables:
         return
-    rows = tables["adequacy"]
-    for _, row in rows[rows["verdict"].isin(["fails", "doubtful"])].iterrows():
-        word = "does not hold" if row["verdict"] == "fails" else "is doubtful"
-        advice = (
-            ""
-            if missing(row.get("advice")) or not str(row.get("advice"))
-            else f" {said(str(row['advice']))}."
-        )
-        what = str(row["what"]) if not missing(row["what"]) else ""
-        yield Finding(
-            f"{upper_first(said(str(row['check'])))}: {what or 'the assumption'} {word}.{advice}", "rests"
-        )
+    rows: list[dict[Any, Any]] = tables["adequacy"].to_dict("records")
+    for row in rows:
+        if row["verdict"] == "fails":
+            moves = "" if missing(row.get("effect")) else (
+                f"; {ADVICE.get(str(row['advice']), 'its remedy')} would move live customers at the horizon by "
+                f"{signed(row['effect'])}"
+            )  # fmt: skip
+            yield Finding(f'The assumption "{assumption(row)}" fails{moves}.', "annex")
+    doubtful = [row for row in rows if row["verdict"] == "doubtful"]
+    if doubtful:
+        most = max((abs(r["effect"]) for r in doubtful if not missing(r.get("effect"))), default=None)
+        size = "" if most is None else f"; what repairs one of them moves live customers by {count(most)} at most"
+        names = listing([assumption(r) for r in doubtful], limit=4)
+        yield Finding(f"Doubtful, but with little effect at the horizon{size}: {names}.", "annex")
 
 
 def _retention(facts: Facts, tables: Tables) -> Iterator[Finding]:

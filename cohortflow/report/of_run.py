@@ -3,21 +3,32 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import partial
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from cohortflow import __version__
 from cohortflow.errors import CallError, CohortflowError, OutputError
+from cohortflow.estimator import fit
+from cohortflow.projector import step_counts
+from cohortflow.projector.bands import quantile_band
 from cohortflow.report.ahead import approach
 from cohortflow.report.content import Content, Facts
 from cohortflow.report.page import page_html, wide_charts
 from cohortflow.report.panel import panel
+from cohortflow.report.past import Trust
+from cohortflow.report.rounding import money, percent, unit
 from cohortflow.report.rules import rule_words
 from cohortflow.report.sections import gather
+from cohortflow.report.text import label, listing
+from cohortflow.states import ALL_LIVE
 from cohortflow.study import Study
 
 ALL = "all"
 SLIDERS = 6
+DRAWS = 2000
 
 
 def content_of(run: Any, *, segment: str = ALL) -> Content:
@@ -36,9 +47,63 @@ def content_of(run: Any, *, segment: str = ALL) -> Content:
         ahead = approach(
             schedule, start.to_numpy(dtype=float), run.study.states, joining=joining, first_step=first
         )
-    return gather(
-        facts_of(run, segment=segment), run.tables, approach=ahead, panel=_panel(run, segment)
-    )
+    return gather(facts_of(run, segment=segment), run.tables, approach=ahead, panel=_panel(run, segment),
+                  trust=_trust(run, segment))  # fmt: skip
+
+
+def _trust(run: Any, segment: str) -> Trust:
+    """The run's backtest, which is of all customers, and the plain chain's course beside a chosen model."""
+    if segment != ALL:
+        return Trust()
+    forecast = run.forecasts[segment]
+    plain = None
+    if run.choice is not None and forecast.fit.model != "plain":
+        fitted, states = fit(forecast.fit.tally, model="plain", exclude=forecast.fit.excluded), run.study.states
+        ahead = step_counts(fitted.schedule, forecast.fit.tally.mix(), forecast.projection.periods,
+                            forecast.joiners.expected())  # fmt: skip
+        plain = ahead[:, states.live_mask].sum(axis=1)
+    return Trust(run.backtest, run.choice, plain)
+
+
+def _borne(run: Any, segment: str) -> dict[str, int]:
+    """Quantity -> periods ahead that past forecasts vouch for; empty without a backtest of this forecast."""
+    model = run.forecasts[segment].fit.model
+    if segment != ALL or run.backtest is None or model not in run.backtest.models:
+        return {}
+    rows = run.backtest.validated
+    own = rows[rows["model"] == model]
+    return {str(q): int(n) for q, n in zip(own["quantity"], own["periods"], strict=True)}
+
+
+def _joined(forecast: Any, level: float, seed: int) -> tuple[float, float, float] | None:
+    """Expected number who join up to the horizon, with the band of its draws."""
+    inflow = forecast.joiners.inflows.get("joined")
+    if inflow is None or not inflow.mean.any():
+        return None
+    drawn = inflow.draw(DRAWS, np.random.default_rng(seed)).sum(axis=(1, 2))
+    low, high = quantile_band(drawn, level)
+    return float(inflow.mean.sum()), float(low), float(high)
+
+
+def _terms(study: Study) -> tuple[str, ...]:
+    """How money is counted, in sentences."""
+    spec = study.value
+    if spec is None:
+        return ()
+    one = unit(study.calendar.kind, 1)
+    amount = partial(money, currency=spec.currency, decimals=2)
+    prices = "as observed in the extract" if spec.per_period is None else listing(
+        [f"{label(state)} {amount(paid)}" for state, paid in spec.per_period.items()], limit=12
+    )  # fmt: skip
+    margin = "" if spec.margin is None else f", times a margin of {percent(spec.margin, 0)}"
+    moves = [f"{label(m.from_)} to {label(m.to)} {amount(m.amount)}" for m in spec.on_move]
+    out = [
+        f"Contribution of a customer a {one}: {prices}{margin}; other states nothing."
+        + (f" On moves: {listing(moves, limit=12)}." if moves else ""),
+        f"Discounted at {percent(spec.discount_rate)} a year, counted at the {spec.timing} of each {one}. This is "
+        "contribution, not revenue.",
+    ]
+    return tuple(out)
 
 
 def _panel(run: Any, segment: str) -> str:
@@ -67,9 +132,12 @@ def _joining(forecast: Any) -> Any:
 def facts_of(run: Any, *, segment: str = ALL) -> Facts:
     """The Facts of one segment of a run."""
     study, forecast = run.study, run.forecasts[segment]
-    fit, tally, long_run = forecast.fit, forecast.fit.tally, forecast.long_run
-    label = tally.calendar.label
-    codes = dict.fromkeys((*forecast.projection.reasons, *long_run.reasons, *_reasons(forecast.exits)))
+    fitted, tally, long_run = forecast.fit, forecast.fit.tally, forecast.long_run
+    period = tally.calendar.label
+    codes = dict.fromkeys(
+        (*forecast.projection.reasons, *long_run.reasons, *_reasons(forecast.exits), *_reasons(forecast.value))
+    )
+    borne = _borne(run, segment)
     notes = (*run.findings, *(c for c in codes if c.partition(":")[0] not in _STRUCTURE))
     return Facts(
         title=study.title,
@@ -77,20 +145,25 @@ def facts_of(run: Any, *, segment: str = ALL) -> Facts:
         calendar=study.calendar,
         level=study.level,
         horizon=forecast.projection.periods,
-        first=label(fit.first),
-        last=label(tally.meta.last),
+        first=period(fitted.first),
+        last=period(tally.meta.last),
         as_of=study.as_of.isoformat() if study.as_of else "",
         seed=study.seed,
-        model=fit.model,
+        model=fitted.model,
         joiners=forecast.joiners.method,
         customers=tally.meta.customers,
-        moves=int(fit.rates.n.sum()),
+        moves=int(fitted.rates.n.sum()),
         totals=study.totals,
-        excluded=tuple(label(p) for p in fit.excluded),
+        excluded=tuple(period(p) for p in fitted.excluded),
         notes=notes,
         verdict=long_run.verdict,
         reasons=tuple(long_run.reasons),
         parts=tuple(forecast.projection.parts),
+        validated=borne.get(ALL_LIVE),
+        borne=borne,
+        joining=_joined(forecast, study.level, study.seed),
+        cases={s.name: s.case for s in study.scenarios if s.case},
+        terms=_terms(study),
         rules={rule.name: rule_words(rule, study.calendar.kind) for rule in study.rules},
         inputs=tuple((i.name, i.bytes, i.rows, i.sha256) for i in run.inputs),
         settings=_settings(study),
@@ -105,8 +178,8 @@ def facts_of(run: Any, *, segment: str = ALL) -> Facts:
 _STRUCTURE = ("closed_group", "periodic_group", "several_groups", "exits_reachable")
 
 
-def _reasons(exits: Any) -> tuple[str, ...]:
-    return () if exits is None else tuple(exits.reasons)
+def _reasons(record: Any) -> tuple[str, ...]:
+    return () if record is None else tuple(record.reasons)
 
 
 def _settings(study: Study) -> dict[str, str]:

@@ -28,6 +28,8 @@ TITLES = {
     "groups": "Groups that nobody leaves", "retention": "Retention", "exit_time": "Time until leaving",
     "exit_reason": "Ways of leaving", "bridge_all_live": "From the last forecast to this one",
     "actual": "Forecast and counts", "levers_0": "What one point of each move is worth",
+    "band_parts": "What the uncertainty is made of", "backtest": "Past forecasts",
+    "scenarios": "What the scenarios would change",
 }  # fmt: skip
 _COLOURS = {light: f"var(--{name})" for name, (light, _) in THEME.items()}
 

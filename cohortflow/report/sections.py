@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
-from functools import partial
-from typing import Any
+from collections.abc import Mapping, Sequence
 
 import pandas as pd
 
 from cohortflow.report import tabulate
+from cohortflow.report.annex import annex_section, annex_sentences, parts_table
+from cohortflow.report.beside import budget_beside, windows_table
+from cohortflow.report.chart.band_parts import band_parts_chart, has_parts
 from cohortflow.report.chart.base import base_chart
 from cohortflow.report.chart.diagram import state_diagram
 from cohortflow.report.chart.exits import exit_reason_chart, exit_time_chart
@@ -17,28 +18,31 @@ from cohortflow.report.chart.levers import levers_chart
 from cohortflow.report.chart.moves import moves_chart
 from cohortflow.report.chart.retention import retention_chart
 from cohortflow.report.chart.rollforward import rollforward_chart
+from cohortflow.report.chart.scenarios import scenarios_chart
 from cohortflow.report.chart.settling import settled, settling_chart
-from cohortflow.report.chart.style import Drawing
-from cohortflow.report.content import Content, Draw, Exhibit, Facts, Section
+from cohortflow.report.content import Content, Exhibit, Facts, Section, bound
 from cohortflow.report.findings import findings
 from cohortflow.report.headlines import headlines, summary
 from cohortflow.report.methods import assumptions, methods_section, states_table
+from cohortflow.report.past import Trust, parting, past_section, standing
 from cohortflow.report.plans import LEVER_NOTE, levers_table, scenario_table
 from cohortflow.report.rounding import count, missing, percent, span, unit
 from cohortflow.report.table import Table
 from cohortflow.report.text import listing
 from cohortflow.report.wording import CAUTIONS, DEFINITIONS, EXPLAIN, JOINERS, said, verdict
+from cohortflow.report.worth import cases_table, money_section
 from cohortflow.states import ALL_LIVE
 
 Tables = Mapping[str, pd.DataFrame]
 
 
 def gather(
-    facts: Facts, tables: Tables, *, approach: pd.DataFrame | None = None, panel: str = ""
+    facts: Facts, tables: Tables, *, approach: pd.DataFrame | None = None, panel: str = "", trust: Trust | None = None
 ) -> Content:
     """The report of one run.
 
     tables : the contract's frames by name; what is absent is left out of the report, and said
+    trust : the backtest and the choice of the model
     panel : the what-if panel as a fragment of the page
     approach : shares by periods_ahead and state, farther than the horizon (default: the projection's own)
     """
@@ -47,26 +51,21 @@ def gather(
     if approach is None and "projection" in own:
         rows = own["projection"]
         approach = rows[rows["state"].isin(list(facts.states.remaining))]
+    seen = trust or Trust()
     sections = (
-        _counted(facts, own), _moves(facts, own), _heading(facts, own, whole), _settles(facts, own, approach),
-        _stay(facts, own), *_plans(facts, own, panel), _rests(facts, own), _definitions(facts), methods_section(facts),
+        _counted(facts, own), _moves(facts, own), _heading(facts, own, whole, seen), *past_section(facts, seen),
+        _settles(facts, own, approach), _stay(facts, own), *money_section(facts, own), *_plans(facts, own, panel),
+        _rests(facts), _definitions(facts), methods_section(facts), *annex_section(facts, own),
     )  # fmt: skip
-    return Content(facts, summary(facts), headlines(facts, own), findings(facts, own, approach), sections)
+    said_first = (*standing(facts, seen), *annex_sentences(facts, own))
+    return Content(facts, summary(facts), headlines(facts, own), findings(facts, own, approach), sections,
+                   said_first, cases_table(facts, own))  # fmt: skip
 
 
 def _of_segment(frame: pd.DataFrame, segment: str) -> pd.DataFrame:
     if "segment" not in frame.columns or segment not in set(frame["segment"]):
         return frame
     return frame[frame["segment"] == segment].reset_index(drop=True)
-
-
-def _drawn(chart: Callable[..., Drawing], *args: Any, **options: Any) -> Draw:
-    bound = partial(chart, *args, **options)
-
-    def draw(width: float) -> Drawing:
-        return bound(width=width)
-
-    return draw
 
 
 def _counted(facts: Facts, tables: Tables) -> Section:
@@ -96,15 +95,15 @@ def _moves(facts: Facts, tables: Tables) -> Section:
         f"each state at the end of the next.",
     )
     exhibits = (
-        Exhibit("moves", _drawn(moves_chart, rows, states=states, period=facts.kind), tabulate.moves_table(rows),
+        Exhibit("moves", bound(moves_chart, rows, states=states, period=facts.kind), tabulate.moves_table(rows),
                 (EXPLAIN["interval"],), narrow=False),
-        Exhibit("diagram", _drawn(state_diagram, rows, states=states, period=facts.kind),
+        Exhibit("diagram", bound(state_diagram, rows, states=states, period=facts.kind),
                 tabulate.matrix_table(rows, states), narrow=len(states) <= 6),
     )  # fmt: skip
     return Section("moves", "How customers move", lead, exhibits)
 
 
-def _heading(facts: Facts, tables: Tables, whole: Tables) -> Section:
+def _heading(facts: Facts, tables: Tables, whole: Tables, trust: Trust) -> Section:
     title = "Where the base is heading"
     if "projection" not in tables:
         return Section("heading", title, (_lacking(facts, "projection"),))
@@ -116,18 +115,29 @@ def _heading(facts: Facts, tables: Tables, whole: Tables) -> Section:
         if facts.parts
         else ""
     )
-    lead = (
-        f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.{bands}",
-    )
-    chart = _drawn(base_chart, rows, past, totals=facts.totals, states=facts.states, kind=facts.kind)
+    lead = [
+        f"The base is projected {horizon} ahead. Joiners: {JOINERS.get(facts.joiners, said(facts.joiners))}.{bands}"
+    ]
+    if trust.plain is not None:
+        live = rows[rows["state"] == ALL_LIVE].sort_values("periods_ahead")
+        half = ((live["high"] - live["low"]) / 2).to_numpy()
+        lead.append(parting(facts, trust.plain, live["customers"].to_numpy(), half))
+    chart = bound(base_chart, rows, past, totals=facts.totals, states=facts.states, kind=facts.kind, borne=facts.borne,
+                  plain=trust.plain)  # fmt: skip
     exhibits = [Exhibit("base", chart, tabulate.base_table(rows, quantities=quantities), (EXPLAIN["band"],))]
     if past is not None and (past["state"] == ALL_LIVE).any():
-        exhibits.append(Exhibit("rollforward", _drawn(rollforward_chart, past), tabulate.rollforward_table(past),
+        exhibits.append(Exhibit("rollforward", bound(rollforward_chart, past), tabulate.rollforward_table(past),
                                 (EXPLAIN["rollforward"],)))  # fmt: skip
+    if "band_parts" in tables and has_parts(tables["band_parts"]):
+        parts = tables["band_parts"]
+        exhibits.append(Exhibit("band_parts", bound(band_parts_chart, parts, kind=facts.kind), parts_table(parts),
+                                (EXPLAIN["band_parts"],)))  # fmt: skip
+    if "budget" in tables:
+        exhibits.append(Exhibit("budget", table=budget_beside(tables["budget"]), open=True))
     by_segment = _segments(whole["projection"])
     if by_segment is not None:
         exhibits.append(Exhibit("segments", table=by_segment, open=True))
-    return Section("heading", title, lead, tuple(exhibits))
+    return Section("heading", title, tuple(lead), tuple(exhibits))
 
 
 def _segments(rows: pd.DataFrame) -> Table | None:
@@ -160,13 +170,13 @@ def _settles(facts: Facts, tables: Tables, approach: pd.DataFrame | None) -> Sec
     words = [EXPLAIN["periods_to_settle"]]
     words += [EXPLAIN[m] for m in ("settled_base", "remaining_mix") if _has(rows, m)]
     if approach is not None and len(goal.rows):
-        exhibits.append(Exhibit("settling", _drawn(settling_chart, approach, rows, kind=facts.kind), table,
+        exhibits.append(Exhibit("settling", bound(settling_chart, approach, rows, kind=facts.kind), table,
                                 tuple(words)))  # fmt: skip
     elif table.rows:
         exhibits.append(Exhibit("settling", table=table, plain_words=tuple(words), open=True))
     groups = groups_of(rows)
     if len(groups) > 1 and not all(g.exit for g in groups):
-        exhibits.append(Exhibit("groups", _drawn(groups_chart, rows)))
+        exhibits.append(Exhibit("groups", bound(groups_chart, rows)))
     return Section("settles", title, tuple(lead), tuple(exhibits))
 
 
@@ -200,17 +210,19 @@ def _stay(facts: Facts, tables: Tables) -> Section:
     if "retention" in tables:
         rows = tables["retention"]
         exhibits.append(
-            Exhibit("retention", _drawn(retention_chart, rows, kind=facts.kind, level=facts.level),
+            Exhibit("retention", bound(retention_chart, rows, kind=facts.kind, level=facts.level),
                     tabulate.retention_table(rows, kind=facts.kind), (EXPLAIN["retention"],))
         )  # fmt: skip
     if "exits" in tables:
         rows = tables["exits"]
         exhibits.append(
-            Exhibit("exit_time", _drawn(exit_time_chart, rows, kind=facts.kind),
+            Exhibit("exit_time", bound(exit_time_chart, rows, kind=facts.kind),
                     tabulate.exits_table(rows, kind=facts.kind), (EXPLAIN["exit_time"],))
         )  # fmt: skip
         if len(facts.states.exits) > 1:
-            exhibits.append(Exhibit("exit_reason", _drawn(exit_reason_chart, rows)))
+            exhibits.append(Exhibit("exit_reason", bound(exit_reason_chart, rows)))
+    if "windows" in tables:
+        exhibits.append(Exhibit("windows", table=windows_table(tables["windows"], kind=facts.kind), open=True))
     lead = () if exhibits else (_lacking(facts, "exits"),)
     return Section("stay", title, lead, tuple(exhibits))
 
@@ -220,39 +232,23 @@ def _plans(facts: Facts, tables: Tables, panel: str) -> tuple[Section, ...]:
     exhibits = []
     if "scenarios" in tables:
         table = scenario_table(tables["scenarios"], currency=facts.currency, kind=facts.kind, segment=facts.segment)
-        exhibits.append(Exhibit("scenarios", table=table, open=True))
+        chart = bound(scenarios_chart, tables["scenarios"], currency=facts.currency, segment=facts.segment)
+        exhibits.append(Exhibit("scenarios", chart, table))
     if "levers" in tables:
         rows = tables["levers"]
         for n, target in enumerate(pd.unique(rows["target"])):
             options = {"target": str(target), "currency": facts.currency, "kind": facts.kind}
-            chart = _drawn(levers_chart, rows, **options) if n == 0 else None
+            first = bound(levers_chart, rows, **options) if n == 0 else None
             table = levers_table(rows, **options)
-            exhibits.append(Exhibit(f"levers_{n}", chart, table, (LEVER_NOTE,) if n == 0 else ()))
+            exhibits.append(Exhibit(f"levers_{n}", first, table, (LEVER_NOTE,) if n == 0 else ()))
     if not exhibits and not panel:
         return ()
     return (Section("plans", "What could be done about it", (), tuple(exhibits), panel=panel),)
 
 
-def _rests(facts: Facts, tables: Tables) -> Section:
-    exhibits = []
-    if "adequacy" in tables:
-        exhibits.append(Exhibit("adequacy", table=_adequacy_table(tables["adequacy"]), open=True))
+def _rests(facts: Facts) -> Section:
     lead = ("The projection rests on these assumptions:",)
-    return Section("rests", "What this rests on, and cautions", lead, tuple(exhibits),
-                   points=assumptions(facts), cautions=CAUTIONS)  # fmt: skip
-
-
-def _adequacy_table(rows: pd.DataFrame) -> Table:
-    cells = [
-        tuple(_word(row.get(c)) for c in ("check", "what", "verdict", "advice")) for _, row in rows.iterrows()
-    ]
-    return Table(
-        "Assumptions tested", ("check", "what", "verdict", "advice"), tuple(cells), texts=(0, 1, 2, 3)
-    )
-
-
-def _word(value: object) -> str:
-    return "" if missing(value) else said(str(value))
+    return Section("rests", "What this rests on, and cautions", lead, points=assumptions(facts), cautions=CAUTIONS)
 
 
 def _definitions(facts: Facts) -> Section:

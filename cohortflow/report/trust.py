@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
-from cohortflow.report.rounding import count, decimal, missing, percent, signed
+from cohortflow.report.chart.backtest import forecaster
+from cohortflow.report.rounding import count, decimal, missing, percent, signed, unit
 from cohortflow.report.table import Table
 from cohortflow.report.tabulate import name
+from cohortflow.report.text import label, listing
+from cohortflow.report.wording import FORECASTERS
 from cohortflow.states import ALL_LIVE
 
 CHECKS = {
@@ -47,12 +51,6 @@ ADVICE = {
     "segment_column": "needs a segment column",
     "too_few_moves": "needs more moves",
 }
-RIVALS = {
-    "last_mix": "last mix",
-    "constant_churn": "constant churn",
-    "last_year": "last year",
-    "cohort_curve": "cohort curve",
-}
 OBJECTIONS = {
     "too_few_origins": "there are fewer than 8 past origins",
     "coverage": "its bands held too often or too seldom",
@@ -61,15 +59,40 @@ OBJECTIONS = {
 }
 
 
+def assumption(row: Mapping[Any, Any]) -> str:
+    """A check as printed: "no memory", "segments alike (channel)".
+
+    >>> assumption({"check": "segments", "what": "channel"}), assumption({"check": "order", "what": "previous_state"})
+    ('segments alike (channel)', 'no memory')
+    """
+    what = PARTS.get(str(row["what"]), str(row["what"]))
+    return CHECKS.get(str(row["check"]), str(row["check"])) + (f" ({label(what)})" if what else "")
+
+
+def adequacy_sentence(frame: pd.DataFrame) -> str:
+    """How many assumptions hold, are doubtful, fail: one sentence for the front.
+
+    >>> rows = {"check": ["order", "drift"], "what": ["previous_state", "eras"], "verdict": ["fails", "holds"]}
+    >>> adequacy_sentence(pd.DataFrame(rows))
+    'Of 2 assumptions that can be tested 1 holds, 0 are doubtful and 1 fails: no memory.'
+    """
+    tried = frame[frame["verdict"] != "not_testable"]
+    holds, doubtful, fails = ((tried["verdict"] == v).sum() for v in ("holds", "doubtful", "fails"))
+    failing = [assumption(r) for r in tried[tried["verdict"] == "fails"].to_dict("records")]
+    return (
+        f"Of {len(tried)} assumptions that can be tested {holds} {'holds' if holds == 1 else 'hold'}, {doubtful} "
+        f"{'is' if doubtful == 1 else 'are'} doubtful and {fails} {'fails' if fails == 1 else 'fail'}"
+        f"{': ' + listing(failing) if failing else ''}."
+    )
+
+
 def adequacy_table(frame: pd.DataFrame, *, segment: str = "all") -> Table:
     """Each assumption, the evidence against it, and what its failure would do to the forecast."""
     rows = []
     for row in frame[frame["segment"] == segment].to_dict("records"):
-        what = PARTS.get(str(row["what"]), str(row["what"]))
-        assumption = CHECKS.get(str(row["check"]), str(row["check"])) + (f" ({what})" if what else "")
         rows.append(
             (
-                assumption,
+                assumption(row),
                 VERDICTS[str(row["verdict"])],
                 "" if missing(row["p_value"]) else _p_value(float(row["p_value"])),
                 "" if missing(row["effect"]) else signed(float(row["effect"])),
@@ -91,15 +114,18 @@ def _p_value(value: float) -> str:
     return "below 0.001" if value < 0.001 else decimal(value, 3)
 
 
-def scores_table(tested: Any, *, quantity: str = ALL_LIVE) -> Table:
-    """Models and rivals at the first, middle and last horizon: how often the band held, error, skill."""
+def scores_table(tested: Any, *, quantity: str = ALL_LIVE, models: Sequence[str] = ()) -> Table:
+    """Models (all, or those named) and rivals at the first, middle and last horizon: how often the band held, error,
+    skill."""
     scores = tested.scores[tested.scores["quantity"] == quantity]
+    if models:
+        scores = scores[scores["model"].isin([*models, *FORECASTERS])]
     horizons = sorted({1, (1 + tested.horizon) // 2, tested.horizon})
     rows = []
     for row in scores[scores["horizon"].isin(horizons)].sort_values(["horizon"], kind="stable").to_dict("records"):
         rows.append(
             (
-                RIVALS.get(str(row["model"]), f"model {row['model']}"),
+                forecaster(str(row["model"])),
                 count(row["horizon"]),
                 count(row["origins"]),
                 "" if missing(row["coverage"]) else percent(float(row["coverage"]), 0),
@@ -121,17 +147,35 @@ def scores_table(tested: Any, *, quantity: str = ALL_LIVE) -> Table:
     )
 
 
-def validated_sentence(tested: Any, model: str, *, kind: str = "period") -> str:
-    """ "Validated to 6 months." or why not.
+def validated_sentence(
+    tested: Any, model: str, *, kind: str = "month", quantity: str = ALL_LIVE, short: bool = False
+) -> str:
+    """ "Validated to 6 months ...", or to no distance and why; `short`: its first words alone."""
+    reached, reason = tested.validated_to(model, quantity)
+    distance = f"{reached} {unit(kind, reached)}" if reached else "no distance"
+    if short:
+        return f"validated to {distance}"
+    why = _objection(tested, model, quantity, reached + 1, reason)
+    what = "live customers" if quantity == ALL_LIVE else f"customers in {name(quantity)}"
+    if not reached:
+        return f"Validated to {distance}: past forecasts of {what} do not vouch for this one; {why}."
+    text = (
+        f"Validated to {distance}: so far ahead, past forecasts of {what} made in this way held their bands as meant "
+        "and beat the last mix carried forward"
+    )
+    return f"{text}. Beyond, {why}." if why else f"{text}, as far as it was tried."
 
-    kind : the word for a period
-    """
-    reached, reason = tested.validated_to(model)
-    why = OBJECTIONS.get(reason, reason)
-    if reached == 0:
-        return f"The past does not vouch for this forecast at any distance: {why}."
-    words = f"The past vouches for this forecast up to {reached} {kind}{'' if reached == 1 else 's'} ahead"
-    return f"{words}; beyond, {why}." if why else f"{words}, as far as it was tried."
+
+def _objection(tested: Any, model: str, quantity: str, horizon: int, reason: str) -> str:
+    """What stands against the next distance, with its figures."""
+    rows = tested.scores
+    rows = rows[(rows["model"] == model) & (rows["quantity"] == quantity) & (rows["horizon"] == horizon)]
+    words = OBJECTIONS.get(reason, reason)
+    if reason != "coverage" or rows.empty:
+        return words
+    row = rows.iloc[0]
+    held = round(float(row["coverage"]) * int(row["origins"]))
+    return f"{words} ({held} of {int(row['origins'])}, meant: {percent(tested.level, 0)})"
 
 
 def choice_sentence(choice: Any) -> str:

@@ -144,9 +144,9 @@ CAUTIONS = (
     "before passing them on.",
 )
 MONEY_CAUTIONS = (
-    "These are contributions as the study counts them, not revenue, profit or cash; nothing here is an accounting value, "
-    "and fixed costs are in it only where a scenario names them.",
-    "Value goes as far as customers stay, far beyond what past forecasts can vouch for; the discount is the only brake. "
+    "These are contributions as the study counts them, not revenue, profit or cash, and no values for accounts; "
+    "fixed costs are in it only where a scenario names them.",
+    "Value goes as far as customers stay, far beyond what past forecasts can vouch for; only the discount holds it. "
     "Prefer the contribution up to the horizon for plans.",
 )
 DEFINITIONS: tuple[tuple[str, str, str], ...] = (
@@ -164,19 +164,21 @@ DEFINITIONS: tuple[tuple[str, str, str], ...] = (
     ("All live customers", "Sum of the live states.", "customers in live and entry states, without away and exits"),
     ("Opening to closing", "Opening + joined + returned - lost + moved in - moved out, and what could not be observed, "
      "gives closing, in every period.", "counts of customers"),
-    ("Churn of a quarter", "Share of those who were there, live or away, as the quarter opened; who joins and leaves within "
-     "the quarter is in the numerator too.", "all lost by the exit in the quarter / opening customers, live and away"),
+    ("Churn of a quarter", "Share of those who were there, live or away, as the quarter opened; who joins and leaves "
+     "within the quarter is in the numerator too.",
+     "all lost by the exit in the quarter / opening customers, live and away"),
     ("Contribution over the horizon", "What today's base and all who join bring up to the horizon, discounted.",
-     "sum over periods of b^(p - 1 + lag) x (customers x contribution a period + amounts on moves), b = (1 + rate)^(-1 / "
-     "periods a year)"),
+     "sum over periods p of b^(p - 1 + lag) x (customers x contribution a period + amounts on moves), "
+     "b = (1 + rate)^(-1 / periods a year)"),
     ("Value of a customer", "Discounted contribution from now until leaving, expected for a customer in a state.",
      "V = r + b P V, r = contribution of a period, b = discount a period, P = rates"),
-    ("Validated to", "The farthest distance up to which, at every distance, there are at least 8 past forecasts, the bands "
-     "held as often as meant (within the interval that their number allows) and did better than the last mix.",
+    ("Validated to", "The farthest distance up to which, at every distance, there are at least 8 past forecasts, the "
+     "bands held as often as meant (within the interval that their number allows) and did better than the last mix.",
      "coverage = bands that held / past forecasts"),
     ("Parts of a band", "Variance from each named part by itself: individual chance, luck shared by everybody, rates, "
      "joiners.", "share = variance of the part / sum over the parts"),
-    ("Lever, one point more", "Change of a figure for one hundredth more of a move's rate, paid for by the rest of its row.",
+    ("Lever, one point more", "Change of a figure for one hundredth more of a move's rate, paid for by the rest of its "
+     "row.",
      "0.01 x d figure / d rate"),
     ("Settled base", "Base at which joining and leaving balance.",
      "joiners a period x expected periods spent in each state before leaving"),
@@ -201,14 +203,14 @@ SOURCES: tuple[tuple[str, str], ...] = (
     ("Mix of those remaining", "Darroch, J. N. & Seneta, E. (1965), Journal of Applied Probability 2, 88-100."),
     ("Bases with joiners", "Bartholomew, D. J. (1982), Stochastic Models for Social Processes, 3rd edition; Pollard, "
      "J. H. (1966), Biometrika 53, 397-415."),
-    ("Value of a customer", "Howard, R. A. (1960), Dynamic Programming and Markov Processes; Pfeifer, P. E. & Carraway, "
-     "R. L. (2000), Journal of Interactive Marketing 14(2), 43-55; spread: Sobel, M. J. (1982), Journal of Applied "
-     "Probability 19, 794-802."),
+    ("Value of a customer", "Howard, R. A. (1960), Dynamic Programming and Markov Processes; Pfeifer, P. E. & "
+     "Carraway, R. L. (2000), Journal of Interactive Marketing 14(2), 43-55; spread: Sobel, M. J. (1982), Journal of "
+     "Applied Probability 19, 794-802."),
     ("Tests of the assumptions", "Anderson & Goodman (1957), above; Kullback, S., Kupperman, M. & Ku, H. H. (1962), "
      "Technometrics 4, 573-608."),
-    ("Scores of past forecasts", "Gneiting, T. & Raftery, A. E. (2007), Journal of the American Statistical Association "
-     "102, 359-378; comparison of models: Diebold, F. X. & Mariano, R. S. (1995), Journal of Business & Economic "
-     "Statistics 13, 253-263."),
+    ("Scores of past forecasts", "Gneiting, T. & Raftery, A. E. (2007), Journal of the American Statistical "
+     "Association 102, 359-378; comparison of models: Diebold, F. X. & Mariano, R. S. (1995), Journal of Business & "
+     "Economic Statistics 13, 253-263."),
     ("Errors by customer and period together", "Cameron, A. C., Gelbach, J. B. & Miller, D. L. (2011), Journal of "
      "Business & Economic Statistics 29, 238-249."),
     ("Observed retention", "Kaplan, E. L. & Meier, P. (1958), Journal of the American Statistical Association 53, "
@@ -285,8 +287,8 @@ NOTES: Mapping[str, str] = MappingProxyType(
         "no_exit_no_discount": "The value of a customer in {state} has no bound: some never leave and nothing is "
                                "discounted.",
         "settled": "Where a scenario leads in the long run is not known: {state}.",
-        "change_cut_short_in_draws": "In a share {state} of the draws a scenario asked for more than its row has and was "
-                                     "cut short.",
+        "change_cut_short_in_draws": "In a share {state} of the draws a scenario asked for more than its row has and "
+                                     "was cut short.",
         "joined_without_join_event": "{customers} customers appear without an event that marks joining; their history "
                                      "before is not known.",
     }

@@ -122,14 +122,14 @@ def main() -> None:
     parser.add_argument("--calendar", default="step", choices=["step", "quarter", "month"])
     parser.add_argument("--workers", type=int, default=2)
     asked = parser.parse_args()
-    jobs = [
-        (world, n, seed, asked.draws, asked.calendar)
-        for world in asked.worlds
-        for n in asked.customers
-        for seed in range(asked.replications)
-    ]
+    parts = []
+    for world in asked.worlds:
+        for n in asked.customers:
+            jobs = [(world, n, seed, asked.draws, asked.calendar) for seed in range(asked.replications)]
+            parts.append(study(jobs, asked.workers))
+            print(parts[-1].round(3).to_csv(header=len(parts) == 1), end="", flush=True)
     with pd.option_context("display.width", 200, "display.max_columns", 30):
-        print(study(jobs, asked.workers).T.round(3).to_string())
+        print(pd.concat(parts).T.round(3).to_string())
 
 
 if __name__ == "__main__":

@@ -17,6 +17,7 @@ from cohortflow.report.chart.style import (
     FUTURE,
     INK,
     MARGIN,
+    MODEL,
     SMALL,
     SOFT,
     WIDE,
@@ -33,19 +34,21 @@ from cohortflow.states import ALL_LIVE, States
 
 PANEL_HIGH, FIRST_HIGH, PANEL_WIDE = 1.15, 1.75, 2.75
 LABEL_WIDE, HEAD_HIGH, FOOT_HIGH = 0.62, 0.36, 0.34
+PALE = 0.45
 UNSEEN = 0.1  # share of the base that turned up only in a period: what came before was not whole
 COLUMNS = ["period", "periods_ahead", "state", "customers", "low", "high"]
 
 
 @dataclass(frozen=True)
 class Path:
-    """Past and projected values of one quantity; `label` as printed."""
+    """Past and projected values of one quantity; `label` as printed; `borne`: periods ahead vouched for."""
 
     label: str
     past: np.ndarray
     ahead: np.ndarray
     low: np.ndarray
     high: np.ndarray
+    borne: int | None = None
 
 
 def base_chart(
@@ -55,6 +58,8 @@ def base_chart(
     totals: Mapping[str, Sequence[str]] | None = None,
     names: Sequence[str] | None = None,
     states: States | None = None,
+    borne: Mapping[str, int] | None = None,
+    plain: Sequence[float] | None = None,
     kind: str = "month",
     segment: str = ALL,
     width: float = WIDE,
@@ -65,21 +70,27 @@ def base_chart(
     projection : Projection or its frame;  rollforward : frame whose `closing` lines of kind actual are the past
     totals : named sums of states;  names : which quantities to draw (default: all_live, totals, states)
     states : to leave the exits out when there is no past
+    borne : quantity -> periods ahead that past forecasts vouch for; beyond, its band is drawn pale
+    plain : what the plain chain expects of the first quantity, from the base period on, drawn beside it
     """
     rows = frame_of(projection, COLUMNS, segment=segment)
     past = _past(rollforward, segment, totals or {})
     known = states or getattr(getattr(projection, "schedule", None), "states", None)
     wanted = list(names) if names else _order(rows, totals or {}, known.exits if known else ())
-    paths = [_path(rows, past, name) for name in wanted]
+    paths = [_path(rows, past, name, (borne or {}).get(name)) for name in wanted]
     periods = [*(past.index if past is not None else []), *_ahead_labels(rows)]
-    title, subtitle = _title(paths[0], rows, kind), _subtitle(rows)
+    title, subtitle = _title(paths[0], rows, kind), _subtitle(rows, paths, plain is not None)
     columns = max(1, min(3, int((width - 2 * MARGIN) // PANEL_WIDE), max(len(paths) - 1, 1)))
     lines = -(-(len(paths) - 1) // columns)
     body = FIRST_HIGH + HEAD_HIGH + FOOT_HIGH + lines * (PANEL_HIGH + HEAD_HIGH + FOOT_HIGH)
     with house_style():
         figure = drawing(title, subtitle, width=width, body=body, alt=_alt(title, paths, periods))
         inner = width - 2 * MARGIN
-        _panel(figure, paths[0], periods, MARGIN, 0.0, inner, FIRST_HIGH, ticks=int(inner / 0.95))
+        first = _panel(figure, paths[0], periods, MARGIN, 0.0, inner, FIRST_HIGH, ticks=int(inner / 0.95))
+        _vouched(first, paths[0], kind)
+        if plain is not None:
+            x = len(paths[0].past) - 1 + np.arange(len(plain))
+            first.plot(x, plain, color=MODEL, linestyle=(0, (1, 1.2)), linewidth=1.8)
         step = inner / columns
         for k, path in enumerate(paths[1:]):
             top = FIRST_HIGH + HEAD_HIGH + FOOT_HIGH + (k // columns) * (PANEL_HIGH + HEAD_HIGH + FOOT_HIGH)
@@ -125,11 +136,11 @@ def _order(rows: pd.DataFrame, totals: Mapping[str, Sequence[str]], exits: Seque
     return lead + [s for s in have if s not in lead]
 
 
-def _path(rows: pd.DataFrame, past: pd.DataFrame | None, name: str) -> Path:
+def _path(rows: pd.DataFrame, past: pd.DataFrame | None, name: str, borne: int | None) -> Path:
     own = rows[rows["state"] == name].sort_values("periods_ahead")
     ahead, low, high = (own[c].to_numpy(dtype=float) for c in ("customers", "low", "high"))
     before = past[name].to_numpy(dtype=float) if past is not None and name in past else ahead[:1]
-    return Path("all live customers" if name == ALL_LIVE else label(name), before, ahead, low, high)
+    return Path("all live customers" if name == ALL_LIVE else label(name), before, ahead, low, high, borne)
 
 
 def _panel(
@@ -141,11 +152,11 @@ def _panel(
     wide: float,
     high: float,
     ticks: int,
-) -> None:
+) -> Axes:
     axes = panel(figure, left + 0.46, top + HEAD_HIGH, wide - 0.46 - LABEL_WIDE, high)
     now = len(path.past) - 1
     x_ahead = now + np.arange(len(path.ahead))
-    axes.fill_between(x_ahead, path.low, path.high, color=BAND, linewidth=0)
+    _band(axes, path, x_ahead)
     axes.plot(np.arange(len(path.past)), path.past, color=INK)
     axes.plot(x_ahead, path.ahead, color=FUTURE, linestyle=(0, (4, 1.6)))
     axes.plot([now], path.past[-1:], "o", color=INK, markersize=3)
@@ -167,6 +178,25 @@ def _panel(
         weight="bold",
         va="bottom",
     )
+    return axes
+
+
+def _band(axes: Axes, path: Path, x: np.ndarray) -> None:
+    """The band, pale beyond the distance that past forecasts vouch for."""
+    to = len(x) - 1 if path.borne is None else min(path.borne, len(x) - 1)
+    for part, alpha in ((slice(0, to + 1), 1.0), (slice(to, None), PALE)):
+        axes.fill_between(x[part], path.low[part], path.high[part], color=BAND, linewidth=0, alpha=alpha)
+    if 0 < to < len(x) - 1:
+        axes.plot([x[to]] * 2, [path.low[to], path.high[to]], color=FUTURE, linewidth=1.4)
+
+
+def _vouched(axes: Axes, path: Path, kind: str) -> None:
+    """In words above the first panel: how far past forecasts vouch for it."""
+    if path.borne is None:
+        return
+    far = f"{path.borne} {unit(kind, path.borne)}" if path.borne else "no distance"
+    axes.text(1, 1 + 0.08 / FIRST_HIGH, f"validated to {far}", transform=axes.transAxes, size=SMALL, ha="right",
+              va="bottom", color=FUTURE)  # fmt: skip
 
 
 def _few_ticks() -> Any:
@@ -216,12 +246,15 @@ def _subject(label: str) -> str:
     return "Live customers" if label == "all live customers" else f"Customers in {label}"
 
 
-def _subtitle(rows: pd.DataFrame) -> str:
+def _subtitle(rows: pd.DataFrame, paths: list[Path], plain: bool) -> str:
     levels = list(pd.unique(rows["level"].dropna())) if "level" in rows else []
     band = f"{percent(levels[0], 0)} band" if len(levels) == 1 else "band"
+    beyond = any(p.borne is not None and p.borne < len(p.ahead) - 1 for p in paths)
+    pale = "Pale band: farther ahead than past forecasts vouch for. " if beyond else ""
+    other = "Dots: what the plain chain expects. " if plain else ""
     return (
         f"Customers at the end of each period. Solid: counted. Dashed: projected, with its {band}. Dotted upright: the "
-        "last counted period. Each panel has its own scale, from zero."
+        f"last counted period. {pale}{other}Each panel has its own scale, from zero."
     )
 
 
