@@ -29,7 +29,7 @@ def test_the_section_states_terms_and_cautions():
 def test_low_base_and_high_side_by_side():
     table = cases_table(replace(FACTS, cases=CASES), {"scenarios": made.scenarios(made.VEG_BOX)})
     low, high = made.VEG_BOX.remaining[1], made.VEG_BOX.remaining[0]
-    assert table.heads == ("", f"low: {low}", "base", f"high: {high}")
+    assert table.heads == ("figure", f"low: {low}", "base", f"high: {high}")
     # fixture: by 2026-12 the first scenario is 10 up, the second 20 down on 4,000
     assert table.rows[0] == ("all live customers, end of 2026-12", "3,980", "4,000", "4,010")
     assert table.rows[2] == ("contribution less cost, up to the horizon", "£518,100", "£510,000", "£509,100")

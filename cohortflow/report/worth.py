@@ -82,7 +82,7 @@ def cases_table(facts: Facts, tables: Tables) -> Table | None:
             figures = {c: cell["with_change"] if cell else None for c, cell in cells.items()}
             figures["base"] = known[0]["base"]
             out.append((words, *(_said(figures[case], form) for case in _columns(shown))))
-    heads = ("", *(case if case == "base" else f"{case}: {clean(named[case])}" for case in _columns(shown)))
+    heads = ("figure", *(case if case == "base" else f"{case}: {clean(named[case])}" for case in _columns(shown)))
     return Table(
         "Base, low and high", heads, tuple(out), texts=(0,),
         note=f"Low and high are scenarios: what follows if what they assume happens. They are not limits of chance; "
