@@ -178,8 +178,8 @@ def _what(quantity: str) -> str:
 def _title(errors: pd.DataFrame, seen: pd.DataFrame, model: str, level: float, kind: str) -> str:
     last, ends = _ends(errors)
     others = {n: v for n, v in ends.items() if n not in (model, "plain")}
-    head = f"{last} {unit(kind, last)} ahead, past forecasts with the model {label(model)} missed by "
-    head += f"{count(ends[model])} on average"
+    missed = f"missed by {count(ends[model])} on average" if model in ends else "could not be scored"
+    head = f"{last} {unit(kind, last)} ahead, past forecasts with the model {label(model)} {missed}"
     if others:
         best = min(others, key=lambda n: others[n])
         head += f", the best simple rival ({forecaster(best)}) by {count(others[best])}"
